@@ -1,0 +1,1 @@
+"""Compiled loops: arrays in, results filled into arrays given; no checks, no files, no settings."""

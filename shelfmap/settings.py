@@ -1,0 +1,339 @@
+"""Frozen settings of a run, one class per stage, read from TOML with every key checked.
+
+The names here are the interface: ``Settings.model_json_schema()`` is the schema editors use, and README's table
+of settings is made from it. Lengths that end in ``_km`` and periods that end in ``_h`` are turned into SI by the
+stages, through the ``_m`` properties here.
+"""
+
+import difflib
+import tomllib
+from pathlib import Path
+from typing import Annotated, Any, Literal, Self, TypeVar
+
+from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, ValidationError, model_validator
+
+from shelfmap.constants import CONSTITUENTS
+from shelfmap.errors import SettingsError
+
+__all__ = [
+    "CoastSettings",
+    "DepthErrorSettings",
+    "GridSettings",
+    "OutputSettings",
+    "ResponseSettings",
+    "Settings",
+    "ShelfBreakSettings",
+    "TransectSettings",
+]
+
+
+def _constituent_name(value: object) -> object:
+    """Give the usual spelling of a constituent, or the nearest name there is."""
+    if not isinstance(value, str):
+        return value
+    usual = {name.lower(): name for name in CONSTITUENTS}
+    if value.lower() not in usual:
+        near = difflib.get_close_matches(value.lower(), usual, n=1, cutoff=0.0)
+        raise ValueError(
+            f"constituent {value!r} is unknown; did you mean {usual[near[0]]!r}? Known: {', '.join(CONSTITUENTS)}"
+        )
+    return usual[value.lower()]
+
+
+def _as_path(value: object) -> object:
+    if value == "":
+        raise ValueError("path is empty")
+    return value
+
+
+_S = TypeVar("_S", bound=BaseModel)
+ConstituentName = Annotated[str, BeforeValidator(_constituent_name)]
+FilePath = Annotated[Path, BeforeValidator(_as_path)]
+
+
+class _Stage(BaseModel):
+    """Settings of one stage: frozen, no unknown keys, no infinite numbers."""
+
+    model_config = ConfigDict(extra="forbid", frozen=True, allow_inf_nan=False)
+
+
+class GridSettings(_Stage):
+    """Where the depths come from and how to read them."""
+
+    path: FilePath = Field(description="Bathymetry raster, anything GDAL reads; relative to the settings file.")
+    positive: Literal["auto", "up", "down"] = Field(
+        "auto",
+        description="Whether values are elevations (up) or depths (down); auto decides from the file, says why.",
+    )
+    crs: str | None = Field(
+        None, description="Coordinate system, EPSG:n or WKT, only where the file lacks one or has it wrong."
+    )
+    band: int = Field(1, ge=1, description="Band of the raster.")
+    variable: str | None = Field(None, description="Variable of a netCDF file that holds several.")
+    level_shift_m: float = Field(
+        0.0,
+        ge=-500,
+        le=500,
+        description="How far the water stands above the grid's zero (datum or sea-level change), m.",
+    )
+    nodata: float | None = Field(None, description="Value that means missing, only where the file does not say.")
+    void_is_land: bool = Field(False, description="Take missing cells as land: for grids that hold depths only.")
+
+
+class CoastSettings(_Stage):
+    """How the shoreline becomes the coast that stations stand on."""
+
+    level_m: float = Field(0.0, ge=-500, le=500, description="Elevation of the shoreline above the water level, m.")
+    generalise_km: float = Field(
+        20.0, gt=0, le=500, description="Inlets narrower than this are bridged for the normals, km."
+    )
+    smallest_island_km2: float = Field(500.0, ge=0, description="Islands below this area get no stations, km2.")
+    smallest_sea_km2: float = Field(
+        2000.0, ge=0, description="Water that reaches the grid's edge is sea from this area on, km2."
+    )
+    smallest_enclosed_sea_km2: float = Field(
+        100_000.0,
+        ge=0,
+        description="Water that does not reach the grid's edge is sea from this area on, km2.",
+    )
+    file: FilePath | None = Field(
+        None, description="Vector file: polygons are land, lines are the coast to put stations on."
+    )
+    layer: str | None = Field(None, description="Layer of that file, where it holds several.")
+    box: tuple[float, float, float, float] | None = Field(
+        None, description="Part of the grid to put stations on: west, south, east, north, degrees."
+    )
+
+    @property
+    def generalise_m(self) -> float:
+        """`generalise_km` in metres."""
+        return self.generalise_km * 1e3
+
+    @model_validator(mode="after")
+    def _box_in_order(self) -> Self:
+        if self.box is not None:
+            west, south, east, north = self.box
+            if not -90 <= south < north <= 90:
+                raise ValueError(f"box = {list(self.box)}: south must be below north, both within -90 and 90")
+            if not (-360 <= west <= 360 and -360 <= east <= 360) or west == east:
+                raise ValueError(f"box = {list(self.box)}: west and east must differ and lie within -360 and 360")
+        return self
+
+
+class TransectSettings(_Stage):
+    """Where stations stand and how far their transects reach."""
+
+    spacing_km: float = Field(10.0, gt=0, le=1000, description="Distance between stations along the coast, km.")
+    length_km: float = Field(600.0, gt=0, le=3000, description="How far seaward the shelf break is searched, km.")
+    step_km: float | None = Field(
+        None, gt=0, le=100, description="Sample spacing along a transect, km; default the grid's own step."
+    )
+    file: FilePath | None = Field(None, description="Vector file of transects drawn or edited by hand.")
+    layer: str | None = Field(None, description="Layer of that file, where it holds several.")
+
+    @property
+    def spacing_m(self) -> float:
+        """`spacing_km` in metres."""
+        return self.spacing_km * 1e3
+
+    @property
+    def length_m(self) -> float:
+        """`length_km` in metres."""
+        return self.length_km * 1e3
+
+    @model_validator(mode="after")
+    def _step_fits(self) -> Self:
+        if self.step_km is not None and self.step_km * 5 > self.length_km:
+            raise ValueError(f"step_km = {self.step_km}: at most a fifth of length_km = {self.length_km}")
+        return self
+
+
+class ShelfBreakSettings(_Stage):
+    """When a steepening counts as the shelf break."""
+
+    slope: float = Field(
+        0.01, gt=0, lt=1, description="Gradient at which the continental slope begins (rise over run)."
+    )
+    confirm_slope: float = Field(0.025, gt=0, lt=1, description="Gradient it must reach further on to count.")
+    smoothing_km: float = Field(5.0, gt=0, le=200, description="Length over which gradients are taken, km.")
+    sustain_km: float = Field(
+        5.0, gt=0, le=200, description="Length over which the gradient must stay above `slope`, km."
+    )
+    shallowest_m: float = Field(20.0, ge=0, description="Least depth of a shelf break, m.")
+    deepest_m: float = Field(550.0, gt=0, description="Greatest depth of a shelf break, m.")
+    least_contrast: float = Field(
+        2.0, ge=1, description="Least ratio of the gradient beyond the break to that before it."
+    )
+    ocean_m: float = Field(1000.0, gt=0, description="A transect that gets this deep has reached the open ocean, m.")
+    file: FilePath | None = Field(None, description="Vector file of breaks picked by hand: points with transect_id.")
+    layer: str | None = Field(None, description="Layer of that file, where it holds several.")
+
+    @property
+    def smoothing_m(self) -> float:
+        """`smoothing_km` in metres."""
+        return self.smoothing_km * 1e3
+
+    @property
+    def sustain_m(self) -> float:
+        """`sustain_km` in metres."""
+        return self.sustain_km * 1e3
+
+    @model_validator(mode="after")
+    def _in_order(self) -> Self:
+        if not self.shallowest_m < self.deepest_m <= self.ocean_m:
+            raise ValueError(
+                f"shallowest_m = {self.shallowest_m}, deepest_m = {self.deepest_m}, ocean_m = {self.ocean_m}: "
+                "must rise in this order"
+            )
+        return self
+
+
+class ResponseSettings(_Stage):
+    """Which waves, and the physics of the response."""
+
+    constituents: tuple[ConstituentName, ...] = Field(
+        ("M2", "S2", "N2", "K1", "O1"), description="Tidal constituents, by their usual names."
+    )
+    periods_h: tuple[Annotated[float, Field(ge=0.02, le=1000)], ...] = Field(
+        (), description="Further periods, h: seiches, meteotsunamis and tsunamis are just periods."
+    )
+    rotation: bool = Field(True, description="Whether the Earth turns.")
+    friction_m_s: float = Field(1.0e-3, ge=0, le=0.1, description="Linear bottom friction, m/s.")
+    drag: float | None = Field(
+        None,
+        gt=0,
+        le=0.1,
+        description="Quadratic drag coefficient, used instead of friction_m_s where an amplitude is given.",
+    )
+    offshore_amplitude_m: dict[ConstituentName, Annotated[float, Field(gt=0, le=20)]] = Field(
+        default_factory=dict, description="Amplitude at the deep sea by constituent, m, for the drag."
+    )
+    deep_m: Annotated[float, Field(ge=500, le=11_000)] | Literal["deepest"] = Field(
+        4000.0,
+        description="Depth of the deep sea beyond the transect, m; or deepest: the greatest depth on it.",
+    )
+
+    @model_validator(mode="after")
+    def _consistent(self) -> Self:
+        if not self.constituents and not self.periods_h:
+            raise ValueError("constituents and periods_h are both empty: name at least one wave")
+        for name, values in (("constituents", self.constituents), ("periods_h", self.periods_h)):
+            if len(set(values)) != len(values):
+                raise ValueError(f"{name} = {list(values)}: the same one stands twice")
+        if (self.drag is None) != (not self.offshore_amplitude_m):
+            raise ValueError("drag and offshore_amplitude_m belong together: give both or none")
+        strangers = set(self.offshore_amplitude_m) - set(self.constituents)
+        if strangers:
+            raise ValueError(f"offshore_amplitude_m names {sorted(strangers)}, not among constituents")
+        return self
+
+
+class DepthErrorSettings(_Stage):
+    """How wrong the grid's depths may be: sd = sqrt(fixed_m^2 + (per_depth * depth)^2)."""
+
+    fixed_m: float = Field(
+        0.5, ge=0, le=1000, description="Part of the depth error that is the same at all depths, one sd, m."
+    )
+    per_depth: float = Field(0.012, ge=0, le=1, description="Part that grows with depth, one sd as a share of it.")
+    correlation_km: float = Field(20.0, gt=0, le=2000, description="Distance over which depth errors go together, km.")
+
+
+class OutputSettings(_Stage):
+    """What is written, and where."""
+
+    path: FilePath = Field(Path("coast.gpkg"), description="GeoPackage to write; relative to the settings file.")
+    crs: str = Field("EPSG:4326", description="Coordinate system of the layers, EPSG:n.")
+    profiles: bool = Field(True, description="Whether the table of depth profiles is written.")
+    response_curves: bool = Field(True, description="Whether gain against period is written for each transect.")
+
+
+class Settings(_Stage):
+    """All settings of a run."""
+
+    title: str = Field("", description="A name for the run.")
+    grid: GridSettings
+    coast: CoastSettings = CoastSettings()
+    transects: TransectSettings = TransectSettings()
+    shelf_break: ShelfBreakSettings = ShelfBreakSettings()
+    response: ResponseSettings = ResponseSettings()
+    depth_error: DepthErrorSettings = DepthErrorSettings()
+    output: OutputSettings = OutputSettings()
+
+    @classmethod
+    def from_toml(cls, path: str | Path) -> Self:
+        """Read settings from a TOML file; paths in it are taken from the file's own folder.
+
+        Raises
+        ------
+        SettingsError
+            If the file cannot be read, is no TOML, or any key or value is not allowed; all faults are named.
+        """
+        path = Path(path)
+        try:
+            content = tomllib.loads(path.read_text(encoding="utf-8"))
+        except OSError as error:
+            raise SettingsError(f"settings file {path} cannot be read: {error.strerror}") from error
+        except UnicodeDecodeError as error:
+            raise SettingsError(f"settings file {path} is no text in UTF-8; save it as UTF-8") from error
+        except tomllib.TOMLDecodeError as error:
+            raise SettingsError(f"settings file {path} is no valid TOML: {error}") from error
+        return cls.from_dict(content, folder=path.resolve().parent, where=str(path))
+
+    @classmethod
+    def from_dict(cls, content: dict[str, Any], *, folder: str | Path = ".", where: str = "settings") -> Self:
+        """Check settings given as nested dictionaries; relative paths are taken from `folder`.
+
+        Raises
+        ------
+        SettingsError
+            If any key or value is not allowed; every fault is named, with the nearest right name.
+
+        Examples
+        --------
+        >>> settings = Settings.from_dict({"grid": {"path": "dem.tif"}}, folder="/data")
+        >>> settings.grid.path.as_posix(), settings.transects.spacing_km
+        ('/data/dem.tif', 10.0)
+        """
+        try:
+            return _rooted(cls.model_validate(content), Path(folder))
+        except ValidationError as error:
+            faults = "\n".join(f"  {_fault(cls, dict(fault))}" for fault in error.errors())
+            raise SettingsError(f"{where}: {error.error_count()} setting(s) to mend\n{faults}") from error
+
+
+def _rooted(settings: _S, folder: Path) -> _S:
+    """Return the same settings with every relative path standing in `folder`."""
+    update: dict[str, object] = {}
+    for name in type(settings).model_fields:
+        value = getattr(settings, name)
+        if isinstance(value, BaseModel):
+            update[name] = _rooted(value, folder)
+        elif isinstance(value, Path):
+            update[name] = folder / value
+    return settings.model_copy(update=update)
+
+
+def _fault(model: type[BaseModel], fault: dict[str, Any]) -> str:
+    """Say one fault as a person would: where, what is wrong with its value, what is allowed."""
+    where = ".".join(str(part) for part in fault["loc"])
+    if fault["type"] == "extra_forbidden":
+        known = sorted(_known_names(model, fault["loc"][:-1]))
+        near = difflib.get_close_matches(str(fault["loc"][-1]), known, n=1, cutoff=0.5)
+        hint = f"did you mean {near[0]!r}?" if near else f"known here: {', '.join(known)}"
+        return f"{where}: no such setting; {hint}"
+    if fault["type"] == "missing":
+        return f"{where}: must be given"
+    message = str(fault["msg"]).removeprefix("Value error, ")
+    value = "" if fault["type"] == "value_error" else f" = {fault['input']!r}"
+    return f"{where}{value}: {message[:1].lower() + message[1:]}"
+
+
+def _known_names(model: type[BaseModel], loc: tuple[int | str, ...]) -> set[str]:
+    """Names of the settings at one place of the tree."""
+    for part in loc:
+        field = model.model_fields.get(str(part))
+        inner = None if field is None else field.annotation
+        if not (isinstance(inner, type) and issubclass(inner, BaseModel)):
+            return set()
+        model = inner
+    return set(model.model_fields)
