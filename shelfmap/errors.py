@@ -4,6 +4,7 @@ __all__ = [
     "CoastError",
     "GridError",
     "LayerError",
+    "LayerExistsError",
     "ResponseError",
     "SettingsError",
     "ShelfmapError",
@@ -38,6 +39,10 @@ class ResponseError(ShelfmapError, ValueError):
 
 class LayerError(ShelfmapError, OSError):
     """A layer file cannot be written, read or replaced."""
+
+
+class LayerExistsError(LayerError, FileExistsError):
+    """A layer file is there already and may not be overwritten."""
 
 
 class ShelfmapWarning(UserWarning):

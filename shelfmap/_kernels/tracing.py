@@ -1,0 +1,258 @@
+"""Compiled loops of the profiles: find the shore on a transect, sample seaward, mend spikes and short gaps."""
+
+import numpy as np
+from numba import njit
+from numpy.typing import NDArray
+
+from shelfmap._kernels.sampling import bilinear_cell, locate
+
+F64 = NDArray[np.float64]
+F32 = NDArray[np.float32]
+I64 = NDArray[np.int64]
+U8 = NDArray[np.uint8]
+
+#: Why a profile ends. The order is that of `shelfmap.profiles.END_REASONS`.
+LENGTH, GRID_EDGE, LAND, VOID = 0, 1, 2, 3
+#: How a profile starts: at a shoreline, in open water, or not at all.
+AT_SHORE, IN_WATER, NO_WATER, START_OUTSIDE, START_VOID = 0, 1, 2, 3, 4
+
+_OUTSIDE = -1.0e30
+
+
+@njit(cache=True)
+def _depth_at(depth: F32, row0: int, col0: int, node_m: F64, node_row: F64, node_col: F64, at_m: float) -> float:
+    """Depth on a transect at a distance from its station; NaN in a void, `_OUTSIDE` beyond grid or transect."""
+    n = node_m.shape[0]
+    if at_m < node_m[0] or at_m > node_m[n - 1]:
+        return _OUTSIDE
+    low, high = 0, n - 1
+    while high - low > 1:
+        middle = (low + high) // 2
+        if node_m[middle] <= at_m:
+            low = middle
+        else:
+            high = middle
+    part = (at_m - node_m[low]) / (node_m[high] - node_m[low])
+    n_rows, n_cols = depth.shape
+    i, up = locate(node_row[low] + part * (node_row[high] - node_row[low]), row0, n_rows, 0)
+    j, right = locate(node_col[low] + part * (node_col[high] - node_col[low]), col0, n_cols, 0)
+    if i < 0 or j < 0:
+        return _OUTSIDE
+    return float(bilinear_cell(depth, i, j, min(i + 1, n_rows - 1), min(j + 1, n_cols - 1), up, right))
+
+
+@njit(cache=True)
+def _bisect(
+    depth: F32,
+    row0: int,
+    col0: int,
+    node_m: F64,
+    node_row: F64,
+    node_col: F64,
+    dry_m: float,
+    wet_m: float,
+    hair_m: float,
+) -> float:
+    """Where the water begins between a dry and a wet place, to a hundredth of a millimetre."""
+    for _ in range(60):
+        middle = 0.5 * (dry_m + wet_m)
+        d = _depth_at(depth, row0, col0, node_m, node_row, node_col, middle)
+        if d > hair_m:
+            wet_m = middle
+        else:
+            dry_m = middle
+        if abs(wet_m - dry_m) < 1e-5:
+            break
+    return wet_m
+
+
+@njit(cache=True)
+def find_shore(
+    depth: F32,
+    row0: int,
+    col0: int,
+    node_m: F64,
+    node_row: F64,
+    node_col: F64,
+    seek_m: float,
+    look_m: float,
+    hair_m: float,
+) -> tuple[float, int]:
+    """Where on a transect its water begins (distance from the station), and how it starts.
+
+    From a station in the water the shore is sought landward as far as the transect reaches; from one on land, seaward
+    within `seek_m`, and a pool shorter than two looks of `look_m` does not count where more water follows.
+    """
+    here = _depth_at(depth, row0, col0, node_m, node_row, node_col, 0.0)
+    if here == _OUTSIDE:
+        return 0.0, START_OUTSIDE
+    if np.isnan(here):
+        return 0.0, START_VOID
+    if here > hair_m:
+        at_m = -look_m
+        while at_m >= node_m[0]:
+            d = _depth_at(depth, row0, col0, node_m, node_row, node_col, at_m)
+            if d == _OUTSIDE or np.isnan(d):
+                break
+            if d <= hair_m:
+                return _bisect(depth, row0, col0, node_m, node_row, node_col, at_m, at_m + look_m, hair_m), AT_SHORE
+            at_m -= look_m
+        return 0.0, IN_WATER
+    found_m, wet_run, any_water = 0.0, 0, False
+    at_m = look_m
+    while at_m <= seek_m and wet_run < 4:
+        d = _depth_at(depth, row0, col0, node_m, node_row, node_col, at_m)
+        if d == _OUTSIDE:
+            break
+        if d > hair_m:
+            if wet_run == 0:
+                found_m = at_m
+            wet_run += 1
+            any_water = True
+        else:
+            wet_run = 0
+        at_m += look_m
+    if not any_water:
+        return 0.0, NO_WATER
+    return _bisect(depth, row0, col0, node_m, node_row, node_col, found_m - look_m, found_m, hair_m), AT_SHORE
+
+
+@njit(cache=True)
+def sample_seaward(
+    depth: F32,
+    row0: int,
+    col0: int,
+    node_m: F64,
+    node_row: F64,
+    node_col: F64,
+    shore_m: float,
+    at_shore: bool,
+    step_m: float,
+    out: F64,
+) -> tuple[int, int]:
+    """Depths every `step_m` from the shore; how many lie on the transect and in the grid, and why they stop."""
+    last_m = node_m[node_m.shape[0] - 1]
+    for j in range(out.shape[0]):
+        at_m = shore_m + j * step_m
+        if at_m > last_m:
+            return j, LENGTH
+        d = _depth_at(depth, row0, col0, node_m, node_row, node_col, at_m)
+        if d == _OUTSIDE:
+            return j, GRID_EDGE
+        out[j] = d
+        if j == 0 and at_shore:
+            out[0] = 0.0
+    return out.shape[0], LENGTH
+
+
+@njit(cache=True)
+def despike(row: F64, n: int, least_m: float, work: F64) -> int:
+    """Replace single deep or shallow samples by the running median of five; return how many.
+
+    A sample counts where it is more than twice, or less than half, the median of itself and its two neighbours on
+    each side, and differs from it by more than `least_m`. A slope, however steep, is its own median and stays.
+    """
+    count = 0
+    work[:n] = row[:n]
+    five = np.empty(5)
+    for j in range(2, n - 2):
+        five[:] = work[j - 2 : j + 3]
+        if np.isnan(five).any() or (five <= 0.0).any():
+            continue
+        median = np.sort(five)[2]
+        if abs(work[j] - median) > least_m and not 0.5 * median <= work[j] <= 2.0 * median:
+            row[j] = median
+            count += 1
+    return count
+
+
+@njit(cache=True)
+def mend_gaps(
+    row: F64, n: int, step_m: float, short: int, share: float, hair_m: float, filled: U8
+) -> tuple[int, int, float, int, int]:
+    """Bridge short runs of land and fill short voids; stop at the first longer one.
+
+    Land of at most `short` samples, and missing depth of at most `short` samples or of at most `share` of the
+    profile's travel time, are replaced by straight lines between the water on both sides and marked in `filled`.
+    Returns the samples kept, the reason they end (-1: the whole profile is kept), the middle of the land it ends at
+    (metres from the shore), and how many samples were bridged and filled.
+    """
+    bridged, voids, tau = 0, 0, 0.0
+    whole_tau = 0.0
+    for j in range(1, n):
+        if row[j] > hair_m:
+            whole_tau += step_m / np.sqrt(9.81 * row[j])
+    j = 1
+    while j < n:
+        if row[j] > hair_m:
+            tau += step_m / np.sqrt(9.81 * row[j])
+            j += 1
+            continue
+        stop, has_land = j, False
+        while stop < n and not row[stop] > hair_m:
+            has_land = has_land or row[stop] <= hair_m
+            stop += 1
+        run = stop - j
+        fits = stop < n and run <= short
+        if not fits and stop < n and not has_land:
+            mean = 0.5 * (max(row[j - 1], 1.0) + row[stop])
+            fits = run * step_m / np.sqrt(9.81 * mean) <= share * whole_tau
+        if not fits or (j == 1 and row[0] <= hair_m and has_land):
+            return j, (LAND if has_land else VOID), (j + 0.5 * (run - 1)) * step_m, bridged, voids
+        for i in range(j, stop):
+            part = (i - j + 1.0) / (run + 1.0)
+            row[i] = (1.0 - part) * row[j - 1] + part * row[stop]
+            filled[i] = 1
+        if has_land:
+            bridged += run
+        else:
+            voids += run
+        j = stop
+    return n, -1, np.nan, bridged, voids
+
+
+@njit(cache=True)
+def trace_rows(
+    depth: F32,
+    row0: int,
+    col0: int,
+    node_m: F64,
+    node_row: F64,
+    node_col: F64,
+    n_nodes: I64,
+    step_m: float,
+    seek_m: F64,
+    short: int,
+    share: float,
+    least_spike_m: float,
+    hair_m: float,
+    out_depth_m: F64,
+    out_filled: U8,
+    out_shore_m: F64,
+    out_start: I64,
+    out_n: I64,
+    out_end: I64,
+    out_land_m: F64,
+    out_counts: I64,
+) -> None:
+    """Trace every transect of a window; rows are independent of each other.
+
+    `out_counts` holds bridged, filled and despiked samples by row; `out_land_m` the middle of the land a profile ends
+    at, metres from the shore.
+    """
+    work = np.empty(out_depth_m.shape[1])
+    for k in range(node_m.shape[0]):
+        nm, nr, nc = node_m[k, : n_nodes[k]], node_row[k, : n_nodes[k]], node_col[k, : n_nodes[k]]
+        shore_m, start = find_shore(depth, row0, col0, nm, nr, nc, seek_m[k], 0.5 * step_m, hair_m)
+        out_shore_m[k], out_start[k] = shore_m, start
+        if start > IN_WATER:
+            continue
+        row = out_depth_m[k]
+        n, end = sample_seaward(depth, row0, col0, nm, nr, nc, shore_m, start == AT_SHORE, step_m, row)
+        n_kept, reason, land_m, bridged, voids = mend_gaps(row, n, step_m, short, share, hair_m, out_filled[k])
+        if reason >= 0:
+            end = reason
+            row[n_kept:] = np.nan
+        out_counts[k, 2] = despike(row, n_kept, least_spike_m, work)
+        out_n[k], out_end[k], out_land_m[k] = n_kept, end, land_m
+        out_counts[k, 0], out_counts[k, 1] = bridged, voids

@@ -1,0 +1,431 @@
+"""From a bathymetry grid or a vector file to the coast that stations stand on.
+
+The generalised coast is the shoreline after a morphological closing of the land: every inlet narrower than a stated
+width is bridged, everything else stays where it is. It is made tile by tile in a local projection in metres, and the
+pieces are joined at the seams.
+"""
+
+from collections.abc import Iterator, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+import shapely
+from contourpy import FillType, contour_generator
+from numpy.typing import NDArray
+from scipy.spatial import cKDTree
+
+from shelfmap.basins import SHORE_HAIR_M, Basins, Tile, Tiling, label_basins
+from shelfmap.errors import CoastError
+from shelfmap.geodesy import area_m2, distance_bearing, geodesic_nodes, local_projection
+from shelfmap.grid import INSIDE, GridSource
+from shelfmap.settings import CoastSettings
+
+__all__ = ["Coast", "CoastLine", "coast_from_lines", "trace_coast"]
+
+FloatArray = NDArray[np.float64]
+Geometries = NDArray[np.object_]
+
+#: Round joins of the closing use this many segments a quarter circle: chords stay within 0.5 % of the radius.
+QUARTER_SEGMENTS = 8
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class CoastLine:
+    """One connected piece of the generalised coast, sea on the right hand."""
+
+    lon_deg: FloatArray
+    """(k,) longitudes, degrees, without jumps."""
+    lat_deg: FloatArray
+    """(k,) latitudes, degrees."""
+    along_m: FloatArray
+    """(k,) distance along the line from its first point, metres."""
+    is_closed: bool
+    """Whether the last point is the first."""
+
+    @property
+    def length_m(self) -> float:
+        """Length, metres."""
+        return float(self.along_m[-1])
+
+    @classmethod
+    def through(cls, lon_deg: FloatArray, lat_deg: FloatArray) -> "CoastLine":
+        """Line through points, repeated ones dropped."""
+        leg_m, _ = distance_bearing(lon_deg[:-1], lat_deg[:-1], lon_deg[1:], lat_deg[1:])
+        keep = np.concatenate([[True], leg_m > 0])
+        turn = (lon_deg[-1] - lon_deg[0]) / 360.0
+        return cls(
+            lon_deg=lon_deg[keep],
+            lat_deg=lat_deg[keep],
+            along_m=np.concatenate([[0.0], np.cumsum(leg_m[leg_m > 0])]),
+            is_closed=bool(abs(lat_deg[-1] - lat_deg[0]) < 1e-9 and abs(turn - round(turn)) < 1e-11),
+        )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Coast:
+    """The coast of a region: where stations stand, and which land they leave out."""
+
+    lines: tuple[CoastLine, ...]
+    """Connected pieces, longest first, sea on the right hand."""
+    islets: Geometries
+    """Polygons (lon, lat) of land too small to carry stations."""
+    source: str
+    """Where it comes from, one clause for people."""
+
+
+def trace_coast(source: GridSource, settings: CoastSettings, land: Geometries | None = None) -> Coast:
+    """Trace the generalised coast of a grid, or of land polygons on it.
+
+    Parameters
+    ----------
+    source : GridSource
+        The bathymetry; read tile by tile.
+    settings : CoastSettings
+        Level, generalisation, smallest island and sea, box.
+    land : array of shapely polygons, optional
+        Land in longitude and latitude, used instead of the grid's own shoreline.
+
+    Returns
+    -------
+    Coast
+        Lines with the sea on the right, longest first.
+
+    Raises
+    ------
+    CoastError
+        If there is no sea, or no shoreline at that level.
+    """
+    region = region_of(source, settings.box, margin_m=2 * settings.generalise_m)
+    tiling = Tiling.cut(source, region)
+    basins = label_basins(
+        source,
+        tiling,
+        level_m=settings.level_m,
+        smallest_sea_m2=settings.smallest_sea_km2 * 1e6,
+        smallest_enclosed_sea_m2=settings.smallest_enclosed_sea_km2 * 1e6,
+    )
+    if not len(basins.areas_m2):
+        raise CoastError(
+            f"{source.path}: no water body of at least {settings.smallest_sea_km2:g} km2 in this region; "
+            "check the sign (grid.positive), the level (grid.level_shift_m) and coast.smallest_sea_km2"
+        )
+    tracer = _Tracer(source, settings, basins, land)
+    pieces: list[FloatArray] = []
+    islets: list[Geometries] = []
+    n_i, n_j = tiling.shape
+    for i in range(n_i):
+        for j in range(n_j):
+            tile_lines, tile_islets = tracer.trace(tiling.tile(i, j))
+            pieces.extend(tile_lines)
+            islets.append(tile_islets)
+    chains = join_ends(pieces, tolerance=tracer.join_cells, turn=source.n_cols if tiling.closes else None)
+    lines, dropped = _sort_out(source, chains, settings)
+    if not lines:
+        raise CoastError(
+            f"{source.path}: no shoreline at level {settings.level_m:g} m in this region: all of it is "
+            f"{'water' if basins.areas_m2.sum() > 0 else 'land'}, or its islands are below coast.smallest_island_km2 = "
+            f"{settings.smallest_island_km2:g}; where missing cells are the land, set grid.void_is_land = true"
+        )
+    return Coast(
+        lines=tuple(lines),
+        islets=np.concatenate([*islets, dropped]),
+        source=f"shoreline at {settings.level_m:g} m, inlets under {settings.generalise_km:g} km bridged"
+        if land is None
+        else f"land polygons of {settings.file}, inlets under {settings.generalise_km:g} km bridged",
+    )
+
+
+def region_of(source: GridSource, box: tuple[float, float, float, float] | None, *, margin_m: float) -> Tile:
+    """Part of the grid a box covers, with a margin; the whole grid without a box.
+
+    Raises
+    ------
+    CoastError
+        If the box does not meet the grid.
+    """
+    if box is None:
+        return Tile(0, source.n_rows, 0, source.n_cols)
+    west, south, east, north = box
+    east = east if east > west else east + 360.0
+    edge_lon = np.concatenate([np.linspace(west, east, 50), np.linspace(west, east, 50), [west] * 50, [east] * 50])
+    edge_lat = np.concatenate(
+        [[south] * 50, [north] * 50, np.linspace(south, north, 50), np.linspace(south, north, 50)]
+    )
+    col, row = source.index_of(edge_lon, edge_lat)
+    if source.wraps:
+        first, _ = source.index_of(west, south)
+        col = float(first) + (edge_lon - west) / source.dx
+    rows, cols = int(margin_m / source.step_y_m) + 2, int(margin_m / source.step_x_m) + 2
+    row0, row1 = max(0, int(np.nanmin(row)) - rows), min(source.n_rows, int(np.nanmax(row)) + rows + 1)
+    col0, col1 = int(np.nanmin(col)) - cols, int(np.nanmax(col)) + cols + 1
+    if source.wraps and col1 - col0 >= source.n_cols:
+        col0, col1 = 0, source.n_cols
+    elif not source.wraps:
+        col0, col1 = max(0, col0), min(source.n_cols, col1)
+    if row1 - row0 < 3 or col1 - col0 < 3:
+        grid_box = ", ".join(f"{edge:g}" for edge in source.box_deg)
+        raise CoastError(
+            f"coast.box = {list(box)} lies outside the grid, which covers west, south, east, north = {grid_box}"
+        )
+    return Tile(row0, row1, col0, col1)
+
+
+class _Tracer:
+    """What the tracing of each tile needs to know."""
+
+    def __init__(self, source: GridSource, settings: CoastSettings, basins: Basins, land: Geometries | None) -> None:
+        self.source = source
+        self.settings = settings
+        self.basins = basins
+        self.radius_m = settings.generalise_m / 2
+        self.land = None if land is None else self._in_index(land)
+        self.join_cells = max(0.3, 0.05 * self.radius_m / min(source.step_x_m, source.step_y_m))
+
+    def _in_index(self, land: Geometries) -> Geometries:
+        def to_index(lonlat: FloatArray) -> FloatArray:
+            col, row = self.source.index_of(lonlat[:, 0], lonlat[:, 1])
+            return np.stack([col, row], axis=1)
+
+        return shapely.get_parts(shapely.make_valid(shapely.transform(land, to_index)))
+
+    def trace(self, tile: Tile) -> tuple[list[FloatArray], Geometries]:
+        """Generalised coast inside one tile, in grid index, and the islets met (lon, lat)."""
+        window = self._window(tile)
+        land = self._land_polygons(window)
+        none = np.zeros(0, dtype=object)
+        if not len(land):
+            return [], none
+        lon_deg, lat_deg = self.source.lonlat_of((tile.col0 + tile.col1) / 2, (tile.row0 + tile.row1) / 2)
+        plane = local_projection(float(lon_deg), float(lat_deg))
+
+        def to_plane(index: FloatArray) -> FloatArray:
+            return np.stack(plane.from_lonlat(*self.source.lonlat_of(index[:, 0], index[:, 1])), axis=1)
+
+        local = shapely.simplify(shapely.make_valid(shapely.transform(land, to_plane)), self.radius_m / 50)
+        tiny = shapely.area(local) < (self.radius_m / 2) ** 2
+        inside = shapely.box(window.col0 + 0.5, window.row0 + 0.5, window.col1 - 1.5, window.row1 - 1.5)
+        tiny &= shapely.covered_by(land, inside)  # land cut by the window is no islet
+        islets = shapely.transform(
+            land[tiny], lambda index: np.stack(self.source.lonlat_of(index[:, 0], index[:, 1]), axis=1)
+        )
+        if tiny.all():
+            return [], islets
+        closed = shapely.union_all(local[~tiny])
+        closed = shapely.buffer(closed, self.radius_m, quad_segs=QUARTER_SEGMENTS)
+        closed = shapely.buffer(closed, -self.radius_m, quad_segs=QUARTER_SEGMENTS)
+        return self._clip(closed, plane.to_lonlat, tile), islets
+
+    def _window(self, tile: Tile) -> Tile:
+        """Tile with the margin its closing needs, clipped to the region."""
+        lat_deg = np.abs(self.source.lonlat_of(np.full(2, float(tile.col0)), np.array([tile.row0, tile.row1]))[1]).max()
+        _, middle_deg = self.source.lonlat_of((self.source.n_cols - 1) / 2, (self.source.n_rows - 1) / 2)
+        shrink = 1.0
+        if self.source.is_geographic:
+            shrink = max(0.02, np.cos(np.radians(min(89.0, lat_deg))) / np.cos(np.radians(float(middle_deg))))
+        rows = int(3 * self.radius_m / self.source.step_y_m) + 3
+        cols = int(3 * self.radius_m / (self.source.step_x_m * shrink)) + 3
+        return self.basins.tiling.with_margin(tile, rows, cols)
+
+    def _land_polygons(self, window: Tile) -> Geometries:
+        """Land of a window as polygons in grid index; lakes are land, missing cells are not."""
+        if self.land is not None:
+            frame = (window.col0, window.row0, window.col1 - 1, window.row1 - 1)
+            cut = shapely.clip_by_rect(self.land, *frame)
+            parts = shapely.get_parts(cut[~shapely.is_empty(cut)])
+            return np.asarray(parts[shapely.get_dimensions(parts) == 2])
+        grid = self.source.read(window.row0, window.row1, window.col0, window.col1)
+        depth_m = grid.depth_m.astype(np.float64) + self.settings.level_m
+        with np.errstate(invalid="ignore"):
+            lake = (depth_m > SHORE_HAIR_M) & ~self.basins.sea_mask(window)
+        depth_m[lake] = -1.0
+        depth_m[np.isnan(depth_m)] = 1.0
+        filled = contour_generator(z=depth_m, fill_type=FillType.OuterOffset).filled(-np.inf, SHORE_HAIR_M)
+        corner = np.array([window.col0, window.row0], dtype=float)
+        polygons = [
+            shapely.polygons(rings[0], rings[1:] or None)
+            for rings in (
+                [shapely.linearrings(points[a:b] + corner) for a, b in zip(offsets[:-1], offsets[1:], strict=True)]
+                for points, offsets in zip(*filled, strict=True)
+            )
+        ]
+        return np.array(polygons, dtype=object)
+
+    def _clip(self, closed: shapely.Geometry, to_lonlat: object, tile: Tile) -> list[FloatArray]:
+        """Boundary of the closed land within a tile, land on the left, in grid index."""
+        region, source = self.basins.tiling.region, self.source
+        rings = shapely.boundary(shapely.orient_polygons(shapely.get_parts(closed)))
+        rings = shapely.segmentize(shapely.get_parts(rings), max_segment_length=self.radius_m / 2)
+
+        def to_index(plane: FloatArray) -> FloatArray:
+            lon_deg, lat_deg = to_lonlat(plane[:, 0], plane[:, 1])  # type: ignore[operator]
+            col, row = source.index_of(lon_deg, lat_deg)
+            if source.wraps:
+                middle = (tile.col0 + tile.col1) / 2
+                col = col + source.n_cols * np.round((middle - col) / source.n_cols)
+            return np.stack([col, row], axis=1)
+
+        # the edge of the grid is no coast: stay off it by three quarters of a cell
+        west, east = (
+            (tile.col0, tile.col1)
+            if self.basins.tiling.closes
+            else (
+                max(tile.col0, region.col0 + 0.75),
+                min(tile.col1, region.col1 - 1.75),
+            )
+        )
+        south, north = max(tile.row0, region.row0 + 0.75), min(tile.row1, region.row1 - 1.75)
+        clipped = shapely.clip_by_rect(shapely.transform(rings, to_index), west, south, east, north)
+        parts = shapely.get_parts(clipped[~shapely.is_empty(clipped)])
+        return [shapely.get_coordinates(part) for part in parts if shapely.get_type_id(part) == 1]
+
+
+def join_ends(pieces: Sequence[FloatArray], *, tolerance: float, turn: int | None = None) -> list[FloatArray]:
+    """Join directed lines whose end lies at another's start.
+
+    Parameters
+    ----------
+    pieces : sequence of (k, 2) array of float
+        Directed lines.
+    tolerance : float
+        Greatest distance between an end and the start it is joined to, in the unit of the lines; nearest first.
+    turn : int, optional
+        Width after which the first coordinate comes round again.
+
+    Returns
+    -------
+    list of (k, 2) array of float
+        Chains; a closed one has its first point again at its end.
+    """
+    if not pieces:
+        return []
+    starts, ends = np.array([p[0] for p in pieces]), np.array([p[-1] for p in pieces])
+    if turn is not None:
+        tree = cKDTree(np.column_stack([np.mod(starts[:, 0], turn), starts[:, 1]]), boxsize=[turn, 1e9])
+        pairs = tree.query_ball_point(np.column_stack([np.mod(ends[:, 0], turn), ends[:, 1]]), tolerance)
+    else:
+        pairs = cKDTree(starts).query_ball_point(ends, tolerance)
+
+    def gap(i: int, j: int) -> float:
+        across = ends[i, 0] - starts[j, 0]
+        if turn is not None:
+            across -= turn * round(across / turn)
+        return float(np.hypot(across, ends[i, 1] - starts[j, 1]))
+
+    candidates = sorted((gap(i, j), i, j) for i, near in enumerate(pairs) for j in near)
+    follows: dict[int, int] = {}
+    led: set[int] = set()
+    for distance, i, j in candidates:
+        tiny = i == j and len(pieces[i]) < 4
+        if i in follows or j in led or (tiny and distance > 0):
+            continue
+        follows[i] = j
+        led.add(j)
+    return list(_chains(pieces, follows, led, turn))
+
+
+def _chains(
+    pieces: Sequence[FloatArray], follows: dict[int, int], led: set[int], turn: int | None
+) -> Iterator[FloatArray]:
+    """Walk the pieces from each open start, then round each closed chain."""
+    done: set[int] = set()
+    for first in [i for i in range(len(pieces)) if i not in led] + list(range(len(pieces))):
+        if first in done:
+            continue
+        parts, i = [pieces[first]], first
+        done.add(i)
+        while follows.get(i, first) not in done:
+            i = follows[i]
+            done.add(i)
+            part = pieces[i]
+            if turn is not None:
+                part = part + [turn * round((parts[-1][-1, 0] - part[0, 0]) / turn), 0.0]
+            parts.append(part[1:])
+        chain = np.concatenate(parts)
+        if follows.get(i) == first:
+            end = chain[0] if turn is None else chain[0] + [turn * round((chain[-1, 0] - chain[0, 0]) / turn), 0.0]
+            chain = np.concatenate([chain[:-1], end[None]])
+        if len(chain) > 1:
+            yield chain
+
+
+def _sort_out(
+    source: GridSource, chains: Sequence[FloatArray], settings: CoastSettings
+) -> tuple[list[CoastLine], Geometries]:
+    """Keep the coasts that carry stations, longest first; return the islands dropped as polygons too."""
+    lines: list[CoastLine] = []
+    dropped: list[shapely.Geometry] = []
+    for chain in chains:
+        line = CoastLine.through(*source.lonlat_of(chain[:, 0], chain[:, 1]))
+        if len(line.lon_deg) < 2 or line.length_m <= 0:
+            continue
+        signed = 0.5 * float(np.sum(chain[:-1, 0] * chain[1:, 1] - chain[1:, 0] * chain[:-1, 1]))
+        signed += 0.5 * float(chain[-1, 0] * chain[0, 1] - chain[0, 0] * chain[-1, 1])
+        goes_round = line.is_closed and abs(line.lon_deg[-1] - line.lon_deg[0]) > 180
+        least_km2 = settings.smallest_island_km2 if signed > 0 else settings.smallest_sea_km2
+        small = not goes_round and area_m2(line.lon_deg, line.lat_deg) < least_km2 * 1e6
+        chord_m, _ = distance_bearing(line.lon_deg[0], line.lat_deg[0], line.lon_deg[-1], line.lat_deg[-1])
+        if small and chord_m < line.length_m / 2:
+            if line.is_closed and signed > 0:
+                dropped.append(shapely.polygons(np.stack([line.lon_deg, line.lat_deg], axis=1)))
+            continue
+        lines.append(line)
+    lines.sort(key=lambda line: (-line.length_m, line.lon_deg[0], line.lat_deg[0]))
+    return lines, np.array(dropped, dtype=object)
+
+
+def coast_from_lines(source: GridSource, lines: Geometries, name: str) -> Coast:
+    """Take lines of a vector file as the coast, turned so that the sea is on the right.
+
+    Parameters
+    ----------
+    source : GridSource
+        The bathymetry; tells on which side the water is.
+    lines : array of shapely lines
+        Longitude and latitude, degrees; parts of multi-part lines count singly.
+    name : str
+        What to call their source.
+
+    Returns
+    -------
+    Coast
+        One piece a line, longest first. Lines with no more water on one side than on the other keep their direction.
+
+    Raises
+    ------
+    CoastError
+        If none of the geometries is a line with a length.
+    """
+    parts = shapely.get_parts(lines)
+    parts = parts[(shapely.get_type_id(parts) == 1) | (shapely.get_type_id(parts) == 2)]
+    coast: list[CoastLine] = []
+    for part in parts:
+        lonlat = shapely.get_coordinates(part)
+        lonlat[:, 0] = np.unwrap(lonlat[:, 0], period=360.0)
+        line = CoastLine.through(lonlat[:, 0], lonlat[:, 1])
+        if len(line.lon_deg) < 2:
+            continue
+        right, left = (_wet_share(source, line, side) for side in (90.0, -90.0))
+        if left > right:
+            line = CoastLine.through(line.lon_deg[::-1], line.lat_deg[::-1])
+        coast.append(line)
+    if not coast:
+        raise CoastError(f"{name}: holds no line with a length; give the coast as lines, or the land as polygons")
+    coast.sort(key=lambda line: (-line.length_m, line.lon_deg[0], line.lat_deg[0]))
+    return Coast(lines=tuple(coast), islets=np.zeros(0, dtype=object), source=f"lines of {name}")
+
+
+def _wet_share(source: GridSource, line: CoastLine, side_deg: float) -> float:
+    """Share of points beside a line that are water, looked for two to eight cells away."""
+    at_m = (np.arange(64) + 0.5) / 64 * line.length_m
+    lon_deg, lat_deg = np.interp(at_m, line.along_m, line.lon_deg), np.interp(at_m, line.along_m, line.lat_deg)
+    ahead_m = np.minimum(at_m + line.length_m / 256, line.length_m)
+    _, bearing_deg = distance_bearing(
+        lon_deg,
+        lat_deg,
+        np.interp(ahead_m, line.along_m, line.lon_deg),
+        np.interp(ahead_m, line.along_m, line.lat_deg),
+    )
+    away_m = np.array([2.0, 4.0, 8.0]) * source.step_m
+    lon_deg, lat_deg = geodesic_nodes(lon_deg, lat_deg, bearing_deg + side_deg, away_m)
+    depth_m, state = source.sample(lon_deg.ravel(), lat_deg.ravel())
+    return float(np.mean((state == INSIDE) & (depth_m > SHORE_HAIR_M)))

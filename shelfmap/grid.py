@@ -1,0 +1,377 @@
+"""Bathymetry rasters: what one holds, windows of it in memory, depths at points.
+
+Inside, rows run from south to north and columns from west to east, `depth_m` is positive down and NaN means
+"missing", however the file stores them; this is the only place where a sign or an order turns. An index
+(col, row) is a float that is 0 at the centre of the south-west cell.
+"""
+
+import re
+import warnings
+from collections.abc import Iterable, Iterator, Mapping
+from contextlib import contextmanager
+from dataclasses import dataclass, replace
+from functools import lru_cache
+from pathlib import Path
+from typing import Any, Final
+
+import numpy as np
+import rasterio
+from numpy.typing import ArrayLike, NDArray
+from rasterio.enums import MaskFlags
+from rasterio.errors import NotGeoreferencedWarning, RasterioError
+from rasterio.windows import Window
+
+from shelfmap._kernels.sampling import INSIDE, OUTSIDE, VOID, sample_points
+from shelfmap.errors import GridError
+from shelfmap.geodesy import WGS84, Projection, distance_bearing, unwrap_lon_deg
+from shelfmap.settings import GridSettings
+from shelfmap.vertical import Positive, check_unit, datum_words, decide_positive
+
+__all__ = ["FARTHEST_VALUE_M", "INSIDE", "OUTSIDE", "VOID", "Grid", "GridSource", "disk_file", "open_grid"]
+
+FloatArray = NDArray[np.float64]
+StateArray = NDArray[np.uint8]
+Indices = tuple[int, int, int, int]
+
+#: No sea or mountain is farther from the zero than this, metres: such a value means "missing".
+FARTHEST_VALUE_M: Final = 12_000.0
+
+#: Elevation that missing cells get where they count as land, metres: with it the shoreline of a grid that holds
+#: depths only falls between its last wet cell and the next.
+VOID_LAND_ELEVATION_M: Final = 10.0
+
+# A sample of a large grid: this many windows a side, of this many cells a side.
+_SAMPLE_WINDOWS: Final = 8
+_SAMPLE_CELLS: Final = 256
+
+_LOCAL_ARCHIVE: Final = re.compile(r"/vsi(zip|tar|gzip)/+(.+?\.(?:zip|tgz|tar\.gz|tar|gz))((?:/.*)?)", re.IGNORECASE)
+_NETWORK_FILE: Final = re.compile(rb"<(GDAL_WMS|GDAL_WMTS|WCS_GDAL|WMS_|WMT_|WMTS|Capabilities)")
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Grid:
+    """A window of a grid in memory.
+
+    Parameters
+    ----------
+    depth_m : (n_rows, n_cols) array of float32
+        Depth, metres, positive down, rows south to north; NaN = missing. Becomes read-only.
+    row0, col0 : int
+        Index of its first cell in the source.
+    wrap_cols : int
+        Columns round the globe where the source goes round it, else 0.
+    """
+
+    depth_m: NDArray[np.float32]
+    row0: int
+    col0: int
+    wrap_cols: int = 0
+
+    def __post_init__(self) -> None:
+        if self.depth_m.ndim != 2 or self.depth_m.dtype != np.float32 or not self.depth_m.flags.c_contiguous:
+            raise GridError(
+                f"depth_m is {self.depth_m.dtype} of shape {self.depth_m.shape}; give a C-contiguous 2-D float32 array"
+            )
+        self.depth_m.setflags(write=False)
+
+    def sample(self, col: ArrayLike, row: ArrayLike) -> tuple[FloatArray, StateArray]:
+        """Depth at points, bilinear between cell centres, missing cells left out of the mean.
+
+        Parameters
+        ----------
+        col, row : array_like of float
+            Indices in the source (not in the window), broadcast together.
+
+        Returns
+        -------
+        depth_m : array of float
+            Metres; NaN unless the state is INSIDE.
+        state : array of uint8
+            INSIDE; VOID where missing cells carry more than half the weight; OUTSIDE beyond the outer cell centres.
+
+        Examples
+        --------
+        >>> grid = Grid(depth_m=np.array([[10, 20], [np.nan, 40]], dtype=np.float32), row0=0, col0=0)
+        >>> depth_m, state = grid.sample([0.25, 0.0, 1.5], [0.0, 1.0, 0.0])
+        >>> depth_m, state
+        (array([12.5,  nan,  nan]), array([0, 1, 2], dtype=uint8))
+        """
+        cols, rows = np.broadcast_arrays(np.asarray(col, dtype=float), np.asarray(row, dtype=float))
+        depth_m = np.empty(cols.shape)
+        state = np.empty(cols.shape, dtype=np.uint8)
+        sample_points(
+            self.depth_m,
+            self.row0,
+            self.col0,
+            self.wrap_cols,
+            rows.ravel(),
+            cols.ravel(),
+            depth_m.reshape(-1),
+            state.reshape(-1),
+        )
+        return depth_m, state
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class GridSource:
+    """What shelfmap understands of a raster: strings and numbers, no depths, so that it travels to workers.
+
+    Parameters
+    ----------
+    path : str
+        Name GDAL opens.
+    band : int
+        Band of the raster, from 1.
+    dtype : str
+        Type its values are stored in.
+    crs_wkt, crs_why : str
+        Coordinate system and where it comes from.
+    is_geographic : bool
+        True where coordinates are degrees.
+    x0, y0 : float
+        Centre of the south-west cell, grid units.
+    dx, dy : float
+        Cell sides, grid units, > 0.
+    n_rows, n_cols : int
+        Cells, without a column that repeats the first 360 degrees further on.
+    file_cols : int
+        Columns of the file.
+    flip_rows, flip_cols : bool
+        Whether the file runs from north to south, from east to west.
+    wraps : bool
+        True where the columns go once round the globe.
+    positive, positive_why : str
+        "up" for elevations or "down" for depths, and why.
+    level_shift_m : float
+        How far the water stands above the grid's zero.
+    void_is_land : bool
+        Whether missing cells read as land.
+    nodata : float or None
+        Stored value that means missing.
+    scale, offset : float
+        ``value = scale * stored + offset``.
+    vertical_words : tuple of str
+        Metadata that name a vertical datum.
+    """
+
+    path: str
+    band: int
+    dtype: str
+    crs_wkt: str
+    crs_why: str
+    is_geographic: bool
+    x0: float
+    y0: float
+    dx: float
+    dy: float
+    n_rows: int
+    n_cols: int
+    file_cols: int
+    flip_rows: bool
+    flip_cols: bool
+    wraps: bool
+    positive: Positive
+    positive_why: str
+    level_shift_m: float
+    void_is_land: bool
+    nodata: float | None
+    scale: float
+    offset: float
+    vertical_words: tuple[str, ...]
+
+    @property
+    def projection(self) -> Projection:
+        """Way between the grid's coordinates and longitude, latitude."""
+        return _projection(self.crs_wkt)
+
+    @property
+    def step_x_m(self) -> float:
+        """Length on the ground of a cell's west-east side in the middle of the grid, metres."""
+        return self._step_m(1.0, 0.0)
+
+    @property
+    def step_y_m(self) -> float:
+        """Length on the ground of a cell's south-north side in the middle of the grid, metres."""
+        return self._step_m(0.0, 1.0)
+
+    @property
+    def step_m(self) -> float:
+        """The smaller of the two cell sides in the middle of the grid, metres."""
+        return min(self.step_x_m, self.step_y_m)
+
+    def _step_m(self, cols: float, rows: float) -> float:
+        col, row = (self.n_cols - 1) / 2, (self.n_rows - 1) / 2
+        half = np.array([-0.5, 0.5])
+        lon_deg, lat_deg = self.lonlat_of(col + half * cols, row + half * rows)
+        distance_m, _ = distance_bearing(lon_deg[0], lat_deg[0], lon_deg[1], lat_deg[1])
+        return float(distance_m)
+
+    @property
+    def box_deg(self) -> tuple[float, float, float, float]:
+        """West, south, east, north of the cells' outer edges, degrees; east above west, past 180 where need be."""
+        across = np.linspace(-0.5, self.n_cols - 0.5, 65)
+        along = np.linspace(-0.5, self.n_rows - 0.5, 65)
+        col = np.concatenate([across, across, np.full(65, -0.5), np.full(65, self.n_cols - 0.5)])
+        row = np.concatenate([np.full(65, -0.5), np.full(65, self.n_rows - 0.5), along, along])
+        lon, lat = self.lonlat_of(col, row)
+        if not self.is_geographic:
+            middle_lon, _ = self.lonlat_of((self.n_cols - 1) / 2, (self.n_rows - 1) / 2)
+            on_earth = np.isfinite(lon) & np.isfinite(lat)
+            lon, lat = unwrap_lon_deg(lon[on_earth], middle_lon), lat[on_earth]
+        west, south, east, north = float(lon.min()), float(lat.min()), float(lon.max()), float(lat.max())
+        for pole in (-90.0, 90.0):
+            if not self.is_geographic and self._holds(0.0, pole):
+                west, east, south, north = -180.0, 180.0, min(south, pole), max(north, pole)
+        return west, max(south, -90.0), east, min(north, 90.0)
+
+    def _holds(self, lon_deg: float, lat_deg: float) -> bool:
+        col, row = self.index_of(lon_deg, lat_deg)
+        return bool(-0.5 <= col <= self.n_cols - 0.5 and -0.5 <= row <= self.n_rows - 0.5)
+
+    def index_of(self, lon_deg: ArrayLike, lat_deg: ArrayLike) -> tuple[FloatArray, FloatArray]:
+        """Index (col, row) of points; 0 is the centre of the west column, of the south row.
+
+        On a geographic grid longitudes are first turned into its range: from its first column on where it goes
+        round the globe, else within 180 degrees of its middle.
+        """
+        x, y = self.projection.from_lonlat(lon_deg, lat_deg)
+        if self.is_geographic:
+            middle_deg = self.x0 + (180.0 if self.wraps else (self.n_cols - 1) / 2 * self.dx)
+            x = unwrap_lon_deg(x, middle_deg)
+        return (x - self.x0) / self.dx, (y - self.y0) / self.dy
+
+    def lonlat_of(self, col: ArrayLike, row: ArrayLike) -> tuple[FloatArray, FloatArray]:
+        """Longitude and latitude, degrees, of indices; on a geographic grid in the grid's own range."""
+        x = self.x0 + np.asarray(col, dtype=float) * self.dx
+        y = self.y0 + np.asarray(row, dtype=float) * self.dy
+        return self.projection.to_lonlat(x, y)
+
+    def window_around(self, lon_deg: ArrayLike, lat_deg: ArrayLike, margin_cells: int) -> Indices:
+        """Smallest window that holds the cells around all points and a margin: row0, row1, col0, col1, half-open.
+
+        Points off the grid are left out of account. Where the grid goes round the globe the window may run over
+        its seam: col1 is then above the number of columns.
+
+        Raises
+        ------
+        GridError
+            If no point lies on the grid.
+        """
+        col, row = self.index_of(lon_deg, lat_deg)
+        on_grid = (row >= -0.5) & (row <= self.n_rows - 0.5)
+        if not self.wraps:
+            on_grid &= (col >= -0.5) & (col <= self.n_cols - 0.5)
+        if not on_grid.any():
+            raise GridError(f"{self.path}: none of the points lies on the grid; compare its box with theirs")
+        col, row = col[on_grid], row[on_grid]
+        row0 = max(int(np.floor(row.min())) - margin_cells, 0)
+        row1 = min(int(np.floor(row.max())) + 2 + margin_cells, self.n_rows)
+        if not self.wraps:
+            col0 = max(int(np.floor(col.min())) - margin_cells, 0)
+            return row0, row1, col0, min(int(np.floor(col.max())) + 2 + margin_cells, self.n_cols)
+        cells = np.unique(np.floor(col).astype(int) % self.n_cols)
+        gaps = np.diff(cells, append=cells[0] + self.n_cols)
+        widest = int(gaps.argmax())
+        width = self.n_cols - int(gaps[widest]) + 2 + 2 * margin_cells
+        if width >= self.n_cols:
+            return row0, row1, 0, self.n_cols
+        col0 = int(cells[(widest + 1) % cells.size] - margin_cells) % self.n_cols
+        return row0, row1, col0, col0 + width
+
+    def read(self, row0: int, row1: int, col0: int, col1: int) -> Grid:
+        """Depths of a half-open window, clipped to the grid; columns are taken round the globe where it wraps.
+
+        Raises
+        ------
+        GridError
+            If no cell of the grid is in the window, or the file has vanished, changed or is damaged.
+        """
+        [grid] = self.read_many([(row0, row1, col0, col1)])
+        return grid
+
+    def read_many(self, windows: Iterable[Indices]) -> Iterator[Grid]:
+        """Depths of several windows, one after the other, the file opened once; see `read`."""
+        with _opened(self.path) as (dataset, _):
+            if (dataset.width, dataset.height) != (self.file_cols, self.n_rows):
+                raise GridError(f"{self.path}: the file has changed since it was opened; start again")
+            for row0, row1, col0, col1 in windows:
+                rows = max(row0, 0), min(row1, self.n_rows)
+                cols = (col0, min(col1, col0 + self.n_cols)) if self.wraps else (max(col0, 0), min(col1, self.n_cols))
+                if rows[0] >= rows[1] or cols[0] >= cols[1]:
+                    raise GridError(
+                        f"{self.path}: window of rows {row0} to {row1} and columns {col0} to {col1} holds no cell of "
+                        f"the grid's {self.n_rows} by {self.n_cols}; ask for a window on the grid"
+                    )
+                yield self._window(dataset, rows, cols)
+
+    def _window(self, dataset: Any, rows: tuple[int, int], cols: tuple[int, int]) -> Grid:
+        """Read a window that lies on the grid, in at most two pieces where it runs over the seam."""
+        first = cols[0] % self.n_cols
+        last = first + cols[1] - cols[0]
+        pieces = [(first, min(last, self.n_cols)), (0, max(last - self.n_cols, 0))]
+        depths = [self._depth(dataset, rows, piece) for piece in pieces if piece[0] < piece[1]]
+        depth_m = np.ascontiguousarray(depths[0] if len(depths) == 1 else np.hstack(depths))
+        return Grid(depth_m=depth_m, row0=rows[0], col0=first, wrap_cols=self.n_cols if self.wraps else 0)
+
+    def _depth(self, dataset: Any, rows: tuple[int, int], cols: tuple[int, int]) -> NDArray[np.float32]:
+        row_off = self.n_rows - rows[1] if self.flip_rows else rows[0]
+        col_off = self.file_cols - cols[1] if self.flip_cols else cols[0]
+        window = Window(col_off, row_off, cols[1] - cols[0], rows[1] - rows[0])
+        stored = dataset.read(self.band, window=window)
+        missing = _is_missing(stored, self.nodata)
+        if MaskFlags.per_dataset in dataset.mask_flag_enums[self.band - 1]:
+            missing |= dataset.read_masks(self.band, window=window) == 0
+        value_m = self.scale * stored.astype(np.float64) + self.offset
+        depth_m = self.level_shift_m + (value_m if self.positive == "down" else -value_m)
+        depth_m[missing] = -VOID_LAND_ELEVATION_M if self.void_is_land else np.nan
+        return depth_m[:: -1 if self.flip_rows else 1, :: -1 if self.flip_cols else 1].astype(np.float32)
+
+
+def _check_extent(source: GridSource) -> None:
+    """Refuse degrees taken for metres, and metres taken for degrees."""
+    east, north = source.x0 + (source.n_cols - 1) * source.dx, source.y0 + (source.n_rows - 1) * source.dy
+    extent = f"x {source.x0:.8g} to {east:.8g}, y {source.y0:.8g} to {north:.8g}"
+    looks_geographic = max(-source.x0, east) <= 720 and max(-source.y0, north) <= 90 + 1e-3 * source.dy
+    if source.is_geographic and not looks_geographic:
+        raise GridError(
+            f"{source.path}: {extent} are no degrees, but {source.projection.name} counts in degrees; "
+            "set grid.crs to the system the grid is in"
+        )
+    if source.is_geographic and source.n_cols * source.dx > 360 * (1 + 1e-6):
+        raise GridError(f"{source.path}: {extent} goes round the globe more than once; cut it to 360 degrees")
+    if not source.is_geographic and max(-source.x0, east) <= 360 and max(-source.y0, north) <= 90:
+        raise GridError(
+            f"{source.path}: {extent} look like degrees, but {source.projection.name} counts in metres; "
+            'set grid.crs = "EPSG:4326" if they are degrees'
+        )
+
+
+def _sampled_range(source: GridSource) -> tuple[float, float]:
+    """Lowest and highest stored value, of all cells of a small grid or of scattered windows of a large one.
+
+    Raises
+    ------
+    GridError
+        If a value is no elevation or depth on Earth: it must mean "missing".
+    """
+    windows: list[Indices] = [(0, source.n_rows, 0, source.n_cols)]
+    if source.n_rows * source.n_cols > _SAMPLE_WINDOWS**2 * _SAMPLE_CELLS**2:
+        row_starts, col_starts = (
+            np.linspace(0, max(n - _SAMPLE_CELLS, 0), _SAMPLE_WINDOWS).astype(int).tolist()
+            for n in (source.n_rows, source.n_cols)
+        )
+        windows = [(r, r + _SAMPLE_CELLS, c, c + _SAMPLE_CELLS) for r in row_starts for c in col_starts]
+    lowest, highest = np.inf, -np.inf
+    for grid in source.read_many(windows):
+        values = -grid.depth_m[np.isfinite(grid.depth_m)]
+        if values.size:
+            lowest, highest = min(lowest, float(values.min())), max(highest, float(values.max()))
+    for value in (lowest, highest):
+        if FARTHEST_VALUE_M < abs(value) < np.inf:
+            raise GridError(
+                f"{source.path}: value {value:.8g} is no elevation or depth in metres; if it means missing set "
+                f"grid.nodata to it, else convert the grid to metres"
+            )
+    return (lowest, highest) if lowest <= highest else (np.nan, np.nan)
+
+

@@ -1,0 +1,103 @@
+"""A file written beside its target and put in its place only when whole."""
+
+import os
+import sqlite3
+from collections.abc import Iterator
+from contextlib import closing, contextmanager
+from pathlib import Path
+from typing import Final
+
+from shelfmap.errors import LayerError, LayerExistsError
+
+__all__ = ["check_target", "replacing"]
+
+#: How long another program may hold the old file before it counts as in use, seconds.
+_PATIENCE_S: Final = 0.5
+
+#: What SQLite leaves beside a file while it is open or after a crash.
+_COMPANIONS: Final = ("-journal", "-wal", "-shm")
+
+
+def check_target(path: str | Path, *, overwrite: bool) -> None:
+    """Refuse a GeoPackage path that could not be written; worth asking before a long run.
+
+    Raises
+    ------
+    LayerExistsError
+        If the file is there and may not be overwritten.
+    LayerError
+        If the name does not end in .gpkg, names a folder, or the file or its folder cannot be written to.
+    """
+    path = Path(path)
+    folder = path.resolve().parent
+    if path.suffix.lower() != ".gpkg":
+        raise LayerError(
+            f"output {path} does not end in .gpkg; layers are written as GeoPackage: name it {path.stem}.gpkg"
+        )
+    if path.is_dir():
+        raise LayerError(f"output {path} is a folder; give the name of a file in it")
+    if not folder.is_dir():
+        raise LayerError(f"output {path}: there is no folder {folder}; make it first or correct the path")
+    if not os.access(folder, os.W_OK):
+        raise LayerError(f"output {path}: folder {folder} is read-only; write to another folder or open it for writing")
+    if path.exists() and not overwrite:
+        raise LayerExistsError(f"output {path} exists already; allow it to be overwritten or give another name")
+    if path.exists() and not os.access(path, os.W_OK):
+        raise LayerError(f"output {path} is read-only; open it for writing or give another name")
+
+
+@contextmanager
+def replacing(path: str | Path) -> Iterator[Path]:
+    """Name to write to beside `path`, moved onto it at the end if nothing went wrong.
+
+    On any failure the part is removed and the old file stays as it was. The old file is replaced only while no other
+    program holds it: replacing a SQLite file that is open elsewhere in write-ahead mode can destroy it.
+
+    Raises
+    ------
+    LayerError
+        If the old file is in use, or the new one cannot be moved into its place.
+    """
+    target = Path(path).resolve()  # through links, so that a link stays one
+    part = target.with_name(f"{target.name}.part.gpkg")
+    _remove(part)
+    try:
+        yield part
+        if target.exists():
+            _refuse_if_held(target)
+        for suffix in _COMPANIONS:  # a journal left by a crash would be played back into the new file
+            target.with_name(target.name + suffix).unlink(missing_ok=True)
+        _move(part, target)
+    finally:
+        _remove(part)
+
+
+def _remove(part: Path) -> None:
+    for suffix in ("", *_COMPANIONS):
+        part.with_name(part.name + suffix).unlink(missing_ok=True)
+
+
+def _move(part: Path, target: Path) -> None:
+    try:
+        part.replace(target)
+    except OSError as error:
+        raise LayerError(
+            f"output {target} cannot be put in place ({error.strerror}); close it in other programs or give another name"
+        ) from error
+
+
+def _refuse_if_held(target: Path) -> None:
+    """Take the old file for ourselves for a moment, leaving write-ahead mode; fail if somebody else has it."""
+    try:
+        with closing(
+            sqlite3.connect(f"{target.as_uri()}?mode=rw", uri=True, timeout=_PATIENCE_S, isolation_level=None)
+        ) as database:
+            database.execute("PRAGMA journal_mode=DELETE")
+            database.execute("BEGIN EXCLUSIVE")
+            database.execute("ROLLBACK")
+    except sqlite3.OperationalError as error:
+        raise LayerError(
+            f"output {target} is in use by another program ({error}); close it there and run again, or give another name"
+        ) from error
+    except sqlite3.DatabaseError:
+        return  # no SQLite file, so nobody holds one

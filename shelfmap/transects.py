@@ -1,0 +1,278 @@
+"""From a coast to transects: stations along it, seaward bearings, and the geodesics to sample."""
+
+from dataclasses import dataclass
+from typing import Final
+
+import numpy as np
+import shapely
+from numpy.typing import NDArray
+
+from shelfmap.coast import Coast, CoastLine
+from shelfmap.errors import TransectError
+from shelfmap.geodesy import distance_bearing, geodesic_nodes, unwrap_lon_deg
+from shelfmap.settings import CoastSettings, TransectSettings
+
+__all__ = ["Transects", "coast_piece", "crossing_transects", "lay_transects", "transects_from_lines"]
+
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int64]
+BoolArray = NDArray[np.bool_]
+
+#: Chords of this length between points of a geodesic leave it by about 2 cm.
+NODE_M: Final = 1e4
+#: Points each side of a station that its bearing is taken from.
+_BEARING_POINTS: Final = 16
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Transects:
+    """Lines to sample, one row a transect, in order along the coast."""
+
+    transect_id: IntArray
+    """(n,) identity, kept through editing."""
+    coast_part: IntArray
+    """(n,) piece of the coast, 1 for the longest; 0 where drawn by hand."""
+    coast_m: FloatArray
+    """(n,) distance along that piece, metres; NaN where drawn by hand."""
+    piece_m: FloatArray
+    """(n,) length of coast a station stands for, metres; NaN where drawn by hand."""
+    lon_deg: FloatArray
+    """(n,) station, longitude."""
+    lat_deg: FloatArray
+    """(n,) station, latitude."""
+    bearing_deg: FloatArray
+    """(n,) seaward compass bearing at the station."""
+    node_m: FloatArray
+    """(n, k) distance of each node from the station, metres, rising; negative landward; NaN beyond the last."""
+    node_lon_deg: FloatArray
+    """(n, k) longitude of each node, unwrapped."""
+    node_lat_deg: FloatArray
+    """(n, k) latitude of each node."""
+
+    def __len__(self) -> int:
+        return len(self.transect_id)
+
+    def rows(self, start: int, stop: int) -> "Transects":
+        """Some of them, from row `start` up to `stop`."""
+        return Transects(**{name: getattr(self, name)[start:stop] for name in self.__slots__})
+
+
+def lay_transects(coast: Coast, settings: TransectSettings, coast_settings: CoastSettings) -> Transects:
+    """Put stations along a coast and lay a geodesic seaward from each.
+
+    Parameters
+    ----------
+    coast : Coast
+        Pieces with the sea on the right.
+    settings : TransectSettings
+        Spacing and length.
+    coast_settings : CoastSettings
+        Width over which the bearing is taken, and the box that stations must lie in.
+
+    Returns
+    -------
+    Transects
+        Every piece is cut into equal parts of about the spacing, a station in the middle of each. The bearing is
+        square to the line from the centroid of the coast behind the station to that of the coast ahead of it, each
+        over `generalise_km`. Nodes begin half of `generalise_km` landward, where the shoreline is searched.
+
+    Raises
+    ------
+    TransectError
+        If no station lies in the box.
+    """
+    back_m = coast_settings.generalise_m / 2
+    columns: dict[str, list[FloatArray]] = {name: [] for name in ("part", "along", "piece", "lon", "lat", "bearing")}
+    for part, line in enumerate(coast.lines, start=1):
+        n = max(1, round(line.length_m / settings.spacing_m))
+        along_m = (np.arange(n) + 0.5) * (line.length_m / n)
+        lon_deg, lat_deg = _points_along(line, along_m)
+        keep = _in_box(lon_deg, lat_deg, coast_settings.box)
+        bearing_deg = _seaward_bearings(line, along_m[keep], coast_settings.generalise_m)
+        for name, values in (
+            ("part", np.full(keep.sum(), float(part))),
+            ("along", along_m[keep]),
+            ("piece", np.full(keep.sum(), line.length_m / n)),
+            ("lon", lon_deg[keep]),
+            ("lat", lat_deg[keep]),
+            ("bearing", bearing_deg),
+        ):
+            columns[name].append(values)
+    table = {name: np.concatenate(values) for name, values in columns.items()}
+    if not len(table["lon"]):
+        raise TransectError(f"no station lies in coast.box = {list(coast_settings.box or ())}; move or widen the box")
+    spread = np.linspace(0.0, settings.length_m, max(2, int(np.ceil(settings.length_m / NODE_M)) + 1))
+    node_m = np.concatenate([np.linspace(-back_m, 0.0, max(2, int(np.ceil(back_m / NODE_M)) + 1))[:-1], spread])
+    node_lon, node_lat = geodesic_nodes(table["lon"], table["lat"], table["bearing"], node_m)
+    return Transects(
+        transect_id=np.arange(1, len(node_lon) + 1, dtype=np.int64),
+        coast_part=table["part"].astype(np.int64),
+        coast_m=table["along"],
+        piece_m=table["piece"],
+        lon_deg=table["lon"],
+        lat_deg=table["lat"],
+        bearing_deg=table["bearing"],
+        node_m=np.broadcast_to(node_m, node_lon.shape).copy(),
+        node_lon_deg=node_lon,
+        node_lat_deg=node_lat,
+    )
+
+
+def _points_along(line: CoastLine, along_m: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Points at distances along a line; past the ends of a closed one it goes round again."""
+    turn_deg = 0.0
+    if line.is_closed:
+        turns = np.floor(along_m / line.length_m)
+        turn_deg = turns * (line.lon_deg[-1] - line.lon_deg[0])
+        along_m = along_m - turns * line.length_m
+    lon_deg = np.interp(along_m, line.along_m, line.lon_deg) + turn_deg
+    return lon_deg, np.interp(along_m, line.along_m, line.lat_deg)
+
+
+def _seaward_bearings(line: CoastLine, along_m: FloatArray, width_m: float) -> FloatArray:
+    """Compass bearing square to the coast on its right hand, degrees."""
+    reach_m = min(width_m, line.length_m / 4) if line.is_closed else width_m
+    offset_m = (np.arange(-_BEARING_POINTS, _BEARING_POINTS + 1) / _BEARING_POINTS) * reach_m
+    at_m = along_m[:, None] + offset_m
+    if not line.is_closed:
+        at_m = np.clip(at_m, 0.0, line.length_m)
+    lon_deg, lat_deg = _points_along(line, at_m)
+    here_lon, here_lat = _points_along(line, along_m)
+    distance_m, bearing_deg = distance_bearing(here_lon[:, None], here_lat[:, None], lon_deg, lat_deg)
+    east_m = distance_m * np.sin(np.radians(bearing_deg))
+    north_m = distance_m * np.cos(np.radians(bearing_deg))
+    ahead = slice(_BEARING_POINTS, None)
+    behind = slice(None, _BEARING_POINTS + 1)
+    tangent_deg = np.degrees(
+        np.arctan2(
+            east_m[:, ahead].mean(axis=1) - east_m[:, behind].mean(axis=1),
+            north_m[:, ahead].mean(axis=1) - north_m[:, behind].mean(axis=1),
+        )
+    )
+    return np.asarray(np.mod(tangent_deg + 90.0, 360.0))
+
+
+def _in_box(lon_deg: FloatArray, lat_deg: FloatArray, box: tuple[float, float, float, float] | None) -> BoolArray:
+    if box is None:
+        return np.ones(len(lon_deg), dtype=bool)
+    west, south, east, north = box
+    east = east if east > west else east + 360.0
+    lon = unwrap_lon_deg(lon_deg, (west + east) / 2)
+    return np.asarray((lon >= west) & (lon <= east) & (lat_deg >= south) & (lat_deg <= north))
+
+
+def coast_piece(coast: Coast, transects: Transects, row: int) -> FloatArray:
+    """Stretch of coast one station stands for, (k, 2) longitude and latitude in degrees."""
+    line = coast.lines[int(transects.coast_part[row]) - 1]
+    half_m = transects.piece_m[row] / 2
+    start_m, stop_m = transects.coast_m[row] - half_m, transects.coast_m[row] + half_m
+    inside = (line.along_m > start_m + 1e-6) & (line.along_m < stop_m - 1e-6)
+    at_m = np.concatenate([[max(start_m, 0.0)], line.along_m[inside], [min(stop_m, line.length_m)]])
+    return np.stack([np.interp(at_m, line.along_m, line.lon_deg), np.interp(at_m, line.along_m, line.lat_deg)], axis=1)
+
+
+def transects_from_lines(
+    lines: NDArray[np.object_], transect_id: IntArray | None = None, coast_columns: dict[str, FloatArray] | None = None
+) -> Transects:
+    """Take transects drawn or edited by hand, each from the shore seaward.
+
+    Parameters
+    ----------
+    lines : (n,) array of shapely lines
+        Longitude and latitude, degrees. Parts of a multi-part line are one transect, in their order.
+    transect_id : (n,) array of int, optional
+        Identities to keep; repeated or missing ones (negative) are renumbered above the largest.
+    coast_columns : dict of str to (n,) array, optional
+        `coast_part` and `coast_m` as they were, to keep.
+
+    Returns
+    -------
+    Transects
+        The station is the first point of each line.
+
+    Raises
+    ------
+    TransectError
+        If there is no line with a length among them.
+    """
+    usable = [i for i, line in enumerate(lines) if shapely.get_dimensions(line) == 1 and shapely.length(line) > 0]
+    if not usable:
+        raise TransectError("the file of transects holds no line with a length; draw each from the shore seaward")
+    nodes = [_nodes_of(shapely.get_coordinates(lines[i])) for i in usable]
+    k = max(len(node_m) for node_m, _, _ in nodes)
+    padded = np.full((3, len(nodes), k), np.nan)
+    for row, node in enumerate(nodes):
+        padded[:, row, : len(node[0])] = node
+    _, bearing_deg = distance_bearing(padded[1, :, 0], padded[2, :, 0], padded[1, :, 1], padded[2, :, 1])
+    n = len(usable)
+    columns = coast_columns or {}
+    part = np.nan_to_num(columns.get("coast_part", np.zeros(len(lines)))[usable]).astype(np.int64)
+    return Transects(
+        transect_id=_identities(None if transect_id is None else transect_id[usable], n),
+        coast_part=part,
+        coast_m=np.asarray(columns.get("coast_m", np.full(len(lines), np.nan))[usable], dtype=float),
+        piece_m=np.full(n, np.nan),
+        lon_deg=padded[1, :, 0].copy(),
+        lat_deg=padded[2, :, 0].copy(),
+        bearing_deg=bearing_deg,
+        node_m=padded[0],
+        node_lon_deg=padded[1],
+        node_lat_deg=padded[2],
+    )
+
+
+def _nodes_of(lonlat: FloatArray) -> FloatArray:
+    """Nodes (distance, longitude, latitude) along a drawn line, at most `NODE_M` apart on geodesics."""
+    lon_deg, lat_deg = np.unwrap(lonlat[:, 0], period=360.0), lonlat[:, 1]
+    leg_m, bearing_deg = distance_bearing(lon_deg[:-1], lat_deg[:-1], lon_deg[1:], lat_deg[1:])
+    out = [np.array([[0.0], [lon_deg[0]], [lat_deg[0]]])]
+    start_m = 0.0
+    for i, leg in enumerate(leg_m):
+        if leg <= 0:
+            continue
+        along_m = np.linspace(0.0, leg, int(np.ceil(leg / NODE_M)) + 1)[1:]
+        lon, lat = geodesic_nodes(lon_deg[i], lat_deg[i], bearing_deg[i], along_m)
+        out.append(np.stack([start_m + along_m, lon[0], lat[0]]))
+        start_m += leg
+    return np.concatenate(out, axis=1)
+
+
+def _identities(given: IntArray | None, n: int) -> IntArray:
+    """Identities as given, each once; the rest numbered above the largest."""
+    if given is None:
+        return np.arange(1, n + 1, dtype=np.int64)
+    _, first = np.unique(given, return_index=True)
+    keep = np.zeros(n, dtype=bool)
+    keep[first] = True
+    keep &= given > 0
+    out = given.astype(np.int64)
+    out[~keep] = max(0, int(given.max(initial=0))) + np.arange(1, (~keep).sum() + 1)
+    return out
+
+
+def crossing_transects(start_lonlat: FloatArray, end_lonlat: FloatArray, coast_part: IntArray) -> BoolArray:
+    """Which transects of one coast cross another between their starts and their ends.
+
+    Parameters
+    ----------
+    start_lonlat, end_lonlat : (n, 2) array of float
+        Ends of each transect, degrees, longitudes unwrapped; NaN where it has none. Straight in between: where two
+        shelves cross is wanted, not to the metre.
+    coast_part : (n,) array of int
+        Only transects of the same piece of coast are compared.
+
+    Returns
+    -------
+    (n,) array of bool
+        True for both of a crossing pair.
+    """
+    crosses = np.zeros(len(start_lonlat), dtype=bool)
+    rows = np.flatnonzero(np.isfinite(start_lonlat).all(axis=1) & np.isfinite(end_lonlat).all(axis=1))
+    if len(rows) < 2:
+        return crosses
+    lines = shapely.linestrings(np.stack([start_lonlat[rows], end_lonlat[rows]], axis=1))
+    first, second = shapely.STRtree(lines).query(lines, predicate="intersects")
+    pair = (first < second) & (coast_part[rows[first]] == coast_part[rows[second]])
+    crosses[rows[first[pair]]] = True
+    crosses[rows[second[pair]]] = True
+    return crosses
