@@ -15,7 +15,7 @@ ObjectArray = NDArray[np.object_]
 
 
 def split_antimeridian(geometry: ObjectArray) -> ObjectArray:
-    """Same lines and points with longitudes from -180 to 180, lines cut where they cross the 180 meridian.
+    """Bring lines and points to longitudes from -180 to 180, cutting lines where they cross the 180 meridian.
 
     Parameters
     ----------
@@ -81,7 +81,7 @@ def _split_lines(lines: ObjectArray) -> ObjectArray:
     turn = np.floor(((lonlat[start, 0] + lonlat[start + 1, 0]) / 2 + 180.0) / 360.0)
     first = np.ones(start.size, dtype=bool)  # a piece starts with a new line or in a new turn
     first[1:] = (row[start[1:]] != row[start[:-1]]) | (turn[1:] != turn[:-1])
-    last = np.append(first[1:], True)  # noqa: FBT003
+    last = np.append(first[1:], True)
     piece = np.cumsum(first) - 1
 
     vertex = np.concatenate([start, start[last] + 1])

@@ -67,6 +67,16 @@ LAYERS: Final[Mapping[str, LayerKind]] = MappingProxyType({
         title="Response by period",
         description="Gain and lag of each transect, one row per wave and per point of its response curve.",
     ),
+    "coast_lines": LayerKind(
+        title="Generalised coast",
+        description="The coast that stations stand on, sea on the right hand: to edit and give back.",
+        geometry="line",
+    ),
+    "transect_lines": LayerKind(
+        title="Transects to edit",
+        description="Lines from the shoreline seaward, one per station: to edit and give back.",
+        geometry="line",
+    ),
     "run": LayerKind(
         title="How this was made",
         description="Settings, versions, sources, counts and cautions of the run.",
@@ -116,8 +126,9 @@ class Column:
 _LINES = ("coast_index", "transects")
 _TRANSECTS = ("transects",)
 _BREAKS = ("shelf_breaks",)
+_LAID = ("transects", "transect_lines")
 _DRAWN = ("coast_index", "transects", "shelf_breaks")
-_KEYED = ("coast_index", "transects", "shelf_breaks", "profiles", "response")
+_KEYED = ("coast_index", "transects", "shelf_breaks", "profiles", "response", "transect_lines")
 
 _NO_BREAK = "No shelf break: see status."
 _NO_BREAK_FIGURE = "No shelf break, or too little around it to say."
@@ -134,7 +145,7 @@ _TABLE: Final[tuple[tuple[str, tuple[str, ...], tuple[_Row, ...]], ...]] = (
         ("transect_id", "int64", "", "Transect number",
          "Number of the transect, the same in every layer.", ""),
     )),
-    ("coast", _DRAWN, (
+    ("coast", (*_DRAWN, "transect_lines"), (
         ("coast_part", "int64", "", "Part of the coast",
          "Number of the stretch of coast the station stands on.",
          "Transect drawn by hand, away from the coast line."),
@@ -142,7 +153,7 @@ _TABLE: Final[tuple[tuple[str, tuple[str, ...], tuple[_Row, ...]], ...]] = (
          "Distance of the station along its stretch of the generalised coast.",
          "Transect drawn by hand, away from the coast line."),
     )),
-    ("transects", _TRANSECTS, (
+    ("transects", _LAID, (
         ("lon_deg", "float64", "deg", "Longitude of the shore end",
          "Longitude where the transect leaves the shore.", ""),
         ("lat_deg", "float64", "deg", "Latitude of the shore end",
@@ -154,6 +165,8 @@ _TABLE: Final[tuple[tuple[str, tuple[str, ...], tuple[_Row, ...]], ...]] = (
          "Length of the transect over water that was used.", "No water was found: see status."),
         ("end_reason", "str", "", "Why the transect ends", "What ended the transect at its seaward end.",
          "The transect has no seaward end: see status."),
+    )),
+    ("transects", _TRANSECTS, (
         ("crosses", "bool", "", "Crosses a neighbour",
          "Whether it crosses a neighbouring transect before the break.", ""),
     )),
@@ -290,6 +303,11 @@ _TABLE: Final[tuple[tuple[str, tuple[str, ...], tuple[_Row, ...]], ...]] = (
         ("index", "float64", "", "Resonance index",
          "Tuning x strength, the largest over the first three modes.",
          "No index for this wave, or a row of the response curve."),
+    )),
+    ("coast", ("coast_lines",), (
+        ("coast_part", "int64", "", "Part of the coast", "Number of the stretch of coast, 1 the longest.", ""),
+        ("length_km", "float64", "km", "Length", "Length of the stretch.", ""),
+        ("closed", "bool", "", "Goes round", "Whether it goes round: an island, or a sea with land all round.", ""),
     )),
     ("pipeline", ("run",), (
         ("topic", "str", "", "What it is about", "Settings, versions, sources, counts or cautions.", ""),

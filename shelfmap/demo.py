@@ -10,7 +10,7 @@ from numpy.typing import NDArray
 
 from shelfmap.errors import GridError
 from shelfmap.geodesy import WGS84, local_projection
-from shelfmap.rasters import write_geotiff
+from shelfmap.rasters import replace_file, write_geotiff
 from shelfmap.synthetic import SyntheticGrid
 
 __all__ = ["demo_gauges", "demo_scenario", "demo_settings", "write_demo"]
@@ -24,6 +24,7 @@ NODATA: Final = -32768
 MIDDLE_LON_DEG: Final = -20.75
 MIDDLE_LAT_DEG: Final = -34.0
 SEAWARD_DEG: Final = 262.0
+LINE_OFF_KM: Final = 190.0  # the general line of the coast lies landward of the middle: most of the grid is sea
 WEST_DEG: Final = -26.75
 SOUTH_DEG: Final = -40.75
 CELL_DEG: Final = 0.05
@@ -33,8 +34,8 @@ DEEP_M: Final = 4300.0
 #: Stretches of coast: along [km], shelf width [km], depth of the break [m], e-folding length of the slope beyond
 #: [km], share of the breakless ramp, height of the land [m]. Between rows all of them change smoothly.
 _STRETCHES: Final = np.array([
-    [-700.0, 345.0, 108.0, 80.0, 0.0, 250.0],
-    [-330.0, 345.0, 108.0, 80.0, 0.0, 250.0],
+    [-700.0, 354.0, 108.0, 80.0, 0.0, 250.0],
+    [-330.0, 364.0, 108.0, 80.0, 0.0, 250.0],
     [-170.0, 130.0, 135.0, 70.0, 0.0, 350.0],
     [140.0, 115.0, 140.0, 70.0, 0.0, 450.0],
     [240.0, 18.0, 95.0, 32.0, 0.0, 1500.0],
@@ -56,10 +57,10 @@ class _Lobe(NamedTuple):
 
 _GULF: Final = _Lobe((-85.0, 25.0), (-20.0, -215.0), 46.0, 27.0, 75.0)
 _INLETS: Final = (
-    _Lobe((-520.0, 10.0), (-500.0, -62.0), 7.0, 5.0, 30.0),
-    _Lobe((150.0, 10.0), (163.0, -55.0), 7.0, 5.0, 40.0),
-    _Lobe((320.0, 10.0), (300.0, -50.0), 6.5, 5.0, 60.0),
-    _Lobe((560.0, 10.0), (590.0, -48.0), 6.5, 5.0, 25.0),
+    _Lobe((-520.0, 10.0), (-500.0, -62.0), 7.0, 6.0, 30.0),
+    _Lobe((150.0, 10.0), (163.0, -55.0), 7.0, 6.0, 40.0),
+    _Lobe((320.0, 10.0), (300.0, -50.0), 7.0, 6.0, 60.0),
+    _Lobe((560.0, 10.0), (590.0, -48.0), 7.0, 6.0, 25.0),
 )
 _LAKE: Final = _Lobe((-330.0, -165.0), (-280.0, -140.0), 14.0, 20.0, 45.0)
 _ISLANDS: Final = (
@@ -71,6 +72,72 @@ _ISLANDS: Final = (
     _Lobe((108.0, 48.0), (110.0, 50.0), 5.5, 5.5, 90.0),
 )
 _VOID: Final = _Lobe((-462.0, 205.0), (-430.0, 228.0), 24.0, 17.0, 0.0)
+
+#: Tide a straight wall would have, amplitude [m] and Greenwich phase lag [deg] at the middle; the lag grows down
+#: the coast at the pace of a long wave in the deep sea.
+_WALL_TIDE: Final = {"M2": (0.45, 95.0), "S2": (0.18, 123.0)}
+_LAG_DEG_PER_KM: Final = 0.04
+
+#: Gauges: name, place (along, off the smooth coast) [km], invented gain of M2 and S2 over the wall tide, lag [deg].
+_GAUGES: Final = (
+    ("Velmarrow", -620.0, 3.0, 3.7, 108.0),
+    ("Oskeld", -540.0, 3.0, 3.8, 106.0),
+    ("Tarrowin", -410.0, 3.0, 3.7, 104.0),
+    ("Brellane", -320.0, 3.0, 3.1, 92.0),
+    ("Isle Quorrin", -247.0, 148.0, 1.7, 62.0),
+    ("Pelskar", -150.0, 3.0, 1.35, 28.0),
+    ("Mirrowen", -18.0, -100.0, 1.9, 40.0),
+    ("Torvane", -20.0, -238.0, 2.2, 48.0),
+    ("Ambrist", 67.0, 3.0, 1.3, 27.0),
+    ("Keldrosk", 205.0, 3.0, 1.1, 21.0),
+    ("Skarn Vey", 370.0, 3.0, 1.03, 19.0),
+    ("Lanvossel", 610.0, 3.0, 1.1, 21.0),
+)
+
+_SETTINGS: Final = """\
+# Settings of the demo: an invented coast with every case in one picture, and invented tide gauges.
+# Every section is shown; a line left out takes its default. Paths are relative to this file.
+title = "Invented demo coast"
+
+[grid]
+path = "{grid}"
+positive = "up"             # values are elevations; "down" for depths, "auto" to let shelfmap decide
+
+[coast]
+level_m = 0.0               # elevation of the shoreline above the water level
+generalise_km = 20.0        # inlets narrower than this do not turn the normals
+smallest_island_km2 = 500.0 # islands below this area get no stations
+
+[transects]
+spacing_km = 20.0           # one station every 20 km of generalised coast
+length_km = 600.0           # how far seaward the shelf break is searched
+
+[shelf_break]
+slope = 0.01                # gradient at which the continental slope begins
+confirm_slope = 0.025       # gradient it must reach further on
+smoothing_km = 5.0
+sustain_km = 5.0
+shallowest_m = 20.0
+deepest_m = 550.0
+
+[response]
+constituents = ["M2", "S2", "N2", "K1", "O1"]
+periods_h = [1.0, 3.0]      # further periods: seiches, meteotsunamis, tsunamis
+rotation = true
+friction_m_s = 1.0e-3
+deep_m = 4000.0
+
+[depth_error]               # how wrong the depths may be: sd = sqrt(fixed_m^2 + (per_depth * depth)^2)
+fixed_m = 0.5
+per_depth = 0.012
+correlation_km = 20.0
+
+[output]
+path = "demo.gpkg"
+crs = "EPSG:4326"
+profiles = true
+response_curves = true
+"""
 
 
 def demo_scenario(seed: int = SEED) -> SyntheticGrid:
@@ -100,16 +167,16 @@ def demo_scenario(seed: int = SEED) -> SyntheticGrid:
     n_rows, n_cols = SHAPE
     lon, lat = np.meshgrid(WEST_DEG + CELL_DEG * np.arange(n_cols), SOUTH_DEG + CELL_DEG * np.arange(n_rows))
     along_km, off_km = _scene_from_lonlat(lon, lat)
-    ragged_km = 2.2 * _relief(along_km, off_km, rng, 25.0, 120.0)
+    ragged_km = 3.0 * _relief(along_km, off_km, rng, 25.0, 120.0)
     rough = _relief(along_km, off_km, rng, 60.0, 300.0)
     sea_km = off_km - _coast_km(along_km)
     elevation_m = _open_coast(along_km, sea_km + ragged_km * np.exp(-np.maximum(sea_km, 0.0) / 40.0), rough)
     for lobe in (_GULF, *_INLETS, _LAKE):
-        elevation_m = np.minimum(elevation_m, _carved(_inside_km(along_km, sea_km, lobe) + ragged_km, lobe.relief_m))
+        inside_km = _inside_km(along_km, sea_km, lobe) + ragged_km * min(1.0, lobe.start_half_km / 20.0)
+        elevation_m = np.minimum(elevation_m, _carved(inside_km, lobe.relief_m))
     for lobe in _ISLANDS:
-        elevation_m = np.maximum(
-            elevation_m, -_carved(_inside_km(along_km, sea_km, lobe) + ragged_km / 2, lobe.relief_m)
-        )
+        inside_km = _inside_km(along_km, sea_km, lobe) + ragged_km * min(1.0, lobe.start_half_km / 20.0)
+        elevation_m = np.maximum(elevation_m, -_carved(inside_km, lobe.relief_m))
     elevation_m = np.rint(elevation_m)
     elevation_m[_inside_km(along_km, sea_km, _VOID) + ragged_km > 0.0] = np.nan
     return SyntheticGrid(
@@ -123,12 +190,128 @@ def demo_scenario(seed: int = SEED) -> SyntheticGrid:
     )
 
 
+def demo_gauges() -> dict[str, list[str] | list[float]]:
+    """Give the twelve invented gauges of the demo, column by column.
+
+    Returns
+    -------
+    dict of str to list
+        ``id``, ``name``, ``lon`` and ``lat`` (degrees), ``source``, and for M2 and S2 the amplitude ``_amp_m``
+        (metres) and Greenwich phase lag ``_phase_deg`` (degrees, 0 to 360): the tide at a straight wall times an
+        invented gain like that of a shelf of that width.
+
+    Examples
+    --------
+    >>> gauges = demo_gauges()
+    >>> gauges["name"][0], gauges["M2_amp_m"][0], gauges["M2_phase_deg"][0]
+    ('Velmarrow', 1.665, 178.2)
+    """
+    names, *numbers = zip(*_GAUGES, strict=True)
+    along_km, sea_km, gain, lag_deg = (np.array(column) for column in numbers)
+    lon, lat = _lonlat_from_scene(along_km, sea_km + _coast_km(along_km))
+    columns: dict[str, list[str] | list[float]] = {
+        "id": [f"D{number:02d}" for number in range(1, len(names) + 1)],
+        "name": list(names),
+        "lon": lon.round(3).tolist(),
+        "lat": lat.round(3).tolist(),
+        "source": ["invented"] * len(names),
+    }
+    for wave, (wall_m, wall_deg) in _WALL_TIDE.items():
+        columns[f"{wave}_amp_m"] = (wall_m * gain).round(3).tolist()
+        columns[f"{wave}_phase_deg"] = ((wall_deg + lag_deg + _LAG_DEG_PER_KM * along_km) % 360.0).round(1).tolist()
+    return columns
+
+
+def demo_settings(grid: str = "demo.tif") -> str:
+    """Text of the demo's settings, TOML, for a grid named relative to the settings file.
+
+    Examples
+    --------
+    >>> demo_settings().splitlines()[2]
+    'title = "Invented demo coast"'
+    """
+    return _SETTINGS.format(grid=grid)
+
+
+def write_demo(folder: str | Path, *, overwrite: bool = False) -> list[Path]:
+    """Write the demo's grid, gauges and settings into a folder, which is made if need be.
+
+    Parameters
+    ----------
+    folder : str or Path
+        Where ``demo.tif``, ``demo_gauges.csv`` and ``demo.toml`` go.
+    overwrite : bool
+        Whether existing files of these names are replaced.
+
+    Returns
+    -------
+    list of Path
+        The three files, in that order.
+
+    Raises
+    ------
+    GridError
+        If one of them exists and `overwrite` is off (nothing is written then), or cannot be written.
+
+    Examples
+    --------
+    >>> import tempfile
+    >>> with tempfile.TemporaryDirectory() as folder:
+    ...     [path.name for path in write_demo(folder)]
+    ['demo.tif', 'demo_gauges.csv', 'demo.toml']
+    """
+    folder = Path(folder)
+    grid_path, gauges_path, settings_path = paths = [
+        folder / name for name in ("demo.tif", "demo_gauges.csv", "demo.toml")
+    ]
+    taken = [str(path) for path in paths if path.exists()]
+    if taken and not overwrite:
+        raise GridError(f"{', '.join(taken)} exists already; allow overwriting or choose another folder")
+    try:
+        folder.mkdir(parents=True, exist_ok=True)
+    except OSError as error:
+        raise GridError(f"folder {folder} cannot be made: {error.strerror}; choose another folder") from error
+    grid = demo_scenario()
+    write_geotiff(
+        grid_path,
+        np.where(np.isnan(grid.elevation_m), NODATA, grid.elevation_m).astype(np.int16),
+        x0=grid.x0,
+        y0=grid.y0,
+        dx=grid.dx,
+        dy=grid.dy,
+        crs=grid.crs,
+        nodata=NODATA,
+        description="elevation above mean sea level, positive up",
+        tags={"TIFFTAG_IMAGEDESCRIPTION": grid.description},
+        overwrite=overwrite,
+    )
+    replace_file(gauges_path, _csv(demo_gauges()).encode())
+    replace_file(settings_path, demo_settings().encode())
+    return paths
+
+
+def _csv(columns: dict[str, list[str] | list[float]]) -> str:
+    """Columns as comma-separated text with a heading."""
+    text = io.StringIO()
+    writer = csv.writer(text, lineterminator="\n")
+    writer.writerow(columns)
+    writer.writerows(zip(*columns.values(), strict=True))
+    return text.getvalue()
+
+
 def _scene_from_lonlat(lon_deg: FloatArray, lat_deg: FloatArray) -> tuple[FloatArray, FloatArray]:
     """Turn longitude and latitude into kilometres along and off the coast's general line."""
     x_m, y_m = local_projection(MIDDLE_LON_DEG, MIDDLE_LAT_DEG).from_lonlat(lon_deg, lat_deg)
     sine, cosine = np.sin(np.radians(SEAWARD_DEG)), np.cos(np.radians(SEAWARD_DEG))
-    # the line lies 190 km east of the middle, so that most of the grid is sea
-    return (sine * y_m - cosine * x_m) / 1e3, (sine * x_m + cosine * y_m) / 1e3 + 190.0
+    return (sine * y_m - cosine * x_m) / 1e3, (sine * x_m + cosine * y_m) / 1e3 + LINE_OFF_KM
+
+
+def _lonlat_from_scene(along_km: FloatArray, off_km: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Undo `_scene_from_lonlat`."""
+    sine, cosine = np.sin(np.radians(SEAWARD_DEG)), np.cos(np.radians(SEAWARD_DEG))
+    off_km = off_km - LINE_OFF_KM
+    x_m, y_m = (sine * off_km - cosine * along_km) * 1e3, (sine * along_km + cosine * off_km) * 1e3
+    return local_projection(MIDDLE_LON_DEG, MIDDLE_LAT_DEG).to_lonlat(x_m, y_m)
 
 
 def _coast_km(along_km: FloatArray) -> FloatArray:
@@ -154,7 +337,8 @@ def _between(along_km: FloatArray, column: int) -> FloatArray:
     knots, values = _STRETCHES[:, 0], _STRETCHES[:, column]
     row = np.clip(np.searchsorted(knots, along_km) - 1, 0, knots.size - 2)
     t = np.clip((along_km - knots[row]) / (knots[row + 1] - knots[row]), 0.0, 1.0)
-    return values[row] + (values[row + 1] - values[row]) * t * t * (3.0 - 2.0 * t)
+    between: FloatArray = values[row] + (values[row + 1] - values[row]) * t * t * (3.0 - 2.0 * t)
+    return between
 
 
 def _inside_km(along_km: FloatArray, sea_km: FloatArray, lobe: _Lobe) -> FloatArray:
@@ -181,4 +365,5 @@ def _relief(
     field = np.zeros_like(along_km)
     for length, angle, start in zip(length_km, bearing, phase, strict=True):
         field += np.cos(2.0 * np.pi / length * (np.cos(angle) * along_km + np.sin(angle) * off_km) + start)
-    return field * np.sqrt(2.0 / n_waves)
+    field *= np.sqrt(2.0 / n_waves)
+    return field

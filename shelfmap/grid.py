@@ -5,47 +5,37 @@ Inside, rows run from south to north and columns from west to east, `depth_m` is
 (col, row) is a float that is 0 at the centre of the south-west cell.
 """
 
-import re
-import warnings
-from collections.abc import Iterable, Iterator, Mapping
-from contextlib import contextmanager
+from collections.abc import Iterable, Iterator
 from dataclasses import dataclass, replace
-from functools import lru_cache
-from pathlib import Path
 from typing import Any, Final
 
 import numpy as np
-import rasterio
 from numpy.typing import ArrayLike, NDArray
-from rasterio.enums import MaskFlags
-from rasterio.errors import NotGeoreferencedWarning, RasterioError
-from rasterio.windows import Window
 
 from shelfmap._kernels.sampling import INSIDE, OUTSIDE, VOID, sample_points
 from shelfmap.errors import GridError
-from shelfmap.geodesy import WGS84, Projection, distance_bearing, unwrap_lon_deg
+from shelfmap.geodesy import Projection, distance_bearing, unwrap_lon_deg
+from shelfmap.rasterfile import Indices, RasterFile, RasterHeader, projection_of, read_header
 from shelfmap.settings import GridSettings
 from shelfmap.vertical import Positive, check_unit, datum_words, decide_positive
 
-__all__ = ["FARTHEST_VALUE_M", "INSIDE", "OUTSIDE", "VOID", "Grid", "GridSource", "disk_file", "open_grid"]
+__all__ = ["FARTHEST_VALUE_M", "INSIDE", "OUTSIDE", "VOID", "Grid", "GridSource", "open_grid"]
 
 FloatArray = NDArray[np.float64]
 StateArray = NDArray[np.uint8]
-Indices = tuple[int, int, int, int]
 
 #: No sea or mountain is farther from the zero than this, metres: such a value means "missing".
 FARTHEST_VALUE_M: Final = 12_000.0
 
-#: Elevation that missing cells get where they count as land, metres: with it the shoreline of a grid that holds
-#: depths only falls between its last wet cell and the next.
+#: Elevation above the water that missing cells get where they count as land, metres: the shoreline of a grid that
+#: holds depths only then falls between its last wet cell and the next.
 VOID_LAND_ELEVATION_M: Final = 10.0
 
 # A sample of a large grid: this many windows a side, of this many cells a side.
 _SAMPLE_WINDOWS: Final = 8
 _SAMPLE_CELLS: Final = 256
-
-_LOCAL_ARCHIVE: Final = re.compile(r"/vsi(zip|tar|gzip)/+(.+?\.(?:zip|tgz|tar\.gz|tar|gz))((?:/.*)?)", re.IGNORECASE)
-_NETWORK_FILE: Final = re.compile(rb"<(GDAL_WMS|GDAL_WMTS|WCS_GDAL|WMS_|WMT_|WMTS|Capabilities)")
+# Scattered points are read in tiles of this many cells a side.
+_TILE_CELLS: Final = 512
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -118,26 +108,16 @@ class GridSource:
 
     Parameters
     ----------
-    path : str
-        Name GDAL opens.
-    band : int
-        Band of the raster, from 1.
-    dtype : str
-        Type its values are stored in.
+    file : RasterFile
+        How to read the values.
     crs_wkt, crs_why : str
         Coordinate system and where it comes from.
-    is_geographic : bool
-        True where coordinates are degrees.
     x0, y0 : float
         Centre of the south-west cell, grid units.
     dx, dy : float
         Cell sides, grid units, > 0.
     n_rows, n_cols : int
-        Cells, without a column that repeats the first 360 degrees further on.
-    file_cols : int
-        Columns of the file.
-    flip_rows, flip_cols : bool
-        Whether the file runs from north to south, from east to west.
+        Cells, without a last column that repeats the first 360 degrees further on.
     wraps : bool
         True where the columns go once round the globe.
     positive, positive_why : str
@@ -146,43 +126,40 @@ class GridSource:
         How far the water stands above the grid's zero.
     void_is_land : bool
         Whether missing cells read as land.
-    nodata : float or None
-        Stored value that means missing.
-    scale, offset : float
-        ``value = scale * stored + offset``.
     vertical_words : tuple of str
         Metadata that name a vertical datum.
     """
 
-    path: str
-    band: int
-    dtype: str
+    file: RasterFile
     crs_wkt: str
     crs_why: str
-    is_geographic: bool
     x0: float
     y0: float
     dx: float
     dy: float
     n_rows: int
     n_cols: int
-    file_cols: int
-    flip_rows: bool
-    flip_cols: bool
     wraps: bool
     positive: Positive
     positive_why: str
     level_shift_m: float
     void_is_land: bool
-    nodata: float | None
-    scale: float
-    offset: float
     vertical_words: tuple[str, ...]
+
+    @property
+    def path(self) -> str:
+        """Name of the raster."""
+        return self.file.path
+
+    @property
+    def is_geographic(self) -> bool:
+        """True where coordinates are degrees."""
+        return self.projection.is_geographic
 
     @property
     def projection(self) -> Projection:
         """Way between the grid's coordinates and longitude, latitude."""
-        return _projection(self.crs_wkt)
+        return projection_of(self.crs_wkt)
 
     @property
     def step_x_m(self) -> float:
@@ -291,9 +268,7 @@ class GridSource:
 
     def read_many(self, windows: Iterable[Indices]) -> Iterator[Grid]:
         """Depths of several windows, one after the other, the file opened once; see `read`."""
-        with _opened(self.path) as (dataset, _):
-            if (dataset.width, dataset.height) != (self.file_cols, self.n_rows):
-                raise GridError(f"{self.path}: the file has changed since it was opened; start again")
+        with self.file.opened() as dataset:
             for row0, row1, col0, col1 in windows:
                 rows = max(row0, 0), min(row1, self.n_rows)
                 cols = (col0, min(col1, col0 + self.n_cols)) if self.wraps else (max(col0, 0), min(col1, self.n_cols))
@@ -305,45 +280,127 @@ class GridSource:
                 yield self._window(dataset, rows, cols)
 
     def _window(self, dataset: Any, rows: tuple[int, int], cols: tuple[int, int]) -> Grid:
-        """Read a window that lies on the grid, in at most two pieces where it runs over the seam."""
+        """Read a window that lies on the grid, in two pieces where it runs over the seam."""
         first = cols[0] % self.n_cols
         last = first + cols[1] - cols[0]
-        pieces = [(first, min(last, self.n_cols)), (0, max(last - self.n_cols, 0))]
-        depths = [self._depth(dataset, rows, piece) for piece in pieces if piece[0] < piece[1]]
-        depth_m = np.ascontiguousarray(depths[0] if len(depths) == 1 else np.hstack(depths))
-        return Grid(depth_m=depth_m, row0=rows[0], col0=first, wrap_cols=self.n_cols if self.wraps else 0)
-
-    def _depth(self, dataset: Any, rows: tuple[int, int], cols: tuple[int, int]) -> NDArray[np.float32]:
-        row_off = self.n_rows - rows[1] if self.flip_rows else rows[0]
-        col_off = self.file_cols - cols[1] if self.flip_cols else cols[0]
-        window = Window(col_off, row_off, cols[1] - cols[0], rows[1] - rows[0])
-        stored = dataset.read(self.band, window=window)
-        missing = _is_missing(stored, self.nodata)
-        if MaskFlags.per_dataset in dataset.mask_flag_enums[self.band - 1]:
-            missing |= dataset.read_masks(self.band, window=window) == 0
-        value_m = self.scale * stored.astype(np.float64) + self.offset
+        pieces = [(first, min(last, self.n_cols)), (0, last - self.n_cols)]
+        value_m = np.hstack([self.file.values(dataset, (*rows, *piece)) for piece in pieces if piece[0] < piece[1]])
         depth_m = self.level_shift_m + (value_m if self.positive == "down" else -value_m)
-        depth_m[missing] = -VOID_LAND_ELEVATION_M if self.void_is_land else np.nan
-        return depth_m[:: -1 if self.flip_rows else 1, :: -1 if self.flip_cols else 1].astype(np.float32)
+        if self.void_is_land:
+            depth_m[np.isnan(depth_m)] = -VOID_LAND_ELEVATION_M
+        return Grid(
+            depth_m=np.ascontiguousarray(depth_m, dtype=np.float32),
+            row0=rows[0],
+            col0=first,
+            wrap_cols=self.n_cols if self.wraps else 0,
+        )
+
+    def sample(self, lon_deg: ArrayLike, lat_deg: ArrayLike) -> tuple[FloatArray, StateArray]:
+        """Depth and state at points anywhere on the grid, read from the file tile by tile; see `Grid.sample`."""
+        col, row = np.broadcast_arrays(*self.index_of(lon_deg, lat_deg))
+        depth_m = np.full(col.shape, np.nan)
+        state = np.full(col.shape, OUTSIDE, dtype=np.uint8)
+        near = (np.abs(col) <= self.n_cols) & (row > -1) & (row < self.n_rows)
+        if not self.wraps:
+            near &= (col > -1) & (col < self.n_cols)
+        here = np.flatnonzero(near)
+        tile_row, tile_col = (np.ravel(index)[here].astype(int) // _TILE_CELLS for index in (row, col))
+        n_across = self.n_cols // _TILE_CELLS + 1
+        tile = tile_row * n_across + tile_col
+        order = np.argsort(tile, kind="stable")
+        tiles, starts = np.unique(tile[order], return_index=True)
+        corners = [(t // n_across * _TILE_CELLS, t % n_across * _TILE_CELLS) for t in tiles.tolist()]
+        grids = self.read_many((r, r + _TILE_CELLS + 1, c, c + _TILE_CELLS + 1) for r, c in corners)
+        for part, grid in zip(np.split(here[order], starts[1:]), grids, strict=bool(corners)):
+            depth_m.flat[part], state.flat[part] = grid.sample(col.flat[part], row.flat[part])
+        return depth_m, state
 
 
-def _check_extent(source: GridSource) -> None:
-    """Refuse degrees taken for metres, and metres taken for degrees."""
-    east, north = source.x0 + (source.n_cols - 1) * source.dx, source.y0 + (source.n_rows - 1) * source.dy
-    extent = f"x {source.x0:.8g} to {east:.8g}, y {source.y0:.8g} to {north:.8g}"
-    looks_geographic = max(-source.x0, east) <= 720 and max(-source.y0, north) <= 90 + 1e-3 * source.dy
-    if source.is_geographic and not looks_geographic:
+def open_grid(settings: GridSettings) -> GridSource:
+    """Understand a raster from its header and a bounded sample of its values.
+
+    Parameters
+    ----------
+    settings : GridSettings
+        Path, and whatever the file does not say or says wrong.
+
+    Returns
+    -------
+    GridSource
+
+    Raises
+    ------
+    GridError
+        If the file is missing, damaged, on a network, not a regular north-up grid of real values in metres, has no
+        usable coordinate system, or does not tell elevations from depths.
+    """
+    header = read_header(settings)
+    name = header.file.path
+    _check_extent(header)
+    check_unit(header.vertical.get("units", ""), name)
+    as_stored = _source_of(header)
+    lowest, highest = _sampled_range(as_stored)
+    positive, why = settings.positive, "set by grid.positive"
+    if positive == "auto":
+        positive, why = decide_positive(header.vertical, lowest, highest, name)
+    return replace(
+        as_stored,
+        positive=positive,
+        positive_why=why,
+        level_shift_m=settings.level_shift_m,
+        void_is_land=settings.void_is_land,
+    )
+
+
+def _source_of(header: RasterHeader) -> GridSource:
+    """Give the source of a header, values taken as stored and as elevations until the sign is known."""
+    is_geographic = projection_of(header.crs_wkt).is_geographic
+    n_cols = header.file.n_cols
+    cells_round = 360.0 / header.dx
+    # a last column one turn from the first repeats it; a tenth of a cell allows for steps stored in short decimals
+    repeats = is_geographic and abs(n_cols - 1 - cells_round) < 0.1
+    wraps = repeats or (is_geographic and abs(n_cols - cells_round) < 0.1)
+    n_cols -= repeats
+    return GridSource(
+        file=header.file,
+        crs_wkt=header.crs_wkt,
+        crs_why=header.crs_why,
+        x0=header.x0,
+        y0=header.y0,
+        dx=360.0 / n_cols if wraps else header.dx,
+        dy=header.dy,
+        n_rows=header.file.n_rows,
+        n_cols=n_cols,
+        wraps=wraps,
+        positive="up",
+        positive_why="",
+        level_shift_m=0.0,
+        void_is_land=False,
+        vertical_words=datum_words(header.tags),
+    )
+
+
+def _check_extent(header: RasterHeader) -> None:
+    """Refuse degrees taken for metres, metres taken for degrees, and more than one turn of the globe."""
+    projection, name = projection_of(header.crs_wkt), header.file.path
+    east = header.x0 + (header.file.n_cols - 1) * header.dx
+    north = header.y0 + (header.file.n_rows - 1) * header.dy
+    farthest_x, farthest_y = max(-header.x0, east), max(-header.y0, north)
+    extent = f"x {header.x0:.8g} to {east:.8g}, y {header.y0:.8g} to {north:.8g}"
+    if not projection.is_geographic:
+        if farthest_x <= 360 and farthest_y <= 90:
+            raise GridError(
+                f"{name}: {extent} look like degrees, but {projection.name} counts in metres; "
+                'set grid.crs = "EPSG:4326" if they are degrees'
+            )
+        return
+    if farthest_x > 720 or farthest_y > 90 + 1e-3 * header.dy:
         raise GridError(
-            f"{source.path}: {extent} are no degrees, but {source.projection.name} counts in degrees; "
+            f"{name}: {extent} are no degrees, but {projection.name} counts in degrees; "
             "set grid.crs to the system the grid is in"
         )
-    if source.is_geographic and source.n_cols * source.dx > 360 * (1 + 1e-6):
-        raise GridError(f"{source.path}: {extent} goes round the globe more than once; cut it to 360 degrees")
-    if not source.is_geographic and max(-source.x0, east) <= 360 and max(-source.y0, north) <= 90:
-        raise GridError(
-            f"{source.path}: {extent} look like degrees, but {source.projection.name} counts in metres; "
-            'set grid.crs = "EPSG:4326" if they are degrees'
-        )
+    if east - header.x0 > 360 + 0.1 * header.dx:
+        raise GridError(f"{name}: {extent} goes round the globe more than once; cut it to 360 degrees")
 
 
 def _sampled_range(source: GridSource) -> tuple[float, float]:
@@ -373,5 +430,3 @@ def _sampled_range(source: GridSource) -> tuple[float, float]:
                 f"grid.nodata to it, else convert the grid to metres"
             )
     return (lowest, highest) if lowest <= highest else (np.nan, np.nan)
-
-

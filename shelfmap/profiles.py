@@ -7,24 +7,24 @@ import numpy as np
 import shapely
 from numpy.typing import NDArray
 
+from shelfmap import words
 from shelfmap._kernels import tracing
 from shelfmap.basins import SHORE_HAIR_M
+from shelfmap.geodesy import distance_bearing
 from shelfmap.grid import GridSource
 from shelfmap.settings import TransectSettings
 from shelfmap.transects import Transects
 
-__all__ = ["END_REASONS", "START_REASONS", "Profiles", "sample_profiles", "step_of"]
+__all__ = ["END_REASONS", "START_REASONS", "Profiles", "distance_along", "place_on", "sample_profiles", "step_of"]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 BoolArray = NDArray[np.bool_]
 
-#: Why a profile ends, in the order of the compiled codes; islands are told from other land afterwards.
-END_REASONS: Final = ("search_length", "edge_of_grid", "facing_land", "void", "island")
+#: Why a profile ends, in the order of the compiled codes; islands are told from other land after the tracing.
+END_REASONS: Final = tuple(words.END_REASONS)
 #: How a profile starts, in the order of the compiled codes.
 START_REASONS: Final = ("shore", "open_water", "not_sea", "edge_of_grid", "void")
-ISLAND: Final = END_REASONS.index("island")
-
 #: Land or missing depth of at most this many samples is bridged.
 SHORT_GAP_SAMPLES: Final = 2
 #: Missing depth of at most this share of the travel time is filled.
@@ -112,7 +112,6 @@ def sample_profiles(
     m = int((np.nanmax(transects.node_m) - np.nanmin(transects.node_m)) / step_m) + 2
     col, row = _node_index(source, transects)
     grid = source.read(*_window(source, col, row))
-    drawn = np.isnan(transects.piece_m)
     depth_m, filled = np.full((n, m), np.nan), np.zeros((n, m), dtype=np.uint8)
     shore_m, land_m = np.full(n, np.nan), np.full(n, np.nan)
     start, end = np.zeros(n, dtype=np.int64), np.full(n, -1, dtype=np.int64)
@@ -120,12 +119,12 @@ def sample_profiles(
     tracing.trace_rows(
         grid.depth_m, grid.row0, grid.col0,
         transects.node_m, row, col, np.isfinite(transects.node_m).sum(axis=1),
-        step_m, np.where(drawn, np.nanmax(transects.node_m, axis=1) / 2, seek_m),
+        step_m, np.where(transects.is_drawn, np.nanmax(transects.node_m, axis=1) / 2, seek_m),
         SHORT_GAP_SAMPLES, SHORT_GAP_SHARE, LEAST_SPIKE_M, SHORE_HAIR_M,
         depth_m, filled, shore_m, start, n_samples, end, land_m, counts,
     )  # fmt: skip
     shore_m[start > tracing.IN_WATER] = np.nan
-    end[_ends_at_islet(transects, end, shore_m + land_m, islets)] = ISLAND
+    end[_ends_at_islet(transects, end, shore_m + land_m, islets)] = tracing.ISLAND
     shore_lon, shore_lat = place_on(transects, shore_m)
     width = max(1, int(n_samples.max(initial=1)))
     return Profiles(
@@ -167,6 +166,20 @@ def place_on(transects: Transects, at_m: FloatArray) -> tuple[FloatArray, FloatA
         lon_deg[k] = np.interp(at_m[k], node_m, transects.node_lon_deg[k, known])
         lat_deg[k] = np.interp(at_m[k], node_m, transects.node_lat_deg[k, known])
     return lon_deg, lat_deg
+
+
+def distance_along(transects: Transects, row: int, lon_deg: float, lat_deg: float) -> float:
+    """Distance from the station to where a point near a transect projects on it, metres; past its ends, the end."""
+    known = np.isfinite(transects.node_m[row])
+    node_m = transects.node_m[row, known]
+    node_lon, node_lat = transects.node_lon_deg[row, known], transects.node_lat_deg[row, known]
+    away_m, _ = distance_bearing(node_lon, node_lat, lon_deg, lat_deg)
+    leg_m = np.diff(node_m)
+    share = np.clip((away_m[:-1] ** 2 - away_m[1:] ** 2 + leg_m**2) / (2 * leg_m**2), 0.0, 1.0)
+    off_m2 = away_m[:-1] ** 2 - 2 * share * leg_m * 0.5 * (away_m[:-1] ** 2 - away_m[1:] ** 2 + leg_m**2) / leg_m
+    off_m2 += (share * leg_m) ** 2
+    nearest = int(np.argmin(off_m2))
+    return float(node_m[nearest] + share[nearest] * leg_m[nearest])
 
 
 def _node_index(source: GridSource, transects: Transects) -> tuple[FloatArray, FloatArray]:

@@ -6,7 +6,7 @@ from south to north, columns from west to east, scaled, and NaN where missing.
 
 import re
 import warnings
-from collections.abc import Iterable, Iterator, Mapping
+from collections.abc import Iterator, Mapping
 from contextlib import contextmanager
 from dataclasses import dataclass
 from functools import lru_cache
@@ -92,7 +92,8 @@ class RasterFile:
         if self.nodata is not None:
             # a missing value such as -9999.9 is compared as the stored type rounds it
             floating = np.issubdtype(stored.dtype, np.floating)
-            missing |= stored == (stored.dtype.type(self.nodata) if floating else self.nodata)
+            with np.errstate(over="ignore"):
+                missing |= stored == (stored.dtype.type(self.nodata) if floating else self.nodata)
         if MaskFlags.per_dataset in dataset.mask_flag_enums[self.band - 1]:
             missing |= dataset.read_masks(self.band, window=stored_window) == 0
         value = self.scale * stored.astype(np.float64) + self.offset
@@ -193,7 +194,8 @@ def _opened(name: str) -> Iterator[tuple[Any, bool]]:
     except RasterioError as error:
         reason = str(error.__cause__ or error).splitlines()[0][:160]
         raise GridError(
-            f"{name}: cannot be read as a raster ({reason}); give a whole file in a format GDAL reads, such as GeoTIFF or netCDF"
+            f"{name}: cannot be read as a raster ({reason}); "
+            "give a whole file in a format GDAL reads, such as GeoTIFF or netCDF"
         ) from error
 
 
@@ -241,11 +243,12 @@ def _local_name(path: Path) -> str:
 def _with_variable(name: str, variable: str | None) -> str:
     """Name GDAL opens for one variable of a file that may hold several."""
     with _opened(name) as (dataset, _):
-        names = {re.split(r"[:/]", sub)[-1]: sub for sub in dataset.subdatasets}
-        only = dataset.tags(1).get("NETCDF_VARNAME", "") if dataset.count else ""
+        names: dict[str, str] = {re.split(r"[:/]", sub)[-1]: sub for sub in dataset.subdatasets}
+        has_bands = dataset.count > 0
+        only = dataset.tags(1).get("NETCDF_VARNAME", "") if has_bands else ""
     known = ", ".join(names) or only or "none"
     if variable is None:
-        if names and not only and dataset.count == 0:
+        if names and not has_bands:
             raise GridError(f"{name}: holds several variables ({known}); name one in grid.variable")
         return name
     if variable not in names and variable != only:
@@ -293,7 +296,7 @@ def _crs_of(dataset: Any, wanted: str | None, tags: Mapping[str, str], name: str
             raise GridError(f"{name}: {system.name!r} has a rotated pole or a meridian other than Greenwich{cure}")
         if abs(system.axis_info[0].unit_conversion_factor - np.pi / 180) > 1e-9:
             raise GridError(f"{name}: {system.name!r} counts in {system.axis_info[0].unit_name}, not degrees{cure}")
-    return system.to_wkt(), why
+    return str(system.to_wkt()), why
 
 
 def _has_degree_axes(tags: Mapping[str, str]) -> bool:

@@ -1,5 +1,6 @@
 """Elevations as a GeoTIFF on disk: whole or not at all."""
 
+import contextlib
 from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
@@ -13,7 +14,7 @@ from rasterio.io import MemoryFile
 
 from shelfmap.errors import GridError
 
-__all__ = ["write_geotiff"]
+__all__ = ["replace_file", "write_geotiff"]
 
 #: Predictor of the deflate compression by kind of number: differences for whole numbers, byte planes for reals.
 _PREDICTOR = {"int16": 2, "float32": 3}
@@ -102,7 +103,7 @@ def write_geotiff(  # noqa: PLR0913 - a raster's place is five numbers, and each
             target.set_band_description(1, description)
             target.set_band_unit(1, unit)
             target.update_tags(**dict(sorted((tags or {}).items())))
-        _replace(path, memory.getbuffer())
+        replace_file(path, memory.getbuffer())
     return path
 
 
@@ -124,7 +125,7 @@ def _storable(elevation: NDArray[Any], nodata: float | None) -> NDArray[Any]:
 def _fits(value: float, dtype: np.dtype[Any]) -> bool:
     """Whether a number survives being stored as `dtype`."""
     if dtype.kind == "f":
-        return bool(np.isnan(value) or abs(value) <= np.finfo(dtype).max)
+        return bool(np.isnan(value) or abs(value) <= float(np.finfo(dtype).max))
     limits = np.iinfo(dtype)
     return float(value).is_integer() and limits.min <= value <= limits.max
 
@@ -139,15 +140,32 @@ def _check_target(path: Path, *, overwrite: bool) -> None:
         raise GridError(f"{path} exists; allow overwriting or choose another name")
 
 
-def _replace(path: Path, content: memoryview) -> None:
-    """Put `content` under `path` in one move; on failure leave what was there."""
-    part = path.with_name(f"{path.name}.part")
+def replace_file(path: Path, content: bytes | memoryview) -> None:
+    """Put bytes under a name in one move: all of them are there, or what was there before.
+
+    Raises
+    ------
+    GridError
+        If they cannot be written, with the system's reason.
+
+    Examples
+    --------
+    >>> import tempfile
+    >>> with tempfile.TemporaryDirectory() as folder:
+    ...     replace_file(Path(folder, "note.txt"), b"80 m")
+    ...     Path(folder, "note.txt").read_text()
+    '80 m'
+    """
+    target = path.resolve()  # through links, so that a link stays one
+    part = target.with_name(f"{target.name}.part")
     try:
         part.write_bytes(content)
-        part.replace(path)
+        part.replace(target)
     except OSError as error:
-        part.unlink(missing_ok=True)
         raise GridError(
             f"{path} cannot be written: {error.strerror}; free space, close the program that holds it "
             "or choose a folder you may write to"
         ) from error
+    finally:
+        with contextlib.suppress(OSError):
+            part.unlink()

@@ -82,7 +82,7 @@ def _move(part: Path, target: Path) -> None:
         part.replace(target)
     except OSError as error:
         raise LayerError(
-            f"output {target} cannot be put in place ({error.strerror}); close it in other programs or give another name"
+            f"output {target} cannot be put in place ({error.strerror}); close it in other programs or use another name"
         ) from error
 
 
@@ -97,7 +97,7 @@ def _refuse_if_held(target: Path) -> None:
             database.execute("ROLLBACK")
     except sqlite3.OperationalError as error:
         raise LayerError(
-            f"output {target} is in use by another program ({error}); close it there and run again, or give another name"
+            f"output {target} is in use by another program ({error}); close it there and run again, or use another name"
         ) from error
     except sqlite3.DatabaseError:
         return  # no SQLite file, so nobody holds one

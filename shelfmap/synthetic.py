@@ -51,12 +51,12 @@ class SyntheticGrid:
     @property
     def x(self) -> FloatArray:
         """(n_cols,) cell centres, west to east, units of `crs`."""
-        return self.x0 + self.dx * np.arange(self.elevation_m.shape[1])
+        return np.asarray(self.x0 + self.dx * np.arange(self.elevation_m.shape[1]), dtype=float)
 
     @property
     def y(self) -> FloatArray:
         """(n_rows,) cell centres, south to north, units of `crs`."""
-        return self.y0 + self.dy * np.arange(self.elevation_m.shape[0])
+        return np.asarray(self.y0 + self.dy * np.arange(self.elevation_m.shape[0]), dtype=float)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -227,7 +227,7 @@ def straight_coast(
     )
 
 
-def round_coast(  # noqa: PLR0913 - the ring is two numbers more than the straight coast
+def round_coast(
     radius_m: float,
     lat_deg: float,
     profile: ShelfProfile,

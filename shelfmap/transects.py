@@ -31,11 +31,15 @@ class Transects:
     transect_id: IntArray
     """(n,) identity, kept through editing."""
     coast_part: IntArray
-    """(n,) piece of the coast, 1 for the longest; 0 where drawn by hand."""
+    """(n,) piece of the coast, 1 for the longest; 0 where drawn away from the coast."""
     coast_m: FloatArray
-    """(n,) distance along that piece, metres; NaN where drawn by hand."""
-    piece_m: FloatArray
-    """(n,) length of coast a station stands for, metres; NaN where drawn by hand."""
+    """(n,) distance along that piece, metres; NaN away from the coast."""
+    piece_start_m: FloatArray
+    """(n,) where along the coast the stretch a station stands for begins, metres; NaN away from the coast."""
+    piece_stop_m: FloatArray
+    """(n,) where it ends."""
+    is_drawn: BoolArray
+    """(n,) True where the line was drawn or edited by hand."""
     lon_deg: FloatArray
     """(n,) station, longitude."""
     lat_deg: FloatArray
@@ -108,7 +112,9 @@ def lay_transects(coast: Coast, settings: TransectSettings, coast_settings: Coas
         transect_id=np.arange(1, len(node_lon) + 1, dtype=np.int64),
         coast_part=table["part"].astype(np.int64),
         coast_m=table["along"],
-        piece_m=table["piece"],
+        piece_start_m=table["along"] - table["piece"] / 2,
+        piece_stop_m=table["along"] + table["piece"] / 2,
+        is_drawn=np.zeros(len(node_lon), dtype=bool),
         lon_deg=table["lon"],
         lat_deg=table["lat"],
         bearing_deg=table["bearing"],
@@ -162,17 +168,18 @@ def _in_box(lon_deg: FloatArray, lat_deg: FloatArray, box: tuple[float, float, f
 
 
 def coast_piece(coast: Coast, transects: Transects, row: int) -> FloatArray:
-    """Stretch of coast one station stands for, (k, 2) longitude and latitude in degrees."""
+    """Stretch of coast one station stands for, (k, 2) longitude and latitude in degrees; empty away from the coast."""
+    if transects.coast_part[row] < 1:
+        return np.zeros((0, 2))
     line = coast.lines[int(transects.coast_part[row]) - 1]
-    half_m = transects.piece_m[row] / 2
-    start_m, stop_m = transects.coast_m[row] - half_m, transects.coast_m[row] + half_m
+    start_m, stop_m = max(transects.piece_start_m[row], 0.0), min(transects.piece_stop_m[row], line.length_m)
     inside = (line.along_m > start_m + 1e-6) & (line.along_m < stop_m - 1e-6)
-    at_m = np.concatenate([[max(start_m, 0.0)], line.along_m[inside], [min(stop_m, line.length_m)]])
+    at_m = np.concatenate([[start_m], line.along_m[inside], [stop_m]])
     return np.stack([np.interp(at_m, line.along_m, line.lon_deg), np.interp(at_m, line.along_m, line.lat_deg)], axis=1)
 
 
 def transects_from_lines(
-    lines: NDArray[np.object_], transect_id: IntArray | None = None, coast_columns: dict[str, FloatArray] | None = None
+    lines: NDArray[np.object_], transect_id: IntArray | None, coast: Coast, spacing_m: float
 ) -> Transects:
     """Take transects drawn or edited by hand, each from the shore seaward.
 
@@ -180,15 +187,18 @@ def transects_from_lines(
     ----------
     lines : (n,) array of shapely lines
         Longitude and latitude, degrees. Parts of a multi-part line are one transect, in their order.
-    transect_id : (n,) array of int, optional
-        Identities to keep; repeated or missing ones (negative) are renumbered above the largest.
-    coast_columns : dict of str to (n,) array, optional
-        `coast_part` and `coast_m` as they were, to keep.
+    transect_id : (n,) array of int or None
+        Identities to keep; repeated ones and those below 1 are numbered anew above the largest.
+    coast : Coast
+        The coast they stand on.
+    spacing_m : float
+        Length of coast a transect stands for at most, metres.
 
     Returns
     -------
     Transects
-        The station is the first point of each line.
+        The station is the first point of each line; it stands for the coast halfway to its neighbours. Lines that
+        begin farther than `spacing_m` from any coast belong to none.
 
     Raises
     ------
@@ -199,26 +209,63 @@ def transects_from_lines(
     if not usable:
         raise TransectError("the file of transects holds no line with a length; draw each from the shore seaward")
     nodes = [_nodes_of(shapely.get_coordinates(lines[i])) for i in usable]
-    k = max(len(node_m) for node_m, _, _ in nodes)
-    padded = np.full((3, len(nodes), k), np.nan)
+    n, k = len(usable), max(node.shape[1] for node in nodes)
+    padded = np.full((3, n, k), np.nan)
     for row, node in enumerate(nodes):
-        padded[:, row, : len(node[0])] = node
-    _, bearing_deg = distance_bearing(padded[1, :, 0], padded[2, :, 0], padded[1, :, 1], padded[2, :, 1])
-    n = len(usable)
-    columns = coast_columns or {}
-    part = np.nan_to_num(columns.get("coast_part", np.zeros(len(lines)))[usable]).astype(np.int64)
+        padded[:, row, : node.shape[1]] = node
+    lon_deg, lat_deg = padded[1, :, 0].copy(), padded[2, :, 0].copy()
+    _, bearing_deg = distance_bearing(lon_deg, lat_deg, padded[1, :, 1], padded[2, :, 1])
+    part, coast_m = _nearest_on_coast(coast, lon_deg, lat_deg, spacing_m)
+    start_m, stop_m = _halfway(part, coast_m, spacing_m)
     return Transects(
         transect_id=_identities(None if transect_id is None else transect_id[usable], n),
         coast_part=part,
-        coast_m=np.asarray(columns.get("coast_m", np.full(len(lines), np.nan))[usable], dtype=float),
-        piece_m=np.full(n, np.nan),
-        lon_deg=padded[1, :, 0].copy(),
-        lat_deg=padded[2, :, 0].copy(),
+        coast_m=coast_m,
+        piece_start_m=start_m,
+        piece_stop_m=stop_m,
+        is_drawn=np.ones(n, dtype=bool),
+        lon_deg=lon_deg,
+        lat_deg=lat_deg,
         bearing_deg=bearing_deg,
         node_m=padded[0],
         node_lon_deg=padded[1],
         node_lat_deg=padded[2],
     )
+
+
+def _nearest_on_coast(
+    coast: Coast, lon_deg: FloatArray, lat_deg: FloatArray, within_m: float
+) -> tuple[IntArray, FloatArray]:
+    """Piece of coast each point is nearest to and the distance along it; 0 and NaN where none is within reach."""
+    part, coast_m = np.zeros(len(lon_deg), dtype=np.int64), np.full(len(lon_deg), np.nan)
+    best_m = np.full(len(lon_deg), within_m)
+    for number, line in enumerate(coast.lines, start=1):
+        squeeze = np.cos(np.radians(lat_deg))
+        for row in range(len(lon_deg)):
+            points = np.stack([line.lon_deg * squeeze[row], line.lat_deg], axis=1)
+            point = shapely.points(unwrap_lon_deg(lon_deg[row], line.lon_deg.mean()) * squeeze[row], lat_deg[row])
+            path = shapely.linestrings(points)
+            share = shapely.line_locate_point(path, point, normalized=True)
+            on = shapely.line_interpolate_point(path, share, normalized=True)
+            on_lon, on_lat = shapely.get_x(on) / squeeze[row], shapely.get_y(on)
+            away_m, _ = distance_bearing(lon_deg[row], lat_deg[row], on_lon, on_lat)
+            if away_m < best_m[row]:
+                best_m[row], part[row] = away_m, number
+                legs = np.concatenate([[0.0], np.cumsum(np.hypot(*np.diff(points, axis=0).T))])
+                coast_m[row] = np.interp(share * legs[-1], legs, line.along_m)
+    return part, coast_m
+
+
+def _halfway(part: IntArray, coast_m: FloatArray, spacing_m: float) -> tuple[FloatArray, FloatArray]:
+    """Stretch of coast of each station: halfway to its neighbours, at most half the spacing each way."""
+    start_m, stop_m = coast_m - spacing_m / 2, coast_m + spacing_m / 2
+    for number in np.unique(part[part > 0]):
+        rows = np.flatnonzero(part == number)
+        rows = rows[np.argsort(coast_m[rows], kind="stable")]
+        middle_m = (coast_m[rows[1:]] + coast_m[rows[:-1]]) / 2
+        start_m[rows[1:]] = np.maximum(start_m[rows[1:]], middle_m)
+        stop_m[rows[:-1]] = np.minimum(stop_m[rows[:-1]], middle_m)
+    return start_m, stop_m
 
 
 def _nodes_of(lonlat: FloatArray) -> FloatArray:

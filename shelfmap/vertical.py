@@ -104,5 +104,5 @@ def datum_words(texts: Mapping[str, str]) -> tuple[str, ...]:
     >>> datum_words({"NOTE": "depths below LAT", "lat#units": "degrees_north"})
     ('NOTE: depths below LAT',)
     """
-    found = {text.strip(): label for label, text in reversed(texts.items()) if _DATUM.search(f"{label} {text}")}
+    found = {text.strip(): label for label, text in reversed(list(texts.items())) if _DATUM.search(f"{label} {text}")}
     return tuple(sorted(f"{label}: {text[:100]}" for text, label in found.items()))

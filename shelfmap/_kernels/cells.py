@@ -83,7 +83,7 @@ def used_end(x_m: FloatArray, depth_m: FloatArray, outer_m: float) -> tuple[int,
 def take_profile(
     x_m: FloatArray, depth_m: FloatArray, outer_m: float, break_m: float
 ) -> tuple[FloatArray, FloatArray, int]:
-    """Used part of one profile with the break as a sample of its own.
+    """Take the used part of one profile, with the break as a sample of its own.
 
     Returns positions, depths (both empty where the profile cannot be used) and the break's sample, -1 if none.
     """
@@ -167,7 +167,7 @@ def coast_damping(slope: float, x_m: float) -> float:
 def cell_count(travel_time_s: float, omega_rad_s: float) -> int:
     """Cells for a wave of `omega_rad_s`: even, so that phase per cell is small, within the bounds."""
     wanted = travel_time_s * omega_rad_s / PHASE_PER_CELL
-    return 2 * int(math.ceil(0.5 * min(max(wanted, CELLS_MIN), CELLS_MAX)))
+    return 2 * math.ceil(0.5 * min(max(wanted, CELLS_MIN), CELLS_MAX))
 
 
 @njit(cache=True)
@@ -179,18 +179,29 @@ def cut_cells(x_m: FloatArray, depth_m: FloatArray, i_break: int, n_cells: int) 
     node, depth, face = np.empty(room + 1), np.empty(room + 1), np.empty(room)
     inertia, damping, inverse = np.empty(room), np.empty(room), np.empty(room)
     zero_coast = depth_m[0] == 0.0
+    first_end = 1 if zero_coast else last
     n, node_break = 0, -1
     node[0], depth[0] = x_m[0], depth_m[0]
     begin = 0
     while begin < last:
         end = begin + 1
-        while not (
-            end == last or end == i_break or (zero_coast and end == 1) or x_m[end + 1] == x_m[end] or x_m[end] == x_m[begin]
-        ):
+        while not (end in (last, i_break, first_end) or x_m[end + 1] == x_m[end] or x_m[end] == x_m[begin]):
             end += 1
         part_s = travel_time(x_m[begin:], depth_m[begin:], end - begin)
         if part_s > 0.0:
-            n = _cut_part(x_m[begin : end + 1], depth_m[begin : end + 1], part_s, step_s, n, node, depth, face, inertia, damping, inverse)
+            n = _cut_part(
+                x_m[begin : end + 1],
+                depth_m[begin : end + 1],
+                part_s,
+                step_s,
+                n,
+                node,
+                depth,
+                face,
+                inertia,
+                damping,
+                inverse,
+            )
         if end == i_break:
             node_break = n
         begin = end
@@ -221,7 +232,7 @@ def _cut_part(
 ) -> int:
     """Append the cells of one continuous stretch; returns the new number of cells."""
     last = x.size - 1
-    count = 2 * max(1, int(math.ceil(0.5 * part_s / step_s - 1e-9)))
+    count = 2 * max(1, math.ceil(0.5 * part_s / step_s - 1e-9))
     dt = part_s / count
     i = 0
     rest_s = piece_time(x[1] - x[0], h[0], h[1])
@@ -277,7 +288,7 @@ def _widths(face_m: FloatArray, end_m: float) -> FloatArray:
 
 @njit(cache=True)
 def coarsen(cells: Cells, nodes: Nodes) -> Cells:
-    """The grid of every second node."""
+    """Make the grid of every second node."""
     n = nodes.face_m.size // 2
     face, inertia = np.empty(n), np.empty(n)
     damping, inverse = np.empty(n), np.empty(n)

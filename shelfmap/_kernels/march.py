@@ -14,7 +14,6 @@ from numpy.typing import NDArray
 from shelfmap._kernels.cells import (
     PHASE_PER_CELL_MAX,
     Cells,
-    Nodes,
     cell_count,
     coarsen,
     cut_cells,
@@ -46,9 +45,7 @@ def coast_series(y: complex) -> tuple[complex, complex, complex, complex]:
 
 
 @njit(cache=True, fastmath={"contract"})
-def march_real(
-    cells: Cells, stiffness: FloatArray, eta: FloatArray, flux: FloatArray, eta_break: FloatArray
-) -> None:
+def march_real(cells: Cells, stiffness: FloatArray, eta: FloatArray, flux: FloatArray, eta_break: FloatArray) -> None:
     """March all waves without friction; `stiffness` is omega^2 - f^2. Fills the values at the end and the break."""
     n, first = cells.inertia_s2_m.size, 0
     eta[:] = 1.0
@@ -118,7 +115,7 @@ def march_damped(
 
 @njit(cache=True)
 def stiffness_at(omega: complex, f2: float, rho: float) -> complex:
-    """omega (s - f^2 / s) with s = omega + i rho."""
+    """Give omega (s - f^2 / s) with s = omega + i rho."""
     s = omega + 1j * rho
     return omega * (s - f2 / s)
 
@@ -208,7 +205,7 @@ def deep_ends(
     n_used: NDArray[np.int64],
     stepped: NDArray[np.bool_],
 ) -> None:
-    """Number of samples used, 0 where none can be, and whether a step to the deep follows, row by row."""
+    """Count the samples used, 0 where none can be, and say whether a step to the deep follows, row by row."""
     for row in range(depth_m.shape[0]):
         _, last, _, _, step = used_end(x_m, depth_m[row], deep_m[row])
         n_used[row] = last + 1
@@ -249,9 +246,7 @@ def respond(
         _respond_plain(fine, coarse, omega, f2, speed, incident[row], eta_break[row])
         damped_incident[row] = incident[row]
         if friction_m_s > 0.0:
-            _respond_damped(
-                fine, coarse, omega, f2, speed, friction_m_s, damped_incident[row], eta_break[row]
-            )
+            _respond_damped(fine, coarse, omega, f2, speed, friction_m_s, damped_incident[row], eta_break[row])
         for q in range(p):
             if not math.isnan(drag_m[q]):
                 outgoing = -1j * math.sqrt(max(omega[q] * omega[q] - f2, 0.0)) / speed
@@ -266,7 +261,13 @@ def respond(
 
 @njit(cache=True)
 def _respond_plain(
-    fine: Cells, coarse: Cells, omega: FloatArray, f2: float, speed: float, incident: ComplexArray, eta_break: ComplexArray
+    fine: Cells,
+    coarse: Cells,
+    omega: FloatArray,
+    f2: float,
+    speed: float,
+    incident: ComplexArray,
+    eta_break: ComplexArray,
 ) -> None:
     p = omega.size
     stiffness = omega * omega - f2

@@ -6,7 +6,7 @@ import numpy as np
 from numba import njit
 from numpy.typing import NDArray
 
-__all__ = ["INSIDE", "OUTSIDE", "VOID", "bilinear_cell", "bilinear_one", "locate", "sample_points"]
+__all__ = ["INSIDE", "OUTSIDE", "VOID", "bilinear_cell", "locate", "sample_points"]
 
 #: States of a sampled point.
 INSIDE: Final = 0
@@ -81,17 +81,6 @@ def bilinear_cell(
     if weight >= 0.5:
         return total / weight
     return np.nan
-
-
-@njit(cache=True)
-def bilinear_one(depth_m: NDArray[np.float32], row: float, col: float) -> float:
-    """Depth at one point given by indices of the array itself; NaN where void or outside."""
-    n_rows, n_cols = depth_m.shape
-    i, up = locate(row, 0, n_rows, 0)
-    j, right = locate(col, 0, n_cols, 0)
-    if i < 0 or j < 0:
-        return np.nan
-    return float(bilinear_cell(depth_m, i, j, min(i + 1, n_rows - 1), min(j + 1, n_cols - 1), up, right))
 
 
 @njit(cache=True)

@@ -11,8 +11,8 @@ F32 = NDArray[np.float32]
 I64 = NDArray[np.int64]
 U8 = NDArray[np.uint8]
 
-#: Why a profile ends. The order is that of `shelfmap.profiles.END_REASONS`.
-LENGTH, GRID_EDGE, LAND, VOID = 0, 1, 2, 3
+#: Why a profile ends, in the order of `shelfmap.words.END_REASONS`. The loops here know land, not islands.
+LENGTH, GRID_EDGE, LAND, ISLAND, VOID = 0, 1, 2, 3, 4
 #: How a profile starts: at a shoreline, in open water, or not at all.
 AT_SHORE, IN_WATER, NO_WATER, START_OUTSIDE, START_VOID = 0, 1, 2, 3, 4
 
@@ -146,7 +146,7 @@ def sample_seaward(
 
 
 @njit(cache=True)
-def despike(row: F64, n: int, least_m: float, work: F64) -> int:
+def despike(row: F64, n: int, least_m: float, work: F64, mended: U8) -> int:
     """Replace single deep or shallow samples by the running median of five; return how many.
 
     A sample counts where it is more than twice, or less than half, the median of itself and its two neighbours on
@@ -162,6 +162,7 @@ def despike(row: F64, n: int, least_m: float, work: F64) -> int:
         median = np.sort(five)[2]
         if abs(work[j] - median) > least_m and not 0.5 * median <= work[j] <= 2.0 * median:
             row[j] = median
+            mended[j] = 1
             count += 1
     return count
 
@@ -253,6 +254,6 @@ def trace_rows(
         if reason >= 0:
             end = reason
             row[n_kept:] = np.nan
-        out_counts[k, 2] = despike(row, n_kept, least_spike_m, work)
+        out_counts[k, 2] = despike(row, n_kept, least_spike_m, work, out_filled[k])
         out_n[k], out_end[k], out_land_m[k] = n_kept, end, land_m
         out_counts[k, 0], out_counts[k, 1] = bridged, voids

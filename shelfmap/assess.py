@@ -1,0 +1,144 @@
+"""What came of each transect: its status, its remarks, and how far its index can be trusted."""
+
+from collections.abc import Iterator
+from typing import Any, Final
+
+import numpy as np
+from numpy.typing import NDArray
+
+from shelfmap.profiles import END_REASONS, START_REASONS, Profiles
+from shelfmap.shelfbreak import ShelfBreaks
+from shelfmap.words import STATUSES
+
+__all__ = ["LEAST_SAMPLES", "Doubt", "break_doubts", "confidences", "statuses", "usable"]
+
+FloatArray = NDArray[np.float64]
+BoolArray = NDArray[np.bool_]
+TextArray = NDArray[np.object_]
+
+#: A profile needs this many samples, the shore among them.
+LEAST_SAMPLES: Final = 4
+
+#: Limits of the doubts, each said in its remark.
+LEAST_FOUND_SHARE: Final = 0.6
+WIDEST_SPREAD: Final = 0.3
+CLEAR_CONTRAST: Final = 3.0
+FEWEST_SHELF_SAMPLES: Final = 4.0
+HEAVIEST_CELL: Final = 0.05
+LARGEST_PERIOD_ERROR: Final = 0.15
+LARGEST_WIDTH_CHANGE: Final = 1.5
+
+#: A remark on some transects that lowers their confidence: what to say, where.
+Doubt = tuple[TextArray, BoolArray]
+
+
+def statuses(profiles: Profiles, breaks: ShelfBreaks, ocean_m: float) -> TextArray:
+    """One word for each transect: whether its results hold and, if not, why.
+
+    Parameters
+    ----------
+    profiles, breaks
+        Results of the stages, n transects.
+    ocean_m : float
+        A transect that gets this deep has reached the open ocean, metres: land, the grid's edge or missing depth
+        beyond count no more.
+
+    Returns
+    -------
+    (n,) array of str
+        Keys of `shelfmap.words.STATUSES`.
+    """
+    n = len(profiles.n_samples)
+    out = np.full(n, "ok", dtype=object)
+    with np.errstate(invalid="ignore"):
+        reached_ocean = np.fmax.reduce(profiles.depth_m, axis=1, initial=0.0) >= ocean_m
+    has_break = np.isfinite(breaks.break_m)
+    end = np.array([*END_REASONS, ""], dtype=object)[profiles.end_reason]
+    out[~has_break] = "no_break"
+    closed = np.isin(end, ["facing_land", "island"]) & ~reached_ocean
+    cut = ~has_break & ~reached_ocean & np.isin(end, ["edge_of_grid", "void"])
+    out[closed | cut] = end[closed | cut]
+    short = profiles.n_samples < LEAST_SAMPLES
+    out[short] = np.where(end[short] == "search_length", "too_short", end[short])
+    for reason in ("not_sea", "edge_of_grid", "void"):
+        out[profiles.start_reason == START_REASONS.index(reason)] = reason
+    assert set(out) <= set(STATUSES)  # noqa: S101 - every status is one that users are told of
+    return out
+
+
+def usable(status: TextArray, profiles: Profiles, ocean_m: float) -> BoolArray:
+    """Whether gains mean anything: a shelf with a break, or a bed that falls to the open ocean without one."""
+    deep = np.fmax.reduce(profiles.depth_m, axis=1, initial=0.0) >= ocean_m
+    return np.asarray((status == "ok") | ((status == "no_break") & deep))
+
+
+def break_doubts(
+    profiles: Profiles,
+    breaks: ShelfBreaks,
+    crosses: BoolArray,
+    width_change: FloatArray,
+    kernel_share: FloatArray,
+    period_error: FloatArray,
+) -> Iterator[Doubt]:
+    """Go through the reasons to trust an index less, each with the transects it holds for.
+
+    Parameters
+    ----------
+    profiles, breaks
+        Results of the stages, n transects.
+    crosses : (n,) array of bool
+        Whether a transect crosses another before the break.
+    width_change : (n,) array of float
+        Ratio of the wider to the narrower of its shelf width and its neighbours', the largest; NaN unknown.
+    kernel_share : (n,) array of float
+        Largest share of one sample in the slowest period.
+    period_error : (n,) array of float
+        Standard deviation of the slowest period over that period.
+
+    Yields
+    ------
+    remark : (n,) array of str
+        What to say.
+    holds : (n,) array of bool
+        Where.
+    """
+    n = len(profiles.n_samples)
+
+    def said(text: str, values: NDArray[Any] | None = None) -> TextArray:
+        return np.array([text if values is None else text.format(values[k]) for k in range(n)], dtype=object)
+
+    width_km, spread_km = breaks.break_m / 1e3, breaks.spread_m / 1e3
+    with np.errstate(invalid="ignore"):
+        cells = breaks.break_m / profiles.step_m
+        yield said("crosses a neighbour before the break"), crosses
+        yield (
+            said("break found by {:.0%} of the thresholds and smoothings tried", breaks.found_share),
+            breaks.found_share < LEAST_FOUND_SHARE,
+        )
+        yield (
+            said("break moves by {:.1f} km with threshold and smoothing", spread_km),
+            spread_km > WIDEST_SPREAD * width_km,
+        )
+        yield said("break is faint, contrast {:.1f}", breaks.contrast), breaks.contrast < CLEAR_CONTRAST
+        yield said("shelf is {:.1f} samples wide", cells), cells < FEWEST_SHELF_SAMPLES
+        yield (
+            said("one sample holds {:.0%} of the period", kernel_share),
+            (kernel_share > HEAVIEST_CELL) & (kernel_share * np.maximum(cells, FEWEST_SHELF_SAMPLES) > 3.0),
+        )
+        yield said("period known to {:.0%} only", period_error), period_error > LARGEST_PERIOD_ERROR
+        yield (
+            said("shelf width changes {:.1f}-fold to a neighbour", width_change),
+            width_change > LARGEST_WIDTH_CHANGE,
+        )
+        on_shelf = profiles.distance_m[None, :] < np.nan_to_num(breaks.break_m)[:, None]
+        gaps = (profiles.is_filled & on_shelf).sum(axis=1)
+        yield said("{:d} samples on the shelf bridged, filled or smoothed", gaps), gaps > 0
+        in_water = profiles.start_reason == START_REASONS.index("open_water")
+        yield said("starts in open water, off a bridged inlet"), in_water
+
+
+def confidences(status: TextArray, n_doubts: NDArray[np.int64]) -> TextArray:
+    """Confidence in each index: good without doubts, fair with one, poor with more; None where there is no index."""
+    words = np.array(["good", "fair", "poor"], dtype=object)[np.minimum(n_doubts, 2)]
+    words[status != "ok"] = None
+    return words

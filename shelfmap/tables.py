@@ -1,0 +1,343 @@
+"""Stage results of all transects, put into the columns of the column table: units turned, remarks written."""
+
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+import shapely
+from numpy.typing import NDArray
+
+from shelfmap.assess import break_doubts, confidences
+from shelfmap.coast import Coast
+from shelfmap.columns import columns_of
+from shelfmap.constants import CONSTITUENTS
+from shelfmap.index import ResonanceIndex, index_class
+from shelfmap.layers import Layer
+from shelfmap.profiles import END_REASONS, Profiles, place_on
+from shelfmap.response import ShelfModes, WaveResponse
+from shelfmap.settings import Settings
+from shelfmap.shelfbreak import ShelfBreaks
+from shelfmap.transects import NODE_M, Transects, coast_piece, crossing_transects
+from shelfmap.words import wave_label
+
+__all__ = ["Screened", "Wave", "result_layers", "transect_columns", "transect_geometry", "waves_of"]
+
+FloatArray = NDArray[np.float64]
+Columns = dict[str, NDArray[Any]]
+
+
+@dataclass(frozen=True, slots=True)
+class Wave:
+    """A wave asked for."""
+
+    name: str
+    """Constituent, or empty for a further period."""
+    label: str
+    """How columns call it."""
+    period_h: float
+    """Period, hours."""
+
+
+def waves_of(settings: Settings) -> tuple[Wave, ...]:
+    """Waves of a run: constituents in the order asked for, then further periods."""
+    named = [Wave(name, wave_label(name), CONSTITUENTS[name].period_h) for name in settings.response.constituents]
+    return (*named, *(Wave("", wave_label(period), period) for period in settings.response.periods_h))
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Screened:
+    """Everything computed for a set of transects, one row each; the result of a section and of a whole run."""
+
+    transects: Transects
+    profiles: Profiles
+    breaks: ShelfBreaks
+    status: NDArray[np.object_]
+    """(n,) words of `shelfmap.words.STATUSES`."""
+    outer_depth_m: FloatArray
+    """(n,) depth of the deep sea beyond each profile, metres; NaN where nothing was computed."""
+    is_stepped: NDArray[np.bool_]
+    """(n,) True where the profile does not reach that depth itself."""
+    modes: ShelfModes
+    waves: WaveResponse
+    index: ResonanceIndex
+    curve: WaveResponse | None
+    """Response at the periods of the curve, NaN below a quarter of the travel time; None where not asked for."""
+    curve_period_h: FloatArray
+    """(m,) periods of the curve, hours."""
+
+
+def transect_geometry(transects: Transects, profiles: Profiles) -> NDArray[np.object_]:
+    """Line of each transect from its shore to its last sample; a stub of one step where there is no profile."""
+    lines = []
+    for row in range(len(transects)):
+        start_m = np.nan_to_num(profiles.shore_m[row])
+        length_m = max(profiles.length_m[row], profiles.step_m)
+        at_m = start_m + np.linspace(0.0, length_m, int(np.ceil(length_m / NODE_M)) + 1)
+        lon_deg, lat_deg = place_on(transects.rows(row, row + 1), at_m[None, :])
+        lines.append(shapely.linestrings(lon_deg[0], lat_deg[0]))
+    return np.array(lines, dtype=object)
+
+
+def result_layers(screened: Screened, coast: Coast, settings: Settings) -> list[Layer]:
+    """Layers of a run, but for `run` itself.
+
+    Parameters
+    ----------
+    screened : Screened
+        All transects of the run.
+    coast : Coast
+        The coast they stand on.
+    settings : Settings
+        Which waves, and which tables are wanted.
+
+    Returns
+    -------
+    list of Layer
+        `coast_index`, `transects`, `shelf_breaks` and, where asked for, `profiles` and `response`.
+    """
+    waves = waves_of(settings)
+    labels = [wave.label for wave in waves]
+    break_lon, break_lat = place_on(screened.transects, screened.profiles.shore_m + screened.breaks.break_m)
+    crosses = crossing_transects(
+        np.stack([screened.profiles.shore_lon_deg, screened.profiles.shore_lat_deg], axis=1),
+        np.stack([break_lon, break_lat], axis=1),
+        screened.transects.coast_part,
+    )
+    columns = {
+        **transect_columns(screened.transects, screened.profiles),
+        **_profile_columns(screened, settings),
+        **_break_columns(screened, break_lon, break_lat),
+        **_mode_columns(screened),
+        **_wave_columns(screened, waves),
+        **_remark_columns(screened, waves, crosses),
+        "crosses": crosses,
+    }
+    pieces = [coast_piece(coast, screened.transects, row) for row in range(len(screened.transects))]
+    on_coast = np.array([len(piece) > 1 for piece in pieces], dtype=bool)
+    has_break = np.isfinite(screened.breaks.break_m)
+    layers = [
+        _layer(
+            "coast_index",
+            columns,
+            on_coast,
+            np.array([shapely.linestrings(piece) for piece in pieces if len(piece) > 1], dtype=object),
+            labels,
+        ),
+        _layer("transects", columns, slice(None), transect_geometry(screened.transects, screened.profiles), labels),
+        _layer(
+            "shelf_breaks",
+            columns | {"lon_deg": columns["break_lon_deg"], "lat_deg": break_lat},
+            has_break,
+            shapely.points(break_lon[has_break], break_lat[has_break]),
+        ),
+    ]
+    if settings.output.profiles:
+        layers.append(_profile_layer(screened))
+    layers.append(_response_layer(screened, waves))
+    return layers
+
+
+def _layer(
+    name: str, columns: Columns, rows: Any, geometry: NDArray[np.object_] | None, waves: list[str] | None = None
+) -> Layer:
+    """Those of the columns that belong to a layer, some rows of them."""
+    wanted = [column.name for column in columns_of(name, waves or [])]
+    return Layer(name=name, columns={key: columns[key][rows] for key in wanted}, geometry=geometry, waves=waves or [])
+
+
+def _nullable(values: NDArray[Any], missing: NDArray[np.bool_]) -> NDArray[np.object_]:
+    """Same values as objects, None where missing."""
+    out = values.astype(object)
+    out[missing] = None
+    return out
+
+
+def transect_columns(transects: Transects, profiles: Profiles) -> Columns:
+    """Columns of `transect_lines`: where each transect stands, leads and ends."""
+    no_shore = np.isnan(profiles.shore_lon_deg)
+    end = np.array([*END_REASONS, None], dtype=object)[profiles.end_reason]
+    return {
+        "transect_id": transects.transect_id,
+        "coast_part": _nullable(transects.coast_part, transects.coast_part < 1),
+        "coast_km": transects.coast_m / 1e3,
+        "lon_deg": np.where(no_shore, transects.lon_deg, profiles.shore_lon_deg),
+        "lat_deg": np.where(no_shore, transects.lat_deg, profiles.shore_lat_deg),
+        "bearing_deg": transects.bearing_deg,
+        "search_km": np.nanmax(transects.node_m, axis=1) / 1e3,
+        "length_km": np.where(profiles.n_samples > 0, profiles.length_m / 1e3, np.nan),
+        "end_reason": end,
+    }
+
+
+def _profile_columns(screened: Screened, settings: Settings) -> Columns:
+    profiles = screened.profiles
+    at_land = np.isin(profiles.end_reason, [END_REASONS.index("facing_land"), END_REASONS.index("island")])
+    no_linear_friction = np.isnan(screened.outer_depth_m) | (settings.response.drag is not None)
+    return {
+        "status": screened.status,
+        "n_bridged": profiles.n_bridged,
+        "n_filled": profiles.n_filled,
+        "n_despiked": profiles.n_despiked,
+        "fetch_km": np.where(at_land, profiles.length_m / 1e3, np.nan),
+        "deep_m": screened.outer_depth_m,
+        "friction_m_s": np.where(no_linear_friction, np.nan, settings.response.friction_m_s),
+    }
+
+
+def _break_columns(screened: Screened, break_lon: FloatArray, break_lat: FloatArray) -> Columns:
+    breaks, profiles = screened.breaks, screened.profiles
+    on_shelf = profiles.distance_m[None, :] <= np.nan_to_num(breaks.break_m, nan=-1.0)[:, None]
+    depth_m = np.where(on_shelf, profiles.depth_m, 0.0)
+    # trapezoids to the last sample before the break, and one to the break itself
+    last = np.maximum(on_shelf.sum(axis=1) - 1, 0)
+    rows = np.arange(len(last))
+    area_m2 = (depth_m.sum(axis=1) - 0.5 * (depth_m[:, 0] + depth_m[rows, last])) * profiles.step_m
+    area_m2 += 0.5 * (depth_m[rows, last] + breaks.depth_m) * (breaks.break_m - last * profiles.step_m)
+    return {
+        "break_lon_deg": break_lon,
+        "break_lat_deg": break_lat,
+        "shelf_width_km": breaks.break_m / 1e3,
+        "break_depth_m": breaks.depth_m,
+        "break_contrast": breaks.contrast,
+        "break_spread_km": breaks.spread_m / 1e3,
+        "slope_before": breaks.slope_before,
+        "slope_beyond": breaks.slope_beyond,
+        "picked": breaks.is_picked,
+        "mean_depth_m": area_m2 / breaks.break_m,
+    }
+
+
+def _mode_columns(screened: Screened) -> Columns:
+    modes = screened.modes
+    pole_h = 2 * np.pi / modes.pole_rad_s.real / 3600
+    columns: Columns = {
+        "travel_time_h": modes.travel_time_s / 3600,
+        "quarter_wave_h": modes.quarter_wave_s / 3600,
+        "period1_sd_h": modes.period_sd_s / 3600,
+        "damped_q1": modes.damped_q[:, 0],
+        "current_antinode_km": modes.current_antinode_m / 1e3,
+        "kernel_peak_share": modes.kernel_peak_share,
+    }
+    for mode in range(3):
+        columns[f"period{mode + 1}_h"] = modes.node_period_s[:, mode] / 3600
+        columns[f"pole{mode + 1}_h"] = pole_h[:, mode]
+        columns[f"q{mode + 1}"] = modes.q[:, mode]
+    return columns
+
+
+def _wave_columns(screened: Screened, waves: tuple[Wave, ...]) -> Columns:
+    response, index = screened.waves, screened.index
+    columns: Columns = {}
+    for k, wave in enumerate(waves):
+        columns[f"gain_{wave.label}"] = response.gain[:, k]
+        columns[f"damped_gain_{wave.label}"] = response.damped_gain[:, k]
+        columns[f"lag_{wave.label}_deg"] = np.degrees(response.lag_rad[:, k])
+        columns[f"edge_ratio_{wave.label}"] = response.edge_ratio[:, k]
+        columns[f"index_{wave.label}"] = index.index[:, k]
+    filled = np.where(np.isnan(index.index), -1.0, index.index)
+    best = np.argmax(filled, axis=1)
+    rows = np.arange(len(best))
+    none = filled[rows, best] < 0
+    names = np.array([wave.name or f"{wave.period_h:g} h" for wave in waves], dtype=object)
+    largest = index.index[rows, best]
+    return columns | {
+        "index_max": largest,
+        "index_constituent": _nullable(names[best], none),
+        "index_mode": _nullable(index.mode[rows, best], none),
+        "index_class": _nullable(index_class(largest), none),
+        "tuning": index.tuning[rows, best],
+        "strength": index.strength[rows, best],
+    }
+
+
+def _remark_columns(screened: Screened, waves: tuple[Wave, ...], crosses: NDArray[np.bool_]) -> Columns:
+    profiles, modes = screened.profiles, screened.modes
+    n = len(screened.status)
+    remarks: list[list[str]] = [[] for _ in range(n)]
+    n_doubts = np.zeros(n, dtype=np.int64)
+    holds_index = screened.status == "ok"
+    error = modes.period_sd_s / modes.node_period_s[:, 0]
+    change = _width_change(screened.transects, np.where(holds_index, screened.breaks.break_m, np.nan))
+    for text, holds in break_doubts(profiles, screened.breaks, crosses, change, modes.kernel_peak_share, error):
+        for row in np.flatnonzero(holds & holds_index):
+            remarks[row].append(text[row])
+        n_doubts += holds
+    computed = np.isfinite(screened.outer_depth_m)
+    slow = screened.waves.below_inertial & computed[:, None]
+    for row in np.flatnonzero(slow.any(axis=1)):
+        names = [wave.name or f"{wave.period_h:g} h" for wave, is_slow in zip(waves, slow[row], strict=True) if is_slow]
+        remarks[row].append(f"below_inertial: {', '.join(names)}")
+    for row in np.flatnonzero(holds_index & (modes.q[:, 0] < 0.5)):
+        remarks[row].append("mode 1 is overdamped")
+    for row in np.flatnonzero(screened.is_stepped & computed):
+        deepest_m = np.nanmax(profiles.depth_m[row])
+        remarks[row].append(f"deepest {deepest_m:.0f} m, stepped to {screened.outer_depth_m[row]:.0f} m")
+    notes = np.array(["; ".join(parts) or None for parts in remarks], dtype=object)
+    return {"note": notes, "confidence": confidences(screened.status, n_doubts)}
+
+
+def _width_change(transects: Transects, width_m: FloatArray) -> FloatArray:
+    """Ratio of a shelf's width to the next stations', the larger over the smaller, the largest; NaN without any."""
+    out = np.full(len(width_m), np.nan)
+    same = (transects.coast_part[1:] == transects.coast_part[:-1]) & (transects.coast_part[1:] > 0)
+    with np.errstate(invalid="ignore", divide="ignore"):
+        ratio = np.where(same, width_m[1:] / width_m[:-1], np.nan)
+    ratio = np.fmax(ratio, 1.0 / ratio)
+    out[1:] = ratio
+    out[:-1] = np.fmax(out[:-1], ratio)
+    return out
+
+
+def _profile_layer(screened: Screened) -> Layer:
+    profiles = screened.profiles
+    wet = np.arange(profiles.depth_m.shape[1])[None, :] < profiles.n_samples[:, None]
+    row, sample = np.nonzero(wet)
+    lon_deg, lat_deg = place_on(screened.transects, profiles.shore_m[:, None] + profiles.distance_m[None, :])
+    return Layer(
+        name="profiles",
+        columns={
+            "transect_id": profiles.transect_id[row],
+            "distance_km": profiles.distance_m[sample] / 1e3,
+            "lon_deg": lon_deg[wet],
+            "lat_deg": lat_deg[wet],
+            "depth_m": profiles.depth_m[wet],
+            "filled": profiles.is_filled[wet],
+            "period1_kernel_per_km": screened.modes.kernel_per_m[wet] * 1e3,
+        },
+    )
+
+
+def _response_layer(screened: Screened, waves: tuple[Wave, ...]) -> Layer:
+    """Waves asked for, then the curve, by transect; transects without a response have no rows."""
+    response = screened.waves
+    n_waves = len(waves)
+    fields = ("gain", "damped_gain", "lag_rad", "edge_ratio")
+    values = {name: getattr(response, name) for name in fields} | {"index": screened.index.index}
+    kinds = ["constituent" if wave.name else "period" for wave in waves]
+    names = [wave.name for wave in waves]
+    periods_h = np.array([wave.period_h for wave in waves])
+    if screened.curve is not None:
+        curve = screened.curve
+        values = {name: np.hstack([values[name], getattr(curve, name)]) for name in fields} | {
+            "index": np.hstack([values["index"], np.full(curve.gain.shape, np.nan)])
+        }
+        kinds += ["curve"] * len(screened.curve_period_h)
+        names += [""] * len(screened.curve_period_h)
+        periods_h = np.concatenate([periods_h, screened.curve_period_h])
+    shown = np.isfinite(values["gain"])
+    shown[:, :n_waves] = np.isfinite(screened.outer_depth_m)[:, None]
+    row, wave = np.nonzero(shown)
+    return Layer(
+        name="response",
+        columns={
+            "transect_id": screened.transects.transect_id[row],
+            "wave": np.array(names, dtype=object)[wave],
+            "kind": np.array(kinds, dtype=object)[wave],
+            "period_h": periods_h[wave],
+            "gain": values["gain"][shown],
+            "damped_gain": values["damped_gain"][shown],
+            "lag_deg": np.degrees(values["lag_rad"][shown]),
+            "edge_ratio": values["edge_ratio"][shown],
+            "index": values["index"][shown],
+        },
+    )
