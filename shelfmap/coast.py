@@ -202,18 +202,24 @@ class _Tracer:
             return np.stack(plane.from_lonlat(*self.source.lonlat_of(index[:, 0], index[:, 1])), axis=1)
 
         local = shapely.simplify(shapely.make_valid(shapely.transform(land, to_plane)), self.radius_m / 50)
-        tiny = shapely.area(local) < (self.radius_m / 2) ** 2
+        area_m2 = shapely.area(local)
         inside = shapely.box(window.col0 + 0.5, window.row0 + 0.5, window.col1 - 1.5, window.row1 - 1.5)
-        tiny &= shapely.covered_by(land, inside)  # land cut by the window is no islet
-        islets = shapely.transform(
-            land[tiny], lambda index: np.stack(self.source.lonlat_of(index[:, 0], index[:, 1]), axis=1)
-        )
-        if tiny.all():
-            return [], islets
+        is_whole = shapely.covered_by(land, inside)  # land cut by the window may be large
+        tiny = is_whole & (area_m2 < (self.radius_m / 2) ** 2)
+        large = ~is_whole | (area_m2 >= self.settings.smallest_island_km2 * 1e6)
         closed = shapely.union_all(local[~tiny])
         closed = shapely.buffer(closed, self.radius_m, quad_segs=QUARTER_SEGMENTS)
         closed = shapely.buffer(closed, -self.radius_m, quad_segs=QUARTER_SEGMENTS)
-        return self._clip(closed, plane.to_lonlat, tile), islets
+        parts = shapely.get_parts(closed)
+        # islands are bridged to large land only, not to each other
+        held, _ = shapely.STRtree(local[large]).query(parts, predicate="intersects")
+        kept = np.isin(np.arange(len(parts)), held)
+        dropped, _ = shapely.STRtree(parts[~kept]).query(local, predicate="intersects")
+        islets = shapely.transform(
+            land[np.union1d(np.flatnonzero(tiny), dropped)],
+            lambda index: np.stack(self.source.lonlat_of(index[:, 0], index[:, 1]), axis=1),
+        )
+        return self._clip(parts[kept], plane.to_lonlat, tile), islets
 
     def _window(self, tile: Tile) -> Tile:
         """Tile with the margin its closing needs, clipped to the region."""
@@ -250,10 +256,10 @@ class _Tracer:
         ]
         return np.array(polygons, dtype=object)
 
-    def _clip(self, closed: shapely.Geometry, to_lonlat: object, tile: Tile) -> list[FloatArray]:
-        """Boundary of the closed land within a tile, land on the left, in grid index."""
+    def _clip(self, parts: Geometries, to_lonlat: object, tile: Tile) -> list[FloatArray]:
+        """Boundary of closed land within a tile, land on the left, in grid index."""
         region, source = self.basins.tiling.region, self.source
-        rings = shapely.boundary(shapely.orient_polygons(shapely.get_parts(closed)))
+        rings = shapely.boundary(shapely.orient_polygons(parts))
         rings = shapely.segmentize(shapely.get_parts(rings), max_segment_length=self.radius_m / 2)
 
         def to_index(plane: FloatArray) -> FloatArray:

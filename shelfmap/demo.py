@@ -167,7 +167,7 @@ def demo_scenario(seed: int = SEED) -> SyntheticGrid:
     n_rows, n_cols = SHAPE
     lon, lat = np.meshgrid(WEST_DEG + CELL_DEG * np.arange(n_cols), SOUTH_DEG + CELL_DEG * np.arange(n_rows))
     along_km, off_km = _scene_from_lonlat(lon, lat)
-    ragged_km = 3.0 * _relief(along_km, off_km, rng, 25.0, 120.0)
+    ragged_km = 2.0 * _relief(along_km, off_km, rng, 30.0, 150.0)
     rough = _relief(along_km, off_km, rng, 60.0, 300.0)
     sea_km = off_km - _coast_km(along_km)
     elevation_m = _open_coast(along_km, sea_km + ragged_km * np.exp(-np.maximum(sea_km, 0.0) / 40.0), rough)
@@ -316,7 +316,7 @@ def _lonlat_from_scene(along_km: FloatArray, off_km: FloatArray) -> tuple[FloatA
 
 def _coast_km(along_km: FloatArray) -> FloatArray:
     """Distance of the smooth coast off its general line."""
-    return 42.0 * np.sin(along_km / 205.0 + 0.4) + 18.0 * np.sin(along_km / 66.0 + 1.0)
+    return -42.0 * np.sin(along_km / 205.0 + 0.4) + 18.0 * np.sin(along_km / 66.0 + 1.0)
 
 
 def _open_coast(along_km: FloatArray, sea_km: FloatArray, rough: FloatArray) -> FloatArray:

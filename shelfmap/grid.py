@@ -311,7 +311,8 @@ class GridSource:
         tiles, starts = np.unique(tile[order], return_index=True)
         corners = [(t // n_across * _TILE_CELLS, t % n_across * _TILE_CELLS) for t in tiles.tolist()]
         grids = self.read_many((r, r + _TILE_CELLS + 1, c, c + _TILE_CELLS + 1) for r, c in corners)
-        for part, grid in zip(np.split(here[order], starts[1:]), grids, strict=bool(corners)):
+        parts = np.split(here[order], starts[1:])
+        for grid, part in zip(grids, parts, strict=False):  # no point near: one empty part, no grid
             depth_m.flat[part], state.flat[part] = grid.sample(col.flat[part], row.flat[part])
         return depth_m, state
 

@@ -1,5 +1,6 @@
 """Results to GeoPackage, whole or not at all; the reader's names stand here too."""
 
+import json
 import os
 import sqlite3
 from collections.abc import Iterator, Mapping, Sequence
@@ -131,12 +132,14 @@ def write_layers(
     names = [layer.name for layer in layers]
     if not names or len(set(names)) != len(names):
         raise LayerError(f"output {path}: layers {names}; give at least one, and each once")
-    texts = {"TITLE": title, "ABSTRACT": description, "CAUTIONS": CAUTIONS, "SOFTWARE": f"shelfmap {__version__}"}
-    metadata = {key: text for key, text in texts.items() if text}
+    about = {"title": title, "abstract": description, "software": f"shelfmap {__version__}", "cautions": CAUTIONS}
     with _one_sentence(path), replacing(path) as part, _dated():
         for layer in layers:
-            _write_layer(part, layer, projection, crs, metadata)
-        _finish(part, layers)
+            _write_layer(part, layer, projection, crs)
+        with closing(sqlite3.connect(part)) as database, database:
+            _add_words(database, layers)
+            _add_metadata(database, about)
+            _count_rows(database, layers)
     return path
 
 
@@ -181,7 +184,7 @@ def _dated() -> Iterator[None]:
         pyogrio.set_gdal_config_options({"OGR_CURRENT_DATE": before})
 
 
-def _write_layer(part: Path, layer: Layer, projection: Projection, crs: str, metadata: dict[str, str]) -> None:
+def _write_layer(part: Path, layer: Layer, projection: Projection, crs: str) -> None:
     columns = columns_of(layer.name, layer.waves)
     arrays = [_array(layer, column) for column in columns]
     fields = [pa.field(column.name, _ARROW_TYPES[column.dtype], metadata=_field_metadata(column)) for column in columns]
@@ -198,7 +201,6 @@ def _write_layer(part: Path, layer: Layer, projection: Projection, crs: str, met
         part,
         layer=layer.name,
         driver="GPKG",
-        dataset_metadata=None if part.exists() else metadata,
         layer_metadata={"CAUTIONS": CAUTIONS},
         layer_options=layer_options,
         **geometry_options,
@@ -258,24 +260,45 @@ def _drawable(layer: Layer, projection: Projection) -> tuple[ObjectArray, str]:
     return geometry, "MultiLineString"
 
 
-def _finish(part: Path, layers: Sequence[Layer]) -> None:
-    """Add the allowed words of text columns (GDAL's Arrow writer cannot) and count the rows that arrived."""
-    with closing(sqlite3.connect(part)) as database, database:
-        for layer in layers:
-            words = [column.name for column in columns_of(layer.name, layer.waves) if column.name in ENUMERATIONS]
-            for name in words:
-                database.executemany(
-                    "INSERT OR IGNORE INTO gpkg_data_column_constraints"
-                    " (constraint_name, constraint_type, value, description) VALUES (?, 'enum', ?, ?)",
-                    [(name, word, f"{word}: {meaning}") for word, meaning in ENUMERATIONS[name].items()],
-                )
-                database.execute(
-                    "UPDATE gpkg_data_columns SET constraint_name = ? WHERE table_name = ? AND column_name = ?",
-                    (name, layer.name, name),
-                )
-            (count,) = database.execute(f'SELECT count(*) FROM "{layer.name}"').fetchone()
-            rows = len(next(iter(layer.columns.values())))
-            if count != rows:
-                raise LayerError(
-                    f"layer {layer.name}: {count} of {rows} rows arrived; make room on the disk and run again"
-                )
+def _add_words(database: sqlite3.Connection, layers: Sequence[Layer]) -> None:
+    """Add the words a text column may hold, each with its meaning; GDAL's Arrow writer cannot."""
+    for layer in layers:
+        for name in (column.name for column in columns_of(layer.name, layer.waves) if column.name in ENUMERATIONS):
+            database.executemany(
+                "INSERT OR IGNORE INTO gpkg_data_column_constraints"
+                " (constraint_name, constraint_type, value, description) VALUES (?, 'enum', ?, ?)",
+                [(name, word, f"{word}: {meaning}") for word, meaning in ENUMERATIONS[name].items()],
+            )
+            database.execute(
+                "UPDATE gpkg_data_columns SET constraint_name = ? WHERE table_name = ? AND column_name = ?",
+                (name, layer.name, name),
+            )
+
+
+def _add_metadata(database: sqlite3.Connection, about: dict[str, str]) -> None:
+    """Add what the whole file is, as JSON (RFC 8259).
+
+    Not through GDAL's own dataset metadata: with those in it, every program that reads the file through GDAL leaves a
+    .aux.xml beside it (measured with GDAL 3.12.4).
+    """
+    cursor = database.execute(
+        "INSERT INTO gpkg_metadata (md_scope, md_standard_uri, mime_type, metadata)"
+        " VALUES ('dataset', 'https://www.rfc-editor.org/rfc/rfc8259', 'application/json', ?)",
+        (json.dumps(about, ensure_ascii=False),),
+    )
+    database.execute(
+        "INSERT INTO gpkg_metadata_reference (reference_scope, timestamp, md_file_id)"
+        " SELECT 'geopackage', max(last_change), ? FROM gpkg_contents",
+        (cursor.lastrowid,),
+    )
+
+
+def _count_rows(database: sqlite3.Connection, layers: Sequence[Layer]) -> None:
+    """Make sure that all rows arrived."""
+    for layer in layers:
+        (count,) = database.execute(f'SELECT count(*) FROM "{layer.name}"').fetchone()
+        wanted = len(next(iter(layer.columns.values())))
+        if count != wanted:
+            raise LayerError(
+                f"layer {layer.name}: {count} of {wanted} rows arrived; make room on the disk and run again"
+            )

@@ -29,6 +29,9 @@ __all__ = ["Indices", "RasterFile", "RasterHeader", "disk_file", "projection_of"
 #: Half-open window: row0, row1, col0, col1.
 Indices = tuple[int, int, int, int]
 
+# Blocks the library keeps: enough for one row of tiles round the globe at 15 arc-seconds.
+_CACHE_MB: Final = 256
+
 _LOCAL_ARCHIVE: Final = re.compile(r"/vsi(zip|tar|gzip)/+(.+?\.(?:zip|tgz|tar\.gz|tar|gz))((?:/.*)?)", re.IGNORECASE)
 _NETWORK_PATH: Final = re.compile(r"/vsi|\b[a-z][a-z0-9+.-]+:/|^\w{2,}:|<", re.IGNORECASE)
 _NETWORK_FILE: Final = re.compile(rb"<(GDAL_WMS|GDAL_WMTS|WCS_GDAL|WMS_|WMT_|WMTS|Capabilities)")
@@ -184,7 +187,7 @@ def projection_of(crs: str) -> Projection:
 def _opened(name: str) -> Iterator[tuple[Any, bool]]:
     """Open a raster without a network; also tell whether the file places its cells at all."""
     try:
-        with rasterio.Env(CPL_VSIL_CURL_ALLOWED_FILENAME="none"):
+        with rasterio.Env(CPL_VSIL_CURL_ALLOWED_FILENAME="none", GDAL_CACHEMAX=_CACHE_MB):
             with warnings.catch_warnings(record=True) as caught:
                 warnings.simplefilter("always")
                 dataset = rasterio.open(name)

@@ -157,7 +157,8 @@ def wave_response(
     --------
     Flat shelf of 100 m, 300 km wide, M2, no rotation: 1 / sqrt(cos^2 kL + h1/h2 sin^2 kL).
 
-    >>> flat = wave_response([0.0, 3e5], [[100.0, 100.0]], [3e5], [4000.0], [0.0], [1.405189e-4],
+    >>> shelf = ([0.0, 3e5], [[100.0, 100.0]], [3e5], [4000.0], [0.0])
+    >>> flat = wave_response(*shelf, [1.405189e-4],
     ...                      friction=Friction(linear_m_s=1e-3))
     >>> float(flat.gain[0, 0].round(4)), bool(flat.damped_gain[0, 0] < flat.gain[0, 0])
     (3.6891, True)

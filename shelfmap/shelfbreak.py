@@ -17,6 +17,8 @@ BoolArray = NDArray[np.bool_]
 
 #: The band of thresholds and smoothing lengths, as multiples of those set, that the spread is taken over.
 BAND: Final = (0.5, 1.0, 2.0)
+#: Gradients over fewer samples than this are noise of the grid: a kink between two samples blunts over one.
+LEAST_SMOOTHING_SAMPLES: Final = 2.0
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -56,30 +58,41 @@ def find_shelf_breaks(profiles: Profiles, settings: ShelfBreakSettings) -> Shelf
     ShelfBreaks
         The rule is that of `shelfmap._kernels.breaks.find_break`; the thresholds 1:100 and 1:40 are those of coastal
         practice (glossary of the Coastal Zone Management Unit, Barbados), the definition is that of IHO-IOC B-6: the
-        line of marked increase of slope. "No break" is an answer.
+        line of marked increase of slope. Gradients are taken over two samples at least. "No break" is an answer.
     """
     limits = np.array(
         [settings.sustain_m, settings.shallowest_m, settings.deepest_m, settings.least_contrast, settings.ocean_m]
     )
     band = np.array(BAND)
-    found_m = np.full((len(profiles.n_samples), len(band), len(band)), np.nan)
+    shape = (len(profiles.n_samples), len(band), len(band))
+    found_m, found_depth_m = np.empty(shape), np.empty(shape)
     breaks.find_breaks(
         profiles.depth_m,
         profiles.n_samples,
         profiles.step_m,
         settings.slope * band,
         settings.confirm_slope,
-        settings.smoothing_m * band,
+        _smoothing_m(profiles, settings) * band,
         limits,
         found_m,
+        found_depth_m,
     )
     middle = BAND.index(1.0)
     break_m = found_m[:, middle, middle].copy()
     has = np.isfinite(break_m)
     spread_m = np.full(len(break_m), np.nan)
-    if has.any():
-        spread_m[has] = np.nanmax(found_m[has], axis=(1, 2)) - np.nanmin(found_m[has], axis=(1, 2))
-    return _measured(profiles, settings, break_m, spread_m, np.isfinite(found_m).mean(axis=(1, 2)))
+    spread_m[has] = np.nanmax(found_m[has], axis=(1, 2)) - np.nanmin(found_m[has], axis=(1, 2))
+    _, sides = _measured(profiles, settings, break_m)
+    return ShelfBreaks(
+        break_m=break_m,
+        depth_m=found_depth_m[:, middle, middle].copy(),
+        slope_before=sides[:, 0],
+        slope_beyond=sides[:, 1],
+        contrast=_contrast(sides),
+        spread_m=spread_m,
+        found_share=np.isfinite(found_m).mean(axis=(1, 2)),
+        is_picked=np.zeros(len(break_m), dtype=bool),
+    )
 
 
 def measure_picked_breaks(profiles: Profiles, settings: ShelfBreakSettings, break_m: FloatArray) -> ShelfBreaks:
@@ -97,34 +110,42 @@ def measure_picked_breaks(profiles: Profiles, settings: ShelfBreakSettings, brea
     Returns
     -------
     ShelfBreaks
-        Without spread.
+        Depths are those of the profile; without spread and share.
     """
     inside = (break_m > 0) & (break_m <= profiles.length_m)
-    unknown = np.full(len(break_m), np.nan)
-    return _measured(profiles, settings, np.where(inside, break_m, np.nan), unknown, unknown.copy(), is_picked=inside)
-
-
-def _measured(
-    profiles: Profiles,
-    settings: ShelfBreakSettings,
-    break_m: FloatArray,
-    spread_m: FloatArray,
-    found_share: FloatArray,
-    is_picked: BoolArray | None = None,
-) -> ShelfBreaks:
-    """Add depth, gradients and contrast to distances of breaks."""
-    n = len(break_m)
-    depth_m, sides = np.full(n, np.nan), np.full((n, 2), np.nan)
-    breaks.measure_breaks(
-        profiles.depth_m, profiles.n_samples, profiles.step_m, break_m, settings.smoothing_m, depth_m, sides
-    )
+    kept_m = np.where(inside, break_m, np.nan)
+    depth_m, sides = _measured(profiles, settings, kept_m)
     return ShelfBreaks(
-        break_m=break_m,
+        break_m=kept_m,
         depth_m=depth_m,
         slope_before=sides[:, 0],
         slope_beyond=sides[:, 1],
-        contrast=sides[:, 1] / np.maximum(sides[:, 0], breaks.LEAST_SLOPE_BEFORE),
-        spread_m=spread_m,
-        found_share=found_share,
-        is_picked=np.zeros(n, dtype=bool) if is_picked is None else is_picked,
+        contrast=_contrast(sides),
+        spread_m=np.full(len(break_m), np.nan),
+        found_share=np.full(len(break_m), np.nan),
+        is_picked=inside,
     )
+
+
+def _smoothing_m(profiles: Profiles, settings: ShelfBreakSettings) -> float:
+    """Length gradients are taken over, metres: as set, but two samples at least."""
+    return max(settings.smoothing_m, LEAST_SMOOTHING_SAMPLES * profiles.step_m)
+
+
+def _measured(profiles: Profiles, settings: ShelfBreakSettings, break_m: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Depth of the profile at each break, and the gradients before and beyond it."""
+    depth_m, sides = np.empty(len(break_m)), np.empty((len(break_m), 2))
+    breaks.measure_breaks(
+        profiles.depth_m,
+        profiles.n_samples,
+        profiles.step_m,
+        break_m,
+        _smoothing_m(profiles, settings),
+        depth_m,
+        sides,
+    )
+    return depth_m, sides
+
+
+def _contrast(sides: FloatArray) -> FloatArray:
+    return np.asarray(sides[:, 1] / np.maximum(sides[:, 0], breaks.LEAST_SLOPE_BEFORE))

@@ -1,6 +1,7 @@
 """The report says what a grid holds and whether it can be screened."""
 
 import json
+import re
 
 import numpy as np
 import pytest
@@ -56,10 +57,6 @@ def test_grids_that_cannot_be_screened_say_why(tmp_path, values, settings, reaso
     assert not report.can_screen
     assert len(report.reasons) == 1
     assert report.lines()[-1].strip() == report.reasons[0]
-    with pytest.raises(AssertionError):
-        assert report.reasons == ()
-    import re
-
     assert re.search(reason, report.reasons[0])
 
 

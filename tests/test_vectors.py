@@ -128,8 +128,7 @@ def test_missing_and_unreadable_files_are_refused(tmp_path, content, message):
 
 def test_a_broken_shape_is_refused(tmp_path):
     path = tmp_path / "a.geojson"
-    ring = [[0, 0], [1, 1], [0, 0]]
-    feature = {"type": "Feature", "properties": {}, "geometry": {"type": "Polygon", "coordinates": [ring]}}
+    feature = {"type": "Feature", "properties": {}, "geometry": {"type": "LineString", "coordinates": [[0, 0]]}}
     path.write_text(json.dumps({"type": "FeatureCollection", "features": [feature]}))
     with pytest.raises(LayerError, match="cannot be read"):
         read_vector(path)

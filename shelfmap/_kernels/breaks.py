@@ -63,26 +63,30 @@ def find_break(
     deepest_m: float,
     least_contrast: float,
     ocean_m: float,
-) -> float:
-    """Distance of the shelf break from the shore, metres; NaN where there is none.
+) -> tuple[float, float]:
+    """Distance of the shelf break from the shore and its depth, metres; NaN where there is none.
 
     The gradient at x is taken over `smoothing_m` centred on x: the slope of the running mean of the depth. A candidate
-    is a stretch of at least `sustain_m` on which it stays at `slope` or more and on which it reaches `confirm`. The
-    break is where the gradient changes most, ``h(x + L) - 2 h(x) + h(x - L)`` at its largest, from one smoothing
-    length before the stretch to where `confirm` is reached. It must lie between the depths allowed and have the
-    contrast, and beyond it the bed must not come back above its depth before the ocean. The first that does is it.
+    is a stretch of at least `sustain_m` on which it stays at `slope` or more. The break is where the gradient changes
+    most, ``h(x + L) - 2 h(x) + h(x - L)`` at its largest, from one smoothing length before the stretch to where it has
+    its say, moved to where the lines of shelf and slope on both sides meet. It must lie between the depths allowed and
+    have the contrast, and beyond it the bed must not come back above its depth before the ocean. The first candidate
+    that reaches `confirm` and passes is it; where none does, the first with twice the contrast on which the bed falls
+    to three times the break's depth: a long gentle slope.
     """
     d = step_m / PLACES_PER_STEP
     n_places = (n - 1) * PLACES_PER_STEP + 1
     half = 0.5 * smoothing_m
+    fallback, fallback_depth = np.nan, np.nan
     i = 0
     while i < n_places:
         x = i * d
-        if depth_at(row, n, step_m, x) < shallowest_m or slope_between(row, n, step_m, x - half, x + half) < slope:
+        depth = depth_at(row, n, step_m, x)
+        if depth > deepest_m + smoothing_m * slope:
+            break
+        if depth < shallowest_m or slope_between(row, n, step_m, x - half, x + half) < slope:
             i += 1
             continue
-        if depth_at(row, n, step_m, x) > deepest_m + smoothing_m * slope:
-            break
         stop, reached = i, -1
         while stop < n_places:
             gradient = slope_between(row, n, step_m, stop * d - half, stop * d + half)
@@ -91,29 +95,62 @@ def find_break(
             if reached < 0 and gradient >= confirm:
                 reached = stop
             stop += 1
-        if (stop - 1 - i) * d >= sustain_m and reached >= 0:
-            best, best_change = -1, 0.0
-            low = max(1, int(np.floor((x - smoothing_m) / d)))
-            high = min(n_places - 1, int(np.ceil((reached * d + half) / d)))
-            for k in range(low, high + 1):
-                at = k * d
-                change = slope_between(row, n, step_m, at, at + smoothing_m) - slope_between(
-                    row, n, step_m, at - smoothing_m, at
-                )
-                if change > best_change * (1.0 + 1e-9):
-                    best, best_change = k, change
-            if best > 0:
-                at = best * d
-                depth = depth_at(row, n, step_m, at)
-                before, beyond = sides(row, n, step_m, at, smoothing_m)
-                if (
-                    shallowest_m <= depth <= deepest_m
-                    and beyond >= least_contrast * max(before, LEAST_SLOPE_BEFORE)
-                    and not _shoals_again(row, n, step_m, at, depth, sustain_m, ocean_m)
-                ):
-                    return at
+        if (stop - 1 - i) * d >= sustain_m:
+            say = reached if reached >= 0 else i + int(np.ceil(sustain_m / d))
+            corner = _sharpest(row, n, step_m, x - smoothing_m, say * d + half, smoothing_m)
+            at, depth = meeting(row, n, step_m, corner, smoothing_m)
+            before, beyond = sides(row, n, step_m, at, smoothing_m)
+            contrast = beyond / max(before, LEAST_SLOPE_BEFORE)
+            if (
+                shallowest_m <= depth <= deepest_m
+                and contrast >= least_contrast
+                and not _shoals_again(row, n, step_m, at, depth, sustain_m, ocean_m)
+            ):
+                if reached >= 0:
+                    return at, depth
+                falls_to = depth_at(row, n, step_m, (stop - 1) * d)
+                if np.isnan(fallback) and contrast >= 2.0 * least_contrast and falls_to >= 3.0 * depth:
+                    fallback, fallback_depth = at, depth
         i = stop + 1
-    return np.nan
+    return fallback, fallback_depth
+
+
+@njit(cache=True)
+def _sharpest(row: F64, n: int, step_m: float, from_m: float, to_m: float, smoothing_m: float) -> float:
+    """Place between two distances where the gradient over `smoothing_m` grows most; the first of equals."""
+    d = step_m / PLACES_PER_STEP
+    best, best_change = 0.0, -np.inf
+    low = max(1, int(np.floor(from_m / d)))
+    high = min((n - 1) * PLACES_PER_STEP, int(np.ceil(to_m / d)))
+    for k in range(low, high + 1):
+        before, beyond = sides(row, n, step_m, k * d, smoothing_m)
+        if beyond - before > best_change + 1e-12:
+            best, best_change = k * d, beyond - before
+    return best
+
+
+@njit(cache=True)
+def meeting(row: F64, n: int, step_m: float, corner_m: float, smoothing_m: float) -> tuple[float, float]:
+    """Where the lines of shelf and slope meet near a corner of the sampled profile, and the depth there.
+
+    A kink between two samples shows as two blunt corners. Lines through the samples one step off the corner, each over
+    half a smoothing length or a step, meet at the kink itself. Never farther than a step from the corner; the corner
+    as it is where there is no room for the lines or they do not steepen.
+    """
+    depth = depth_at(row, n, step_m, corner_m)
+    reach = max(0.5 * smoothing_m, step_m)
+    left, right = corner_m - step_m, corner_m + step_m
+    if left - reach < 0.0 or right + reach > (n - 1) * step_m:
+        return corner_m, depth
+    before = slope_between(row, n, step_m, left - reach, left)
+    beyond = slope_between(row, n, step_m, right, right + reach)
+    if beyond <= before:
+        return corner_m, depth
+    left_depth, right_depth = depth_at(row, n, step_m, left), depth_at(row, n, step_m, right)
+    at = left + (right_depth - left_depth - beyond * (right - left)) / (before - beyond)
+    at = min(max(at, left), right)
+    depth = left_depth + before * (at - left)
+    return at, min(max(depth, min(left_depth, right_depth)), max(left_depth, right_depth))
 
 
 @njit(cache=True)
@@ -127,18 +164,27 @@ def sides(row: F64, n: int, step_m: float, at_m: float, smoothing_m: float) -> t
 
 @njit(cache=True)
 def find_breaks(
-    depth_m: F64, n_samples: I64, step_m: float, slopes: F64, confirm: float, smoothings_m: F64, limits: F64, out_m: F64
+    depth_m: F64,
+    n_samples: I64,
+    step_m: float,
+    slopes: F64,
+    confirm: float,
+    smoothings_m: F64,
+    limits: F64,
+    out_m: F64,
+    out_depth_m: F64,
 ) -> None:
     """Breaks of every profile for every pair of threshold and smoothing length.
 
-    `limits` holds sustain_m, shallowest_m, deepest_m, least_contrast, ocean_m; `out_m` is (n, n_slopes, n_smoothings).
+    `limits` holds sustain_m, shallowest_m, deepest_m, least_contrast, ocean_m; the outputs are
+    (n, n_slopes, n_smoothings).
     """
     for k in range(depth_m.shape[0]):
         for a in range(slopes.shape[0]):
             for b in range(smoothings_m.shape[0]):
-                out_m[k, a, b] = np.nan
+                out_m[k, a, b], out_depth_m[k, a, b] = np.nan, np.nan
                 if n_samples[k] >= 3:
-                    out_m[k, a, b] = find_break(
+                    out_m[k, a, b], out_depth_m[k, a, b] = find_break(
                         depth_m[k], n_samples[k], step_m, slopes[a], max(confirm, slopes[a]), smoothings_m[b],
                         limits[0], limits[1], limits[2], limits[3], limits[4],
                     )  # fmt: skip
@@ -148,9 +194,9 @@ def find_breaks(
 def measure_breaks(
     depth_m: F64, n_samples: I64, step_m: float, break_m: F64, smoothing_m: float, out_depth_m: F64, out_sides: F64
 ) -> None:
-    """Depth at each break and the gradients before and beyond it; NaN without a break."""
+    """Depth of the profile at each break and the gradients before and beyond it; NaN without a break."""
     for k in range(depth_m.shape[0]):
-        if np.isnan(break_m[k]):
-            continue
-        out_depth_m[k] = depth_at(depth_m[k], n_samples[k], step_m, break_m[k])
-        out_sides[k, 0], out_sides[k, 1] = sides(depth_m[k], n_samples[k], step_m, break_m[k], smoothing_m)
+        out_depth_m[k], out_sides[k, 0], out_sides[k, 1] = np.nan, np.nan, np.nan
+        if not np.isnan(break_m[k]):
+            out_depth_m[k] = depth_at(depth_m[k], n_samples[k], step_m, break_m[k])
+            out_sides[k, 0], out_sides[k, 1] = sides(depth_m[k], n_samples[k], step_m, break_m[k], smoothing_m)
