@@ -8,7 +8,7 @@ from typing import Final, NamedTuple
 import numpy as np
 from numpy.typing import NDArray
 
-from shelfmap.errors import GridError
+from shelfmap.errors import GridError, OutputExistsError
 from shelfmap.geodesy import WGS84, local_projection
 from shelfmap.rasters import replace_file, write_geotiff
 from shelfmap.synthetic import SyntheticGrid
@@ -251,7 +251,9 @@ def write_demo(folder: str | Path, *, overwrite: bool = False) -> list[Path]:
     Raises
     ------
     GridError
-        If one of them exists and `overwrite` is off (nothing is written then), or cannot be written.
+        If one of them cannot be written.
+    OutputExistsError
+        If one of them exists and `overwrite` is off; nothing is written then.
 
     Examples
     --------
@@ -266,7 +268,9 @@ def write_demo(folder: str | Path, *, overwrite: bool = False) -> list[Path]:
     ]
     taken = [str(path) for path in paths if path.exists()]
     if taken and not overwrite:
-        raise GridError(f"{', '.join(taken)} exists already; allow overwriting or choose another folder")
+        raise OutputExistsError(
+            f"{', '.join(taken)} exists already; allow it to be overwritten or choose another folder"
+        )
     try:
         folder.mkdir(parents=True, exist_ok=True)
     except OSError as error:

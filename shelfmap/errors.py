@@ -4,7 +4,7 @@ __all__ = [
     "CoastError",
     "GridError",
     "LayerError",
-    "LayerExistsError",
+    "OutputExistsError",
     "ResponseError",
     "SettingsError",
     "ShelfmapError",
@@ -41,8 +41,8 @@ class LayerError(ShelfmapError, OSError):
     """A layer file cannot be written, read or replaced."""
 
 
-class LayerExistsError(LayerError, FileExistsError):
-    """A layer file is there already and may not be overwritten."""
+class OutputExistsError(ShelfmapError, FileExistsError):
+    """A file to be written is there already and may not be overwritten."""
 
 
 class ShelfmapWarning(UserWarning):

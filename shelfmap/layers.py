@@ -115,7 +115,7 @@ def write_layers(
 
     Raises
     ------
-    LayerExistsError
+    OutputExistsError
         If the file is there and `overwrite` is False.
     LayerError
         If the layers do not fit the column table or the file cannot be written; an older file stays as it was.

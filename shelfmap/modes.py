@@ -68,7 +68,8 @@ class ShelfModes(FrozenArrays):
     q, damped_q : (n, 3) array of float
         Re / (2 |Im|) of the two: a free mode falls by e in Q / pi cycles. Below 0.5 a mode is overdamped.
     period_sd_s : (n,) array of float
-        Standard deviation of the first node period from depth error and break position, seconds.
+        Standard deviation of the first node period from depth error and break position, seconds. To first order,
+        the break's part with the depth shoreward of it: too large where the seabed falls away at once.
     kernel_per_m : (n, m) array of float
         Sensitivity K of the first node period on the samples, 1/m: dT/T = -1/2 int K (dh/h) dx (times
         mu / (mu + f^2) with rotation) and int K dx = 1. 0 beyond the break, NaN where the profile has no depth.

@@ -111,13 +111,15 @@ def sample_profiles(
     n = len(transects)
     m = int((np.nanmax(transects.node_m) - np.nanmin(transects.node_m)) / step_m) + 2
     col, row = _node_index(source, transects)
-    grid = source.read(*_window(source, col, row))
+    row0, row1, col0, col1 = _window(source, col, row)
+    grid = source.read(row0, row1, col0, col1)
+    first_col = col0 if source.wraps else grid.col0
     depth_m, filled = np.full((n, m), np.nan), np.zeros((n, m), dtype=np.uint8)
     shore_m, land_m = np.full(n, np.nan), np.full(n, np.nan)
     start, end = np.zeros(n, dtype=np.int64), np.full(n, -1, dtype=np.int64)
     n_samples, counts = np.zeros(n, dtype=np.int64), np.zeros((n, 3), dtype=np.int64)
     tracing.trace_rows(
-        grid.depth_m, grid.row0, grid.col0,
+        grid.depth_m, grid.row0, first_col,
         transects.node_m, row, col, np.isfinite(transects.node_m).sum(axis=1),
         step_m, np.where(transects.is_drawn, np.nanmax(transects.node_m, axis=1) / 2, seek_m),
         SHORT_GAP_SAMPLES, SHORT_GAP_SHARE, LEAST_SPIKE_M, SHORE_HAIR_M,

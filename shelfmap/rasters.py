@@ -12,7 +12,7 @@ from rasterio.crs import CRS
 from rasterio.errors import CRSError
 from rasterio.io import MemoryFile
 
-from shelfmap.errors import GridError
+from shelfmap.errors import GridError, OutputExistsError
 
 __all__ = ["replace_file", "write_geotiff"]
 
@@ -66,8 +66,9 @@ def write_geotiff(  # noqa: PLR0913 - a raster's place is five numbers, and each
     Raises
     ------
     GridError
-        If the array, the cell sides, `nodata` or `crs` cannot be stored, the file exists and `overwrite` is off,
-        or the file cannot be written; an earlier file is then left as it was.
+        If the array, the cell sides, `nodata` or `crs` cannot be stored, or the file cannot be written; an earlier file is then left as it was.
+    OutputExistsError
+        If the file exists and `overwrite` is off.
 
     Examples
     --------
@@ -137,7 +138,7 @@ def _check_target(path: Path, *, overwrite: bool) -> None:
     if not path.parent.is_dir():
         raise GridError(f"folder {path.parent} does not exist; make it first or write elsewhere")
     if path.exists() and not overwrite:
-        raise GridError(f"{path} exists; allow overwriting or choose another name")
+        raise OutputExistsError(f"{path} exists already; allow it to be overwritten or choose another name")
 
 
 def replace_file(path: Path, content: bytes | memoryview) -> None:

@@ -7,7 +7,7 @@ from contextlib import closing, contextmanager
 from pathlib import Path
 from typing import Final
 
-from shelfmap.errors import LayerError, LayerExistsError
+from shelfmap.errors import LayerError, OutputExistsError
 
 __all__ = ["check_target", "replacing"]
 
@@ -23,7 +23,7 @@ def check_target(path: str | Path, *, overwrite: bool) -> None:
 
     Raises
     ------
-    LayerExistsError
+    OutputExistsError
         If the file is there and may not be overwritten.
     LayerError
         If the name does not end in .gpkg, names a folder, or the file or its folder cannot be written to.
@@ -41,7 +41,7 @@ def check_target(path: str | Path, *, overwrite: bool) -> None:
     if not os.access(folder, os.W_OK):
         raise LayerError(f"output {path}: folder {folder} is read-only; write to another folder or open it for writing")
     if path.exists() and not overwrite:
-        raise LayerExistsError(f"output {path} exists already; allow it to be overwritten or give another name")
+        raise OutputExistsError(f"output {path} exists already; allow it to be overwritten or give another name")
     if path.exists() and not os.access(path, os.W_OK):
         raise LayerError(f"output {path} is read-only; open it for writing or give another name")
 

@@ -15,7 +15,7 @@ _TELLING_WORDS: Final[Mapping[str, Positive]] = {
 }  # fmt: skip
 
 #: Elevations count as such by their values alone where the deepest is this much larger than the highest.
-_DEEP_TO_HIGH: Final = 1.5
+_DEEP_TO_HIGH: Final = 1.2
 
 _OTHER_UNITS: Final = re.compile(
     r"(kilo|deci|centi|milli)met(re|er)s?|km|dm|cm|mm|ft|foot|feet|us-ft|us survey f(oo|ee)t|fathoms?|fm", re.IGNORECASE

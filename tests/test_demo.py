@@ -11,7 +11,7 @@ from scipy.ndimage import binary_dilation, binary_opening, label, map_coordinate
 
 from shelfmap.constants import CONSTITUENTS, EARTH_ROTATION_RAD_S, GRAVITY_M_S2
 from shelfmap.demo import demo_gauges, demo_scenario, demo_settings, write_demo
-from shelfmap.errors import GridError
+from shelfmap.errors import GridError, OutputExistsError
 from shelfmap.geodesy import geodesic_nodes
 from shelfmap.settings import Settings
 
@@ -223,7 +223,7 @@ def test_settings_are_valid_show_every_section_and_point_at_the_files(tmp_path, 
 
 def test_existing_demo_is_kept_unless_overwriting_is_allowed(tmp_path):
     (tmp_path / "demo.toml").write_text("mine", encoding="utf-8")
-    with pytest.raises(GridError, match=r"demo\.toml exists already; allow overwriting or choose another folder"):
+    with pytest.raises(OutputExistsError, match=r"demo\.toml exists already; allow it to be overwritten or choose"):
         write_demo(tmp_path)
     assert [path.name for path in tmp_path.iterdir()] == ["demo.toml"]
     write_demo(tmp_path, overwrite=True)

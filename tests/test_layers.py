@@ -12,7 +12,7 @@ from utils_layers import made_up_layer, waves_for
 
 import shelfmap
 from shelfmap.columns import LAYERS, columns_of
-from shelfmap.errors import LayerError, LayerExistsError
+from shelfmap.errors import LayerError, OutputExistsError
 from shelfmap.layers import Layer, read_table, read_vector, write_layers
 from shelfmap.words import CAUTIONS, ENUMERATIONS
 
@@ -335,7 +335,7 @@ def test_inputs_stay_as_they_are(tmp_path):
 def test_an_older_file_is_replaced_only_when_asked(tmp_path):
     path = write_layers(tmp_path / "a.gpkg", all_layers())
     before = path.read_bytes()
-    with pytest.raises(LayerExistsError, match="exists already"):
+    with pytest.raises(OutputExistsError, match="exists already"):
         write_layers(path, [made_up_layer("run")])
     assert path.read_bytes() == before
     write_layers(path, [made_up_layer("run")], overwrite=True)

@@ -169,10 +169,7 @@ def test_poles_are_zeros_of_the_response_for_rough_profiles():
 
 
 def test_damped_pole_of_flat_shelf():
-    """With friction on a flat shelf the pole solves cot(kL) = i r k-ratio in closed form; Newton from our own value.
-
-    F(w) = cos kL - i (w / K) sin kL / (k' ...) is written out below, f = 0.
-    """
+    """The damped pole is a zero of cos kL - i (w / c2) sin kL / k with k^2 = w (w + i r / h) / (g h), f = 0."""
     r, h, deep, width = 1e-3, 100.0, 4000.0, 300e3
     omega = modes([0, width], [h, h], width, friction=r).damped_pole_rad_s[0, 0]
     s = omega + 1j * r / h
@@ -186,8 +183,8 @@ def test_weak_friction_adds_its_loss():
     """1/Q rises by int(r u^2) / (w int(h u^2)), r / (w h) on a flat shelf, for friction that is weak (1e-5 m/s)."""
     got = modes([0, 300e3], [100, 100], 300e3, friction=1e-5)
     added = 1 / got.damped_q[0, 0] - 1 / got.q[0, 0]
-    # without the small part of the energy that the radiation shifts, about 1 / (2 Q)^2
-    assert added == pytest.approx(1e-5 / (100 * got.pole_rad_s[0, 0].real), rel=2e-2)
+    # to first order in 1 / Q only: (pi / 4Q)^2 is 2.5 % here
+    assert added == pytest.approx(1e-5 / (100 * got.pole_rad_s[0, 0].real), rel=3e-2)
 
 
 def test_modes_without_a_break():
@@ -268,21 +265,19 @@ def test_kernel_against_differences(lat_deg):
     share = 1 - (f * base.node_period_s[0, 0] / 2 / np.pi) ** 2
     for middle in (30e3, 100e3, 170e3):
         bump = 1e-3 * np.exp(-(((x - middle) / 12e3) ** 2))
-        up, down = (
-            modes(x, depth * (1 + s * bump), 200e3, lat=lat_deg).node_period_s[0, 0] for s in (1.0, -1.0)
-        )
+        up, down = (modes(x, depth * (1 + s * bump), 200e3, lat=lat_deg).node_period_s[0, 0] for s in (1.0, -1.0))
         wanted = (up - down) / 2 / base.node_period_s[0, 0]
         got = -0.5 * share * np.trapezoid((base.kernel_per_m[0] * bump)[:201], x[:201])
         # trapezoids of 1 km under a bump of 12 km; second order in 0.1 %
         assert got == pytest.approx(wanted, rel=2e-3)
 
 
-def test_one_shallow_sample_stands_out():
-    """A wall of one shallow sample takes a large share of K; without it no interval has 5 %."""
+def test_one_shallow_cell_stands_out():
+    """A cell of 1 m depth amid 80 m acts as a wall and takes a large share of K; without it no interval has 1 %."""
     x = np.linspace(0, 200e3, 401)
     depth = np.full(401, 80.0)
     smooth = modes(x, depth, 200e3).kernel_peak_share[0]
-    depth[200] = 0.5
+    depth[200:202] = 1.0
     assert smooth < 0.01
     assert modes(x, depth, 200e3).kernel_peak_share[0] > 0.05
 
@@ -295,7 +290,7 @@ def test_period_deviation_against_random_depths(lat_deg, break_sd):
     """
     n = 3000
     x = np.linspace(0, 240e3, 121)
-    depth = np.interp(x, [0, 200e3, 240e3], [20, 130, 4000.0])
+    depth = np.interp(x, [0, 224e3, 240e3], [20, 130, 4000.0])  # no kink at the break: that is not linear
     error = DepthError(fixed_m=1.0, per_depth=0.02, correlation_m=20e3)
     rng = np.random.default_rng(4)
     sigma = np.hypot(error.fixed_m, error.per_depth * depth)

@@ -9,7 +9,7 @@ import numpy as np
 import pytest
 import rasterio
 
-from shelfmap.errors import GridError
+from shelfmap.errors import GridError, OutputExistsError
 from shelfmap.rasters import replace_file, write_geotiff
 
 PLACE = {"x0": -20.0, "y0": 30.0, "dx": 0.5, "dy": 0.25, "crs": "EPSG:4326"}
@@ -85,7 +85,7 @@ def test_what_cannot_be_stored_is_named_with_its_cure(tmp_path, values, change, 
 def test_existing_file_is_kept_unless_overwriting_is_allowed(tmp_path):
     path = tmp_path / "a.tif"
     path.write_bytes(b"mine")
-    with pytest.raises(GridError, match="exists; allow overwriting or choose another name"):
+    with pytest.raises(OutputExistsError, match="exists already; allow it to be overwritten or choose another name"):
         write_geotiff(path, RAMP, **PLACE)
     assert path.read_bytes() == b"mine"
     write_geotiff(path, RAMP, **PLACE, overwrite=True)
@@ -120,7 +120,7 @@ def test_disk_that_fills_up_half_way_leaves_nothing(tmp_path):
     code = (
         "import resource, sys\n"
         "from pathlib import Path\n"
-        "from shelfmap.errors import GridError\n"
+        "from shelfmap.errors import GridError, OutputExistsError\n"
         "from shelfmap.rasters import replace_file\n"
         "resource.setrlimit(resource.RLIMIT_FSIZE, (1000, 1000))\n"
         "try:\n"

@@ -7,7 +7,7 @@ from pathlib import Path
 
 import pytest
 
-from shelfmap.errors import LayerError, LayerExistsError
+from shelfmap.errors import LayerError, OutputExistsError
 from shelfmap.replacement import check_target, replacing
 
 
@@ -138,7 +138,7 @@ def test_a_move_the_system_refuses_is_one_sentence(tmp_path, monkeypatch):
 
 def test_an_existing_file_is_refused_unless_it_may_be_overwritten(tmp_path):
     target = database(tmp_path / "a.gpkg")
-    with pytest.raises(LayerExistsError, match=r"a\.gpkg exists already; allow it to be overwritten"):
+    with pytest.raises(OutputExistsError, match=r"a\.gpkg exists already; allow it to be overwritten"):
         check_target(target, overwrite=False)
     with pytest.raises(FileExistsError):
         check_target(target, overwrite=False)

@@ -34,9 +34,7 @@ def waves(
     """Response of a single profile."""
     if not isinstance(friction, Friction):
         friction = Friction(linear_m_s=friction)
-    return wave_response(
-        x, [depth], [break_m], [outer], coriolis_rad_s([lat]), np.atleast_1d(omega), friction=friction
-    )
+    return wave_response(x, [depth], [break_m], [outer], coriolis_rad_s([lat]), np.atleast_1d(omega), friction=friction)
 
 
 def modes(
@@ -112,9 +110,7 @@ def plain_march(cells: kernel_cells.Cells, pull: Any) -> tuple[complex, complex]
     return eta, flux + cells.width_m[-1] * eta
 
 
-def end_state(
-    x: Any, depth: Any, omega: float, f: float, friction_m_s: float, n_cells: int
-) -> tuple[complex, complex]:
+def end_state(x: Any, depth: Any, omega: float, f: float, friction_m_s: float, n_cells: int) -> tuple[complex, complex]:
     """Extrapolated elevation and flux at the outer end from about `n_cells` cells."""
     fine, nodes = kernel_cells.cut_cells(np.asarray(x, dtype=float), np.asarray(depth, dtype=float), -1, n_cells)
     coarse = kernel_cells.coarsen(fine, nodes)
@@ -127,9 +123,7 @@ def end_state(
     return eta_f + (eta_f - eta_c) / 3.0, flux_f + (flux_f - flux_c) / 3.0
 
 
-def plain_drag(
-    x: Any, depth: Any, omega: float, f: float, drag_m: float, outer: float, n: int = 6000
-) -> complex:
+def plain_drag(x: Any, depth: Any, omega: float, f: float, drag_m: float, outer: float, n: int = 6000) -> complex:
     """Twice the incident wave per unit at the coast with drag, on `n` equal steps of distance, second order."""
     at = np.linspace(0.0, x[-1], n + 1)
     middle = 0.5 * (at[1:] + at[:-1])

@@ -1,0 +1,238 @@
+"""Command line: parse, call, print. Results go to stdout, everything else to stderr."""
+
+import json
+import logging
+import sys
+import traceback
+import warnings
+from collections.abc import Callable
+from pathlib import Path
+from typing import TYPE_CHECKING, Any, TypeVar
+
+import click
+
+from shelfmap import __version__
+from shelfmap.errors import OutputExistsError, ShelfmapError
+
+if TYPE_CHECKING:
+    from shelfmap.settings import Settings
+
+__all__ = ["main"]
+
+_F = TypeVar("_F", bound=Callable[..., Any])
+
+EXIT_FAILED = 1
+EXIT_USAGE = 2
+EXIT_NO = 3
+
+
+class _Verbs(click.Group):
+    """Verbs whose errors end in one sentence and an exit code."""
+
+    def invoke(self, ctx: click.Context) -> Any:
+        try:
+            return super().invoke(ctx)
+        except ShelfmapError as error:
+            if logging.getLogger("shelfmap").getEffectiveLevel() <= logging.DEBUG:
+                traceback.print_exc(file=sys.stderr)
+            click.echo(f"Error: {error}", err=True)
+            ctx.exit(EXIT_USAGE if isinstance(error, OutputExistsError) else EXIT_FAILED)
+
+
+def _set_level(ctx: click.Context, _parameter: click.Parameter, count: int) -> None:
+    """Turn -v and -q into one level: warnings without either, -v information, -vv everything, -q errors only."""
+    name = ctx.command.name or ""
+    louder = ctx.meta.setdefault(f"level {name}", [])
+    louder.append(count if _parameter.name == "verbose" else -count)
+    level = max(logging.DEBUG, logging.WARNING - 10 * sum(louder))
+    logging.basicConfig(format="%(levelname)s: %(message)s", stream=sys.stderr, force=True)
+    logging.getLogger("shelfmap").setLevel(level)
+    warnings.showwarning = lambda message, *_: level <= logging.WARNING and click.echo(f"Warning: {message}", err=True)
+
+
+def _loudness(command: _F) -> _F:
+    for name, short, meaning in (
+        ("--verbose", "-v", "Say more; twice for everything, tracebacks too."),
+        ("--quiet", "-q", "Say less: errors only."),
+    ):
+        command = click.option(short, name, count=True, expose_value=False, callback=_set_level, help=meaning)(command)
+    return command
+
+
+_settings_file = click.argument("settings_file", metavar="SETTINGS.toml", type=click.Path(path_type=Path))
+_overwrite = click.option("--overwrite", is_flag=True, help="Replace files that are there already.")
+_as_json = click.option("--json", "as_json", is_flag=True, help="Print a summary as JSON instead of the path.")
+_workers = click.option("--workers", default=1, show_default=True, type=click.IntRange(1), help="Processes to use.")
+
+
+def _output(default: str) -> Callable[[_F], _F]:
+    return click.option(
+        "--output", "-o", type=click.Path(path_type=Path), help=f"GeoPackage to write [default: {default}]"
+    )
+
+
+@click.group(cls=_Verbs, context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100})
+@click.version_option(__version__, prog_name="shelfmap")
+def main() -> None:
+    """Say where tides and other long waves grow along a coast, from a bathymetry grid.
+
+    Screening from gridded depths: not for navigation or any purpose involving safety at sea.
+
+    \b
+    First steps:
+      shelfmap demo my_demo            an invented coast, ready to look at and to edit
+      shelfmap inspect dem.tif         what shelfmap understands of your grid
+      shelfmap screen settings.toml    the main job
+    """
+
+
+@main.command()
+@_settings_file
+@_output("output.path of the settings")
+@_overwrite
+@_workers
+@_as_json
+@_loudness
+def screen(settings_file: Path, output: Path | None, overwrite: bool, workers: int, as_json: bool) -> None:
+    """Screen a coast: transects, shelf breaks and resonance index into one GeoPackage.
+
+    \b
+    Example:
+      shelfmap screen coast.toml --output coast.gpkg --workers 2
+    """
+    settings = _read(settings_file)
+    if output is not None:
+        settings = settings.model_copy(
+            update={"output": settings.output.model_copy(update={"path": output.absolute()})}
+        )
+    _screen(settings, overwrite=overwrite, workers=workers, as_json=as_json)
+
+
+@main.command()
+@click.argument("grid", type=click.Path(path_type=Path))
+@click.option("--positive", type=click.Choice(["auto", "up", "down"]), help="Whether values are elevations or depths.")
+@click.option("--crs", help="Coordinate system, where the file lacks one: EPSG:n.")
+@click.option("--variable", help="Variable of a netCDF file that holds several.")
+@click.option("--band", type=click.IntRange(1), help="Band of the raster.")
+@_as_json
+@_loudness
+def inspect(grid: Path, as_json: bool, **given: Any) -> None:
+    """Print what shelfmap understands of a grid, or of the grid in a settings file.
+
+    Ends with exit code 3, and the reason, where the grid cannot be screened.
+
+    \b
+    Example:
+      shelfmap inspect dem.tif --positive up
+    """
+    from shelfmap.inspection import inspect_grid
+    from shelfmap.settings import Settings
+
+    if grid.suffix == ".toml":
+        settings = _read(grid).grid
+        settings = settings.model_copy(update={name: value for name, value in given.items() if value is not None})
+    else:
+        table = {"path": str(grid)} | {name: value for name, value in given.items() if value is not None}
+        settings = Settings.from_dict({"grid": table}, folder=Path.cwd(), where="command line").grid
+    report = inspect_grid(settings)
+    click.echo(json.dumps(report.as_dict(), indent=2) if as_json else "\n".join(report.lines()))
+    if not report.can_screen:
+        raise click.exceptions.Exit(EXIT_NO)
+
+
+@main.command()
+@click.argument("folder", metavar="DIR", type=click.Path(path_type=Path))
+@_overwrite
+@_workers
+@_as_json
+@_loudness
+def demo(folder: Path, overwrite: bool, workers: int, as_json: bool) -> None:
+    """Write the demo into a folder, an invented coast with settings to edit, and screen it.
+
+    \b
+    Example:
+      shelfmap demo my_demo
+    """
+    from shelfmap.demo import write_demo
+
+    settings_file = write_demo(folder, overwrite=overwrite)[-1]
+    _screen(_read(settings_file), overwrite=overwrite, workers=workers, as_json=as_json)
+
+
+@main.command()
+@_settings_file
+@_output("coast_lines.gpkg")
+@_overwrite
+@_loudness
+def coast(settings_file: Path, output: Path | None, overwrite: bool) -> None:
+    """Write the generalised coast, to edit in a GIS and give back as coast.file.
+
+    \b
+    Example:
+      shelfmap coast coast.toml --output coast_lines.gpkg
+    """
+    from shelfmap.pipeline import write_coast
+
+    path, traced = write_coast(_read(settings_file), output or Path("coast_lines.gpkg"), overwrite=overwrite)
+    length_km = sum(line.length_m for line in traced.lines) / 1e3
+    _say(f"{len(traced.lines)} stretches of coast, {length_km:.0f} km in all: {traced.source}")
+    click.echo(path)
+
+
+@main.command()
+@_settings_file
+@_output("transect_lines.gpkg")
+@_overwrite
+@_loudness
+def transects(settings_file: Path, output: Path | None, overwrite: bool) -> None:
+    """Write the transects, to edit in a GIS and give back as transects.file.
+
+    \b
+    Example:
+      shelfmap transects coast.toml --output transect_lines.gpkg
+    """
+    from shelfmap.pipeline import write_transects
+
+    path, profiles = write_transects(_read(settings_file), output or Path("transect_lines.gpkg"), overwrite=overwrite)
+    _say(f"{len(profiles.n_samples)} transects, sampled every {profiles.step_m / 1e3:.2f} km")
+    click.echo(path)
+
+
+@main.command()
+def schema() -> None:
+    """Print the JSON schema of the settings, for editors that check TOML as you type.
+
+    \b
+    Example:
+      shelfmap schema > settings.schema.json
+    """
+    from shelfmap.settings import Settings
+
+    click.echo(json.dumps(Settings.model_json_schema(), indent=2))
+
+
+def _read(settings_file: Path) -> "Settings":
+    from shelfmap.settings import Settings
+
+    return Settings.from_toml(settings_file)
+
+
+def _say(text: str) -> None:
+    """Tell people, not programs; quiet means quiet."""
+    if logging.getLogger("shelfmap").getEffectiveLevel() <= logging.WARNING:
+        click.echo(text, err=True)
+
+
+def _screen(settings: "Settings", *, overwrite: bool, workers: int, as_json: bool) -> None:
+    """Screen with progress and a count of statuses on stderr, path or summary on stdout."""
+    from shelfmap import pipeline
+
+    def progress(stage: str, done: int, total: int) -> None:
+        if sys.stderr.isatty():
+            _say(f"\r{stage} {done}/{total}" + ("\n" if done == total else "\x1b[1A"))
+
+    run = pipeline.screen(settings, overwrite=overwrite, workers=workers, progress=progress)
+    summary = run.summary()
+    counts = ", ".join(f"{count} {status}" for status, count in summary["status"].items())
+    _say(f"{summary['transects']} transects: {counts}")
+    click.echo(json.dumps(summary) if as_json else run.path)
