@@ -42,7 +42,7 @@ class Nodes(NamedTuple):
     face_m: FloatArray  # (n,)
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def used_end(x_m: FloatArray, depth_m: FloatArray, outer_m: float) -> tuple[int, int, float, float, bool]:
     """First and last sample of the used part, position and depth of its end, and whether a step follows.
 
@@ -79,7 +79,7 @@ def used_end(x_m: FloatArray, depth_m: FloatArray, outer_m: float) -> tuple[int,
     return first, deepest, x_m[deepest], depth_m[deepest], True
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def take_profile(
     x_m: FloatArray, depth_m: FloatArray, outer_m: float, break_m: float
 ) -> tuple[FloatArray, FloatArray, int]:
@@ -108,7 +108,7 @@ def take_profile(
     return x[:n], h[:n], i_break
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def piece_time(dx_m: float, depth_a_m: float, depth_b_m: float) -> float:
     """Exact travel time of a long wave over one linear piece, seconds."""
     if dx_m == 0.0:
@@ -116,7 +116,7 @@ def piece_time(dx_m: float, depth_a_m: float, depth_b_m: float) -> float:
     return 2.0 * dx_m / (math.sqrt(GRAVITY_M_S2 * depth_a_m) + math.sqrt(GRAVITY_M_S2 * depth_b_m))
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def travel_time(x_m: FloatArray, depth_m: FloatArray, i_end: int) -> float:
     """Exact travel time from the first sample to sample `i_end`, seconds."""
     total = 0.0
@@ -125,7 +125,7 @@ def travel_time(x_m: FloatArray, depth_m: FloatArray, i_end: int) -> float:
     return total
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def piece_moments(dx_m: float, depth_a_m: float, depth_b_m: float) -> tuple[float, float]:
     """Integrals of dx/h and of (x - x_a) dx/h over one linear piece; series where nearly flat."""
     mean = 0.5 * (depth_a_m + depth_b_m)
@@ -141,7 +141,7 @@ def piece_moments(dx_m: float, depth_a_m: float, depth_b_m: float) -> tuple[floa
     return zeroth, 0.5 * dx_m * (zeroth + dx_m * skew / mean)
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def piece_damping(dx_m: float, depth_a_m: float, depth_b_m: float) -> float:
     """Integral of dx / (h max(h, floor)) over one linear piece."""
     floor = FRICTION_FLOOR_M
@@ -154,7 +154,7 @@ def piece_damping(dx_m: float, depth_a_m: float, depth_b_m: float) -> float:
     return piece_moments(below, shallow, floor)[0] / floor + (dx_m - below) / (floor * deep)
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def coast_damping(slope: float, x_m: float) -> float:
     """Plain mean of 1 / max(h, floor) from a coast of depth zero to `x_m`: there the flux grows like x."""
     depth = slope * x_m
@@ -163,14 +163,14 @@ def coast_damping(slope: float, x_m: float) -> float:
     return (1.0 + math.log(depth / FRICTION_FLOOR_M)) / depth
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def cell_count(travel_time_s: float, omega_rad_s: float) -> int:
     """Cells for a wave of `omega_rad_s`: even, so that phase per cell is small, within the bounds."""
     wanted = travel_time_s * omega_rad_s / PHASE_PER_CELL
     return 2 * math.ceil(0.5 * min(max(wanted, CELLS_MIN), CELLS_MAX))
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def cut_cells(x_m: FloatArray, depth_m: FloatArray, i_break: int, n_cells: int) -> tuple[Cells, Nodes]:
     """Cut a used profile into about `n_cells` cells (a few more where it has steps, a break or a dry coast)."""
     last = x_m.size - 1
@@ -216,7 +216,7 @@ def cut_cells(x_m: FloatArray, depth_m: FloatArray, i_break: int, n_cells: int) 
     return Cells(width, inertia[:n], damping[:n], inverse[:n], zero_coast, node_break), nodes
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _cut_part(
     x: FloatArray,
     h: FloatArray,
@@ -274,7 +274,7 @@ def _cut_part(
     return n
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _widths(face_m: FloatArray, end_m: float) -> FloatArray:
     """Distances between faces, from the coast to the end."""
     width = np.empty(face_m.size + 1)
@@ -286,7 +286,7 @@ def _widths(face_m: FloatArray, end_m: float) -> FloatArray:
     return width
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def coarsen(cells: Cells, nodes: Nodes) -> Cells:
     """Make the grid of every second node."""
     n = nodes.face_m.size // 2

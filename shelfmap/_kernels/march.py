@@ -32,7 +32,7 @@ DRAG_TOLERANCE = 1e-4
 FRICTION_START_MIN_M_S = 1e-6  # the turn r <- sqrt(r r_new) cannot leave zero
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def coast_series(y: complex) -> tuple[complex, complex, complex, complex]:
     """Solution near a coast of depth zero: eta and P / x at y = a x / (g slope), and their derivatives by y.
 
@@ -44,7 +44,7 @@ def coast_series(y: complex) -> tuple[complex, complex, complex, complex]:
     return eta, flux, -flux, flux_y
 
 
-@njit(cache=True, fastmath={"contract"})
+@njit(cache=True, error_model="numpy", fastmath={"contract"})
 def march_real(cells: Cells, stiffness: FloatArray, eta: FloatArray, flux: FloatArray, eta_break: FloatArray) -> None:
     """March all waves without friction; `stiffness` is omega^2 - f^2. Fills the values at the end and the break."""
     n, first = cells.inertia_s2_m.size, 0
@@ -56,20 +56,35 @@ def march_real(cells: Cells, stiffness: FloatArray, eta: FloatArray, flux: Float
             start, growth, _, _ = coast_series(complex(stiffness[q] * cells.inertia_s2_m[0]))
             eta[q] = start.real
             flux[q] = cells.width_m[0] * growth.real
-    for j in range(first, n):
-        if j == cells.i_break:
-            eta_break[:] = eta
-        width, inertia = cells.width_m[j], cells.inertia_s2_m[j]
-        for q in range(stiffness.size):
-            flux[q] += width * eta[q]
-            eta[q] -= inertia * stiffness[q] * flux[q]
-    if n == cells.i_break:
+    if cells.i_break > 0:
+        _march_cells(cells, first, cells.i_break, stiffness, eta, flux)
         eta_break[:] = eta
+        first = cells.i_break
+    _march_cells(cells, first, n, stiffness, eta, flux)
     for q in range(stiffness.size):
         flux[q] += cells.width_m[n] * eta[q]
 
 
-@njit(cache=True, fastmath={"contract"})
+@njit(cache=True, error_model="numpy", fastmath={"contract"})
+def _march_cells(cells: Cells, begin: int, end: int, stiffness: FloatArray, eta: FloatArray, flux: FloatArray) -> None:
+    """March on from node `begin` to node `end`; two cells at a time halve the stores."""
+    width, inertia = cells.width_m, cells.inertia_s2_m
+    odd = begin + (end - begin) % 2
+    for j in range(begin, odd):
+        for q in range(stiffness.size):
+            flux[q] += width[j] * eta[q]
+            eta[q] -= inertia[j] * stiffness[q] * flux[q]
+    for j in range(odd, end, 2):
+        width_a, width_b, inertia_a, inertia_b = width[j], width[j + 1], inertia[j], inertia[j + 1]
+        for q in range(stiffness.size):
+            p, e = flux[q] + width_a * eta[q], eta[q]
+            e -= inertia_a * stiffness[q] * p
+            p += width_b * e
+            flux[q] = p
+            eta[q] = e - inertia_b * stiffness[q] * p
+
+
+@njit(cache=True, error_model="numpy", fastmath={"contract"})
 def march_damped(
     cells: Cells,
     omega: FloatArray,
@@ -113,14 +128,21 @@ def march_damped(
         pi[q] += cells.width_m[n] * ei[q]
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def stiffness_at(omega: complex, f2: float, rho: float) -> complex:
     """Give omega (s - f^2 / s) with s = omega + i rho."""
     s = omega + 1j * rho
-    return omega * (s - f2 / s)
+    return omega * (s - f2 * inverse(s))
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
+def inverse(z: complex) -> complex:
+    """Give 1 / z without the error that a compiled complex division raises at 0: not finite there."""
+    size = z.real * z.real + z.imag * z.imag
+    return complex(z.real / size, -z.imag / size)
+
+
+@njit(cache=True, error_model="numpy")
 def march_varied(
     cells: Cells, omega: float, f2: float, rho: FloatArray, flux_size: FloatArray
 ) -> tuple[complex, complex, complex]:
@@ -145,7 +167,7 @@ def march_varied(
     return eta, flux + cells.width_m[rho.size] * eta, eta_break
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def settle_drag(
     cells: Cells, omega: float, f2: float, outgoing: complex, drag_m: float, friction_m_s: FloatArray
 ) -> bool:
@@ -170,7 +192,7 @@ def settle_drag(
     return False
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def drag_wave(
     fine: Cells, coarse: Cells, omega: float, f2: float, outgoing: complex, drag_m: float, start_m_s: float
 ) -> tuple[complex, complex]:
@@ -191,13 +213,13 @@ def drag_wave(
     return incident, _extrapolate(eta_break, eta_break_c)
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _extrapolate(fine: complex, coarse: complex) -> complex:
     """Richardson's step for a second-order scheme on ns and ns / 2 cells."""
     return fine + (fine - coarse) / 3.0
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def deep_ends(
     x_m: FloatArray,
     depth_m: FloatArray,
@@ -212,7 +234,7 @@ def deep_ends(
         stepped[row] = step
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def respond(
     x_m: FloatArray,
     depth_m: FloatArray,
@@ -259,7 +281,7 @@ def respond(
                 incident[row, q] = damped_incident[row, q] = complex(math.nan)
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _respond_plain(
     fine: Cells,
     coarse: Cells,
@@ -280,7 +302,7 @@ def _respond_plain(
         eta_break[q] = _extrapolate(complex(at_break[0, q]), complex(at_break[1, q]))
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _respond_damped(
     fine: Cells,
     coarse: Cells,

@@ -15,7 +15,7 @@ from shelfmap._kernels.cells import (
     take_profile,
     travel_time,
 )
-from shelfmap._kernels.march import coast_series
+from shelfmap._kernels.march import coast_series, inverse
 from shelfmap._kernels.sensitivity import first_mode, mode_shape
 from shelfmap.constants import GRAVITY_M_S2
 
@@ -26,13 +26,14 @@ N_MODES = 3
 START_SHARE = 0.9  # Newton starts from this share of the node mode
 POLE_SHARE_MIN, POLE_SHARE_MAX = 0.5, 1.6  # a pole further from its node mode belongs to something else
 NEWTON_TURNS_MAX = 60
+HIGHEST_MU = 1e12  # 1/s^2, far above any wave: ends the search where depths are absurd
 NEWTON_TOLERANCE = 1e-11
 SAME_POLE = 1e-6
 FRICTION_SHARES = (0.1, 0.25, 0.5, 0.75, 1.0)
 FRICTION_LEAP_MAX = 0.5  # a damped pole that moves by more in one step is another one
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def march_node(cells: Cells, i_end: int, mu: float) -> tuple[float, float, int]:
     """Elevation at node `i_end`, its derivative by mu, and the nodal points before it."""
     eta, eta_mu, flux, flux_mu, nodal = 1.0, 0.0, 0.0, 0.0, 0
@@ -53,12 +54,14 @@ def march_node(cells: Cells, i_end: int, mu: float) -> tuple[float, float, int]:
     return eta, eta_mu, nodal
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def node_mode(cells: Cells, i_end: int, time_s: float, number: int) -> float:
     """Eigenvalue mu of mode `number` (from 1) with a node at `i_end`: counting of nodal points, then Newton."""
     low, high = 0.0, (number * math.pi / time_s) ** 2
     count_low, (_, _, count_high) = 0, march_node(cells, i_end, high)
     while count_high < number:
+        if not high < HIGHEST_MU:
+            return math.nan
         low, count_low = high, count_high
         high *= 2.0
         count_high = march_node(cells, i_end, high)[2]
@@ -87,7 +90,7 @@ def node_mode(cells: Cells, i_end: int, time_s: float, number: int) -> float:
     return mu
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def march_pole(cells: Cells, kappa: complex, speed: float) -> tuple[complex, complex]:
     """Twice the incident wave at complex kappa = sqrt(omega^2 - f^2), and its derivative by kappa."""
     stiffness = kappa * kappa
@@ -110,7 +113,7 @@ def march_pole(cells: Cells, kappa: complex, speed: float) -> tuple[complex, com
     return eta + outgoing * flux, 2.0 * kappa * (eta_d + outgoing * flux_d) - 1j / speed * flux
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def march_damped_pole(
     cells: Cells, omega: complex, f2: float, friction_m_s: float, speed: float
 ) -> tuple[complex, complex]:
@@ -119,9 +122,10 @@ def march_damped_pole(
     n = cells.inertia_s2_m.size
     for j in range(n):
         s = omega + 1j * friction_m_s * cells.damping_per_m[j]
-        turn = f2 / s
+        inverse_s = inverse(s)
+        turn = f2 * inverse_s
         pull = omega * (s - turn) * cells.inertia_s2_m[j]
-        pull_w = (s - turn + omega * (1.0 + turn / s)) * cells.inertia_s2_m[j]
+        pull_w = (s - turn + omega * (1.0 + turn * inverse_s)) * cells.inertia_s2_m[j]
         if j == 0 and cells.zero_coast:
             eta, growth, eta_y, growth_y = coast_series(pull)
             eta_w = eta_y * pull_w
@@ -134,17 +138,17 @@ def march_damped_pole(
     flux += cells.width_m[n] * eta
     flux_w += cells.width_m[n] * eta_w
     kappa = outer_kappa(omega, f2)
-    return eta - 1j * kappa / speed * flux, eta_w - 1j / speed * (kappa * flux_w + omega / kappa * flux)
+    return eta - 1j * kappa / speed * flux, eta_w - 1j / speed * (kappa * flux_w + omega * inverse(kappa) * flux)
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def outer_kappa(omega: complex, f2: float) -> complex:
     """sqrt(omega^2 - f^2) on the side of outgoing waves."""
     kappa = complex(np.sqrt(omega * omega - f2))
     return kappa if kappa.real >= 0.0 else -kappa
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def find_pole(fine: Cells, coarse: Cells, speed: float, start: complex, found: ComplexArray, n_found: int) -> complex:
     """Newton from `start` for a pole other than those found, each found one and its mirror divided out."""
     kappa = start
@@ -154,12 +158,12 @@ def find_pole(fine: Cells, coarse: Cells, speed: float, start: complex, found: C
         value, slope = value_f + (value_f - value_c) / 3.0, slope_f + (slope_f - slope_c) / 3.0
         if value == 0.0:
             return kappa
-        rate = slope / value
+        rate = slope * inverse(value)
         for i in range(n_found):
-            rate -= 1.0 / (kappa - found[i]) + 1.0 / (kappa + found[i].conjugate())
+            rate -= inverse(kappa - found[i]) + inverse(kappa + found[i].conjugate())
         if rate == 0.0 or not math.isfinite(abs(rate)):
             break
-        step = 1.0 / rate
+        step = inverse(rate)
         if abs(step) > 0.5 * abs(kappa):
             step *= 0.5 * abs(kappa) / abs(step)
         kappa -= step
@@ -168,7 +172,7 @@ def find_pole(fine: Cells, coarse: Cells, speed: float, start: complex, found: C
     return complex(math.nan, math.nan)
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def find_poles(fine: Cells, coarse: Cells, speed: float, starts: FloatArray, kappa: ComplexArray) -> None:
     """Fill `kappa` (3,) with one pole for each node mode, all distinct, by rising real part; NaN where none was found.
 
@@ -197,7 +201,7 @@ def find_poles(fine: Cells, coarse: Cells, speed: float, starts: FloatArray, kap
             n += 1
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def damp_pole(fine: Cells, coarse: Cells, speed: float, f2: float, friction_m_s: float, pole: complex) -> complex:
     """Follow a frictionless pole omega to full friction; NaN where it is lost or turns into pure decay."""
     omega = pole
@@ -210,7 +214,7 @@ def damp_pole(fine: Cells, coarse: Cells, speed: float, f2: float, friction_m_s:
             slope = slope_f + (slope_f - slope_c) / 3.0
             if slope == 0.0 or not math.isfinite(abs(slope)):
                 break
-            step = (value_f + (value_f - value_c) / 3.0) / slope
+            step = (value_f + (value_f - value_c) / 3.0) * inverse(slope)
             omega -= step
             if not abs(omega - last) <= FRICTION_LEAP_MAX * abs(last):
                 break
@@ -222,7 +226,7 @@ def damp_pole(fine: Cells, coarse: Cells, speed: float, f2: float, friction_m_s:
     return omega
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def friction_loss(cells: Cells, pole: complex, f2: float, friction_m_s: float) -> float:
     """1/Q that weak friction adds: int(r u^2) / (omega int(h u^2)), u taken at the real part of the pole."""
     mu = max(pole.real * pole.real - f2, 0.0)
@@ -239,7 +243,7 @@ def friction_loss(cells: Cells, pole: complex, f2: float, friction_m_s: float) -
     return loss / (pole.real * energy)
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def shelf_rows(
     x_m: FloatArray,
     depth_m: FloatArray,
@@ -298,7 +302,7 @@ def shelf_rows(
             period_sd_s[row] *= node_period_s[row, 0]
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def _poles(
     fine: Cells,
     coarse: Cells,

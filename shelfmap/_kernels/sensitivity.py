@@ -13,7 +13,7 @@ from shelfmap.constants import GRAVITY_M_S2
 FloatArray = NDArray[np.float64]
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def mode_shape(cells: Cells, nodes: Nodes, mu: float, face_flux: FloatArray, eta: FloatArray, flux: FloatArray) -> None:
     """Fill flux at faces (i_break,), elevation and flux at nodes (i_break + 1,) of a node mode."""
     eta[0], flux[0], p = 1.0, 0.0, 0.0
@@ -28,7 +28,7 @@ def mode_shape(cells: Cells, nodes: Nodes, mu: float, face_flux: FloatArray, eta
         flux[j + 1] = p + (nodes.x_m[j + 1] - nodes.face_m[j]) * eta[j + 1]
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def flux_at(x_m: float, j: int, nodes: Nodes, eta: FloatArray, flux: FloatArray) -> tuple[float, int]:
     """Flux at `x_m` by cubic Hermite between nodes (its slope is eta), and the cell; search starts from cell `j`."""
     while j < eta.size - 2 and nodes.x_m[j + 1] < x_m:
@@ -40,7 +40,7 @@ def flux_at(x_m: float, j: int, nodes: Nodes, eta: FloatArray, flux: FloatArray)
     return value + t * s * dx * (s * eta[j] - t * eta[j + 1]), j
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def peak_share(
     x: FloatArray, h: FloatArray, i_break: int, nodes: Nodes, eta: FloatArray, flux: FloatArray, total: float
 ) -> float:
@@ -65,7 +65,7 @@ def peak_share(
     return largest
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def depth_variance(
     cells: Cells,
     nodes: Nodes,
@@ -97,7 +97,7 @@ def depth_variance(
     return variance
 
 
-@njit(cache=True)
+@njit(cache=True, error_model="numpy")
 def first_mode(
     cells: Cells,
     nodes: Nodes,
