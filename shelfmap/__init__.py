@@ -1,3 +1,61 @@
-"""Where tides and other long waves grow on a continental shelf, from a bathymetry grid."""
+"""Where tides and other long waves grow on a continental shelf, from a bathymetry grid.
+
+The names of `__all__` are loaded when first asked for, so that ``import shelfmap`` costs nothing.
+"""
+
+from typing import TYPE_CHECKING
 
 __version__ = "0.1.0"
+
+__all__ = [
+    "Settings",
+    "__version__",
+    "find_shelf_breaks",
+    "lay_transects",
+    "open_grid",
+    "read_table",
+    "resonance_index",
+    "sample_profiles",
+    "screen",
+    "shelf_modes",
+    "trace_coast",
+    "wave_response",
+]
+
+if TYPE_CHECKING:
+    from shelfmap.coast import trace_coast
+    from shelfmap.grid import open_grid
+    from shelfmap.index import resonance_index
+    from shelfmap.layers import read_table
+    from shelfmap.pipeline import screen
+    from shelfmap.profiles import sample_profiles
+    from shelfmap.response import shelf_modes, wave_response
+    from shelfmap.settings import Settings
+    from shelfmap.shelfbreak import find_shelf_breaks
+    from shelfmap.transects import lay_transects
+else:
+    _HOMES = {
+        "Settings": "settings",
+        "find_shelf_breaks": "shelfbreak",
+        "lay_transects": "transects",
+        "open_grid": "grid",
+        "read_table": "layers",
+        "resonance_index": "index",
+        "sample_profiles": "profiles",
+        "screen": "pipeline",
+        "shelf_modes": "response",
+        "trace_coast": "coast",
+        "wave_response": "response",
+    }
+
+    def __getattr__(name):
+        """Load a public name from the module that defines it (PEP 562)."""
+        from importlib import import_module  # noqa: PLC0415 - not a public name of this module
+
+        if name not in _HOMES:
+            raise AttributeError(f"module {__name__!r} has no attribute {name!r}")
+        return getattr(import_module(f"{__name__}.{_HOMES[name]}"), name)
+
+    def __dir__():
+        """Public names, for completion."""
+        return sorted({*globals(), *__all__})

@@ -1,18 +1,20 @@
 """Command line: parse, call, print. Results go to stdout, everything else to stderr."""
 
+import functools
 import json
 import logging
 import sys
 import traceback
 import warnings
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, TypeVar
 
 import click
 
 from shelfmap import __version__
-from shelfmap.errors import OutputExistsError, ShelfmapError
+from shelfmap.errors import OutputExistsError, ShelfmapError, ShelfmapWarning
 
 if TYPE_CHECKING:
     from shelfmap.settings import Settings
@@ -26,37 +28,43 @@ EXIT_USAGE = 2
 EXIT_NO = 3
 
 
-class _Verbs(click.Group):
-    """Verbs whose errors end in one sentence and an exit code."""
+def _spoken(command: _F) -> _F:
+    """Give a verb -v and -q; its warnings and logs become lines on stderr, its errors one sentence and an exit code."""
 
-    def invoke(self, ctx: click.Context) -> Any:
-        try:
-            return super().invoke(ctx)
-        except ShelfmapError as error:
-            if logging.getLogger("shelfmap").getEffectiveLevel() <= logging.DEBUG:
-                traceback.print_exc(file=sys.stderr)
-            click.echo(f"Error: {error}", err=True)
-            ctx.exit(EXIT_USAGE if isinstance(error, OutputExistsError) else EXIT_FAILED)
+    @click.option("-v", "--verbose", count=True, help="Say more; twice for everything, tracebacks too.")
+    @click.option("-q", "--quiet", count=True, help="Say less: errors only.")
+    @functools.wraps(command)
+    def spoken(*args: Any, verbose: int, quiet: int, **kwargs: Any) -> None:
+        level = max(logging.DEBUG, logging.WARNING - 10 * (verbose - quiet))
+        with _messages(level):
+            try:
+                command(*args, **kwargs)
+            except ShelfmapError as error:
+                if level <= logging.DEBUG:
+                    click.echo(traceback.format_exc(), err=True, nl=False)
+                taken = isinstance(error, OutputExistsError)
+                click.echo(f"Error: {error}{' (--overwrite allows it)' if taken else ''}", err=True)
+                raise click.exceptions.Exit(EXIT_USAGE if taken else EXIT_FAILED) from None
 
-
-def _set_level(ctx: click.Context, _parameter: click.Parameter, count: int) -> None:
-    """Turn -v and -q into one level: warnings without either, -v information, -vv everything, -q errors only."""
-    name = ctx.command.name or ""
-    louder = ctx.meta.setdefault(f"level {name}", [])
-    louder.append(count if _parameter.name == "verbose" else -count)
-    level = max(logging.DEBUG, logging.WARNING - 10 * sum(louder))
-    logging.basicConfig(format="%(levelname)s: %(message)s", stream=sys.stderr, force=True)
-    logging.getLogger("shelfmap").setLevel(level)
-    warnings.showwarning = lambda message, *_: level <= logging.WARNING and click.echo(f"Warning: {message}", err=True)
+    return spoken  # type: ignore[return-value]
 
 
-def _loudness(command: _F) -> _F:
-    for name, short, meaning in (
-        ("--verbose", "-v", "Say more; twice for everything, tracebacks too."),
-        ("--quiet", "-q", "Say less: errors only."),
-    ):
-        command = click.option(short, name, count=True, expose_value=False, callback=_set_level, help=meaning)(command)
-    return command
+@contextmanager
+def _messages(level: int) -> Iterator[None]:
+    """Print logs from `level` on and, unless quiet, warnings: a line each."""
+    log, handler = logging.getLogger("shelfmap"), logging.StreamHandler()
+    handler.setFormatter(logging.Formatter("%(levelname)s: %(message)s"))
+    before = log.level
+    log.addHandler(handler)
+    log.setLevel(level)
+    try:
+        with warnings.catch_warnings():
+            warnings.simplefilter("always", ShelfmapWarning)
+            warnings.showwarning = lambda message, *_, **__: _say(f"Warning: {message}")
+            yield
+    finally:
+        log.setLevel(before)
+        log.removeHandler(handler)
 
 
 _settings_file = click.argument("settings_file", metavar="SETTINGS.toml", type=click.Path(path_type=Path))
@@ -71,7 +79,7 @@ def _output(default: str) -> Callable[[_F], _F]:
     )
 
 
-@click.group(cls=_Verbs, context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100})
+@click.group(context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100})
 @click.version_option(__version__, prog_name="shelfmap")
 def main() -> None:
     """Say where tides and other long waves grow along a coast, from a bathymetry grid.
@@ -92,7 +100,7 @@ def main() -> None:
 @_overwrite
 @_workers
 @_as_json
-@_loudness
+@_spoken
 def screen(settings_file: Path, output: Path | None, overwrite: bool, workers: int, as_json: bool) -> None:
     """Screen a coast: transects, shelf breaks and resonance index into one GeoPackage.
 
@@ -102,9 +110,8 @@ def screen(settings_file: Path, output: Path | None, overwrite: bool, workers: i
     """
     settings = _read(settings_file)
     if output is not None:
-        settings = settings.model_copy(
-            update={"output": settings.output.model_copy(update={"path": output.absolute()})}
-        )
+        written = settings.output.model_copy(update={"path": output.absolute()})
+        settings = settings.model_copy(update={"output": written})
     _screen(settings, overwrite=overwrite, workers=workers, as_json=as_json)
 
 
@@ -115,7 +122,7 @@ def screen(settings_file: Path, output: Path | None, overwrite: bool, workers: i
 @click.option("--variable", help="Variable of a netCDF file that holds several.")
 @click.option("--band", type=click.IntRange(1), help="Band of the raster.")
 @_as_json
-@_loudness
+@_spoken
 def inspect(grid: Path, as_json: bool, **given: Any) -> None:
     """Print what shelfmap understands of a grid, or of the grid in a settings file.
 
@@ -128,7 +135,7 @@ def inspect(grid: Path, as_json: bool, **given: Any) -> None:
     from shelfmap.inspection import inspect_grid
     from shelfmap.settings import Settings
 
-    if grid.suffix == ".toml":
+    if grid.suffix.lower() == ".toml":
         settings = _read(grid).grid
         settings = settings.model_copy(update={name: value for name, value in given.items() if value is not None})
     else:
@@ -145,7 +152,7 @@ def inspect(grid: Path, as_json: bool, **given: Any) -> None:
 @_overwrite
 @_workers
 @_as_json
-@_loudness
+@_spoken
 def demo(folder: Path, overwrite: bool, workers: int, as_json: bool) -> None:
     """Write the demo into a folder, an invented coast with settings to edit, and screen it.
 
@@ -163,7 +170,7 @@ def demo(folder: Path, overwrite: bool, workers: int, as_json: bool) -> None:
 @_settings_file
 @_output("coast_lines.gpkg")
 @_overwrite
-@_loudness
+@_spoken
 def coast(settings_file: Path, output: Path | None, overwrite: bool) -> None:
     """Write the generalised coast, to edit in a GIS and give back as coast.file.
 
@@ -173,7 +180,8 @@ def coast(settings_file: Path, output: Path | None, overwrite: bool) -> None:
     """
     from shelfmap.pipeline import write_coast
 
-    path, traced = write_coast(_read(settings_file), output or Path("coast_lines.gpkg"), overwrite=overwrite)
+    path = output or Path("coast_lines.gpkg")
+    traced = write_coast(_read(settings_file), path, overwrite=overwrite)
     length_km = sum(line.length_m for line in traced.lines) / 1e3
     _say(f"{len(traced.lines)} stretches of coast, {length_km:.0f} km in all: {traced.source}")
     click.echo(path)
@@ -183,7 +191,7 @@ def coast(settings_file: Path, output: Path | None, overwrite: bool) -> None:
 @_settings_file
 @_output("transect_lines.gpkg")
 @_overwrite
-@_loudness
+@_spoken
 def transects(settings_file: Path, output: Path | None, overwrite: bool) -> None:
     """Write the transects, to edit in a GIS and give back as transects.file.
 
@@ -193,7 +201,8 @@ def transects(settings_file: Path, output: Path | None, overwrite: bool) -> None
     """
     from shelfmap.pipeline import write_transects
 
-    path, profiles = write_transects(_read(settings_file), output or Path("transect_lines.gpkg"), overwrite=overwrite)
+    path = output or Path("transect_lines.gpkg")
+    profiles = write_transects(_read(settings_file), path, overwrite=overwrite)
     _say(f"{len(profiles.n_samples)} transects, sampled every {profiles.step_m / 1e3:.2f} km")
     click.echo(path)
 
@@ -214,13 +223,18 @@ def schema() -> None:
 def _read(settings_file: Path) -> "Settings":
     from shelfmap.settings import Settings
 
+    if settings_file.suffix.lower() != ".toml":
+        raise click.UsageError(
+            f"{settings_file} is no settings file, whose name ends in .toml; "
+            "'shelfmap demo DIR' writes one to start from, 'shelfmap inspect' takes a grid"
+        )
     return Settings.from_toml(settings_file)
 
 
-def _say(text: str) -> None:
+def _say(text: str, *, end: str = "\n") -> None:
     """Tell people, not programs; quiet means quiet."""
-    if logging.getLogger("shelfmap").getEffectiveLevel() <= logging.WARNING:
-        click.echo(text, err=True)
+    if logging.getLogger("shelfmap").isEnabledFor(logging.WARNING):
+        click.echo(text + end, err=True, nl=False)
 
 
 def _screen(settings: "Settings", *, overwrite: bool, workers: int, as_json: bool) -> None:
@@ -228,10 +242,10 @@ def _screen(settings: "Settings", *, overwrite: bool, workers: int, as_json: boo
     from shelfmap import pipeline
 
     def progress(stage: str, done: int, total: int) -> None:
-        if sys.stderr.isatty():
-            _say(f"\r{stage} {done}/{total}" + ("\n" if done == total else "\x1b[1A"))
+        _say(f"{stage} {done}/{total}", end="\r")  # whatever is printed next overwrites it
 
-    run = pipeline.screen(settings, overwrite=overwrite, workers=workers, progress=progress)
+    shown = progress if sys.stderr.isatty() else None
+    run = pipeline.screen(settings, overwrite=overwrite, workers=workers, progress=shown)
     summary = run.summary()
     counts = ", ".join(f"{count} {status}" for status, count in summary["status"].items())
     _say(f"{summary['transects']} transects: {counts}")

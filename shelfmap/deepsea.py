@@ -56,7 +56,7 @@ def deep_end(
     x_m : (m,) array_like of float
         Distances from the coast, metres, from 0, not falling; two equal ones are a vertical step.
     depth_m : (n, m) array_like of float
-        Depths, metres, > 0 but for the first sample, which may be 0; NaN after each row's end.
+        Depths, metres, > 0 (1e-6 up) but for the first sample, which may be 0; NaN after each row's end.
     deep_m : float or "deepest"
         Depth of the deep sea, metres, or the greatest depth of each row.
 

@@ -1,5 +1,7 @@
 """From a grid and transects to depth profiles, each from the shore seaward."""
 
+import warnings
+from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import Final
 
@@ -33,6 +35,8 @@ SHORT_GAP_SHARE: Final = 0.02
 LEAST_SPIKE_M: Final = 10.0
 #: A profile has at most this many samples; a finer grid is sampled more coarsely, and the step says so.
 MOST_SAMPLES: Final = 6000
+#: Windows of the grid have at most this many cells, unless one transect alone needs more: 160 MB of depths.
+MOST_CELLS: Final = 40_000_000
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -91,7 +95,7 @@ def sample_profiles(
     Parameters
     ----------
     source : GridSource
-        The bathymetry; one window round the transects is read.
+        The bathymetry; windows round neighbouring transects are read, one at a time.
     transects : Transects
         Lines to sample.
     step_m : float
@@ -110,21 +114,23 @@ def sample_profiles(
     """
     n = len(transects)
     m = int((np.nanmax(transects.node_m) - np.nanmin(transects.node_m)) / step_m) + 2
+    seek_row_m = np.where(transects.is_drawn, np.nanmax(transects.node_m, axis=1) / 2, seek_m)
+    n_nodes = np.isfinite(transects.node_m).sum(axis=1)
     col, row = _node_index(source, transects)
-    row0, row1, col0, col1 = _window(source, col, row)
-    grid = source.read(row0, row1, col0, col1)
-    first_col = col0 if source.wraps else grid.col0
     depth_m, filled = np.full((n, m), np.nan), np.zeros((n, m), dtype=np.uint8)
     shore_m, land_m = np.full(n, np.nan), np.full(n, np.nan)
     start, end = np.zeros(n, dtype=np.int64), np.full(n, -1, dtype=np.int64)
     n_samples, counts = np.zeros(n, dtype=np.int64), np.zeros((n, 3), dtype=np.int64)
-    tracing.trace_rows(
-        grid.depth_m, grid.row0, first_col,
-        transects.node_m, row, col, np.isfinite(transects.node_m).sum(axis=1),
-        step_m, np.where(transects.is_drawn, np.nanmax(transects.node_m, axis=1) / 2, seek_m),
-        SHORT_GAP_SAMPLES, SHORT_GAP_SHARE, LEAST_SPIKE_M, SHORE_HAIR_M,
-        depth_m, filled, shore_m, start, n_samples, end, land_m, counts,
-    )  # fmt: skip
+    for first, stop, window in _windows(source, col, row):
+        grid = source.read(*window)
+        rows = slice(first, stop)
+        tracing.trace_rows(
+            grid.depth_m, grid.row0, grid.col0, grid.wrap_cols,
+            transects.node_m[rows], row[rows], col[rows], n_nodes[rows], step_m, seek_row_m[rows],
+            SHORT_GAP_SAMPLES, SHORT_GAP_SHARE, LEAST_SPIKE_M, SHORE_HAIR_M,
+            depth_m[rows], filled[rows], shore_m[rows], start[rows], n_samples[rows], end[rows], land_m[rows],
+            counts[rows],
+        )  # fmt: skip
     shore_m[start > tracing.IN_WATER] = np.nan
     end[_ends_at_islet(transects, end, shore_m + land_m, islets)] = tracing.ISLAND
     shore_lon, shore_lat = place_on(transects, shore_m)
@@ -185,19 +191,44 @@ def distance_along(transects: Transects, row: int, lon_deg: float, lat_deg: floa
 
 
 def _node_index(source: GridSource, transects: Transects) -> tuple[FloatArray, FloatArray]:
-    """Grid index of every node, columns without jumps where the grid goes round the globe."""
+    """Grid index of every node, columns without jumps along a transect where the grid goes round the globe."""
     col, row = source.index_of(transects.node_lon_deg, transects.node_lat_deg)
     if source.wraps:
-        first = np.isfinite(col[:, 0])
-        col[first] = col[first, :1] + (transects.node_lon_deg[first] - transects.node_lon_deg[first, :1]) / source.dx
-        col += source.n_cols * np.round((col[0, 0] - col[:, :1]) / source.n_cols)
-    return col, row
+        col = col[:, :1] + (transects.node_lon_deg - transects.node_lon_deg[:, :1]) / source.dx
+    # far from where a projection holds it gives no finite place
+    off_map = ~(np.isfinite(col) & np.isfinite(row))
+    return np.where(off_map, np.nan, col), np.where(off_map, np.nan, row)
 
 
-def _window(source: GridSource, col: FloatArray, row: FloatArray) -> tuple[int, int, int, int]:
-    """Window of the grid (row0, row1, col0, col1) that holds all nodes inside it, with a cell to spare."""
-    row0, row1 = int(np.nanmin(row)) - 1, int(np.nanmax(row)) + 3
-    col0, col1 = int(np.nanmin(col)) - 1, int(np.nanmax(col)) + 3
+def _windows(
+    source: GridSource, col: FloatArray, row: FloatArray
+) -> Iterator[tuple[int, int, tuple[int, int, int, int]]]:
+    """Cut transects into runs of rows whose windows of the grid (row0, row1, col0, col1) are small enough to read."""
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore", RuntimeWarning)  # a transect off the map has no least and no greatest index
+        boxes = np.stack(
+            [np.nanmin(row, axis=1), np.nanmax(row, axis=1), np.nanmin(col, axis=1), np.nanmax(col, axis=1)], axis=1
+        )
+    first, box = 0, boxes[0]
+    for k in range(1, len(boxes)):
+        wider = _joined(box, boxes[k])
+        if (wider[1] - wider[0]) * (wider[3] - wider[2]) > MOST_CELLS:
+            yield first, k, _window(source, box)
+            first, box = k, boxes[k]
+        else:
+            box = wider
+    yield first, len(boxes), _window(source, box)
+
+
+def _joined(box: FloatArray, other: FloatArray) -> FloatArray:
+    """Least and greatest row, least and greatest column of two boxes of indices."""
+    least, greatest = np.fmin(box, other), np.fmax(box, other)
+    return np.array([least[0], greatest[1], least[2], greatest[3]])
+
+
+def _window(source: GridSource, box: FloatArray) -> tuple[int, int, int, int]:
+    """Window of the grid that holds a box of indices, with a cell to spare, and two rows and columns at least."""
+    row0, row1, col0, col1 = np.clip(np.nan_to_num(box), -1e9, 1e9).astype(int) + [-1, 3, -1, 3]
     if not source.wraps:
         col0, col1 = min(max(col0, 0), source.n_cols - 2), max(min(col1, source.n_cols), 2)
     return min(max(row0, 0), source.n_rows - 2), max(min(row1, source.n_rows), 2), col0, col1

@@ -78,14 +78,14 @@ def find_shelf_breaks(profiles: Profiles, settings: ShelfBreakSettings) -> Shelf
         found_depth_m,
     )
     middle = BAND.index(1.0)
-    break_m = found_m[:, middle, middle].copy()
+    break_m, break_depth_m = found_m[:, middle, middle].copy(), found_depth_m[:, middle, middle].copy()
     has = np.isfinite(break_m)
     spread_m = np.full(len(break_m), np.nan)
     spread_m[has] = np.nanmax(found_m[has], axis=(1, 2)) - np.nanmin(found_m[has], axis=(1, 2))
-    _, sides = _measured(profiles, settings, break_m)
+    sides = _sides(profiles, settings, break_m, break_depth_m)
     return ShelfBreaks(
         break_m=break_m,
-        depth_m=found_depth_m[:, middle, middle].copy(),
+        depth_m=break_depth_m,
         slope_before=sides[:, 0],
         slope_beyond=sides[:, 1],
         contrast=_contrast(sides),
@@ -114,7 +114,9 @@ def measure_picked_breaks(profiles: Profiles, settings: ShelfBreakSettings, brea
     """
     inside = (break_m > 0) & (break_m <= profiles.length_m)
     kept_m = np.where(inside, break_m, np.nan)
-    depth_m, sides = _measured(profiles, settings, kept_m)
+    depth_m = np.empty(len(kept_m))
+    breaks.depths_at(profiles.depth_m, profiles.n_samples, profiles.step_m, kept_m, depth_m)
+    sides = _sides(profiles, settings, kept_m, depth_m)
     return ShelfBreaks(
         break_m=kept_m,
         depth_m=depth_m,
@@ -132,19 +134,16 @@ def _smoothing_m(profiles: Profiles, settings: ShelfBreakSettings) -> float:
     return max(settings.smoothing_m, LEAST_SMOOTHING_SAMPLES * profiles.step_m)
 
 
-def _measured(profiles: Profiles, settings: ShelfBreakSettings, break_m: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """Depth of the profile at each break, and the gradients before and beyond it."""
-    depth_m, sides = np.empty(len(break_m)), np.empty((len(break_m), 2))
+def _sides(
+    profiles: Profiles, settings: ShelfBreakSettings, break_m: FloatArray, break_depth_m: FloatArray
+) -> FloatArray:
+    """(n, 2) gradients before and beyond each break."""
+    sides = np.empty((len(break_m), 2))
+    smoothing_m = _smoothing_m(profiles, settings)
     breaks.measure_breaks(
-        profiles.depth_m,
-        profiles.n_samples,
-        profiles.step_m,
-        break_m,
-        _smoothing_m(profiles, settings),
-        depth_m,
-        sides,
+        profiles.depth_m, profiles.n_samples, profiles.step_m, break_m, break_depth_m, smoothing_m, sides
     )
-    return depth_m, sides
+    return sides
 
 
 def _contrast(sides: FloatArray) -> FloatArray:

@@ -20,6 +20,8 @@ BoolArray = NDArray[np.bool_]
 
 #: Chords of this length between points of a geodesic leave it by about 2 cm.
 NODE_M: Final = 1e4
+#: No degree of latitude is shorter than this, metres.
+_LEAST_DEGREE_M: Final = 1.1e5
 #: Points each side of a station that its bearing is taken from.
 _BEARING_POINTS: Final = 16
 
@@ -173,8 +175,8 @@ def coast_piece(coast: Coast, transects: Transects, row: int) -> FloatArray:
         return np.zeros((0, 2))
     line = coast.lines[int(transects.coast_part[row]) - 1]
     start_m, stop_m = max(transects.piece_start_m[row], 0.0), min(transects.piece_stop_m[row], line.length_m)
-    inside = (line.along_m > start_m + 1e-6) & (line.along_m < stop_m - 1e-6)
-    at_m = np.concatenate([[start_m], line.along_m[inside], [stop_m]])
+    first, last = np.searchsorted(line.along_m, [start_m + 1e-6, stop_m - 1e-6])
+    at_m = np.concatenate([[start_m], line.along_m[first:last], [stop_m]])
     return np.stack([np.interp(at_m, line.along_m, line.lon_deg), np.interp(at_m, line.along_m, line.lat_deg)], axis=1)
 
 
@@ -238,22 +240,38 @@ def _nearest_on_coast(
 ) -> tuple[IntArray, FloatArray]:
     """Piece of coast each point is nearest to and the distance along it; 0 and NaN where none is within reach."""
     part, coast_m = np.zeros(len(lon_deg), dtype=np.int64), np.full(len(lon_deg), np.nan)
-    best_m = np.full(len(lon_deg), within_m)
-    for number, line in enumerate(coast.lines, start=1):
-        squeeze = np.cos(np.radians(lat_deg))
-        for row in range(len(lon_deg)):
-            points = np.stack([line.lon_deg * squeeze[row], line.lat_deg], axis=1)
-            point = shapely.points(unwrap_lon_deg(lon_deg[row], line.lon_deg.mean()) * squeeze[row], lat_deg[row])
-            path = shapely.linestrings(points)
-            share = shapely.line_locate_point(path, point, normalized=True)
-            on = shapely.line_interpolate_point(path, share, normalized=True)
-            on_lon, on_lat = shapely.get_x(on) / squeeze[row], shapely.get_y(on)
-            away_m, _ = distance_bearing(lon_deg[row], lat_deg[row], on_lon, on_lat)
-            if away_m < best_m[row]:
-                best_m[row], part[row] = away_m, number
-                legs = np.concatenate([[0.0], np.cumsum(np.hypot(*np.diff(points, axis=0).T))])
-                coast_m[row] = np.interp(share * legs[-1], legs, line.along_m)
+    number = np.concatenate([np.full(len(line.along_m) - 1, i) for i, line in enumerate(coast.lines, start=1)])
+    ends = np.concatenate([np.stack([_legs(a) for a in (c.lon_deg, c.lat_deg, c.along_m)]) for c in coast.lines], axis=1)
+    squeeze = np.maximum(np.cos(np.radians(lat_deg)), 0.01)
+    reach_deg = within_m / _LEAST_DEGREE_M
+    tree = shapely.STRtree(shapely.linestrings(ends[:2].transpose(1, 2, 0)))
+    for turn_deg in (0.0, 360.0, -360.0):
+        lon = lon_deg + turn_deg
+        around = shapely.box(
+            lon - reach_deg / squeeze, lat_deg - reach_deg, lon + reach_deg / squeeze, lat_deg + reach_deg
+        )
+        row, leg = tree.query(around)
+        # a plane round each point, straight legs in it: exact enough to choose a leg and a place on it
+        east = (ends[0, leg] - lon[row, None]) * squeeze[row, None]
+        north = ends[1, leg] - lat_deg[row, None]
+        step_east, step_north = np.diff(east)[:, 0], np.diff(north)[:, 0]
+        share = -(east[:, 0] * step_east + north[:, 0] * step_north) / (step_east**2 + step_north**2)
+        share = np.clip(share, 0.0, 1.0)
+        on_lon, on_lat = (a[leg, 0] + share * (a[leg, 1] - a[leg, 0]) for a in ends[:2])
+        away_m, _ = distance_bearing(lon[row], lat_deg[row], on_lon, on_lat)
+        order = np.lexsort((leg, away_m, row))
+        order = order[away_m[order] < within_m]
+        _, first = np.unique(row[order], return_index=True)
+        best = order[first]
+        best = best[np.isnan(coast_m[row[best]])]
+        part[row[best]] = number[leg[best]]
+        coast_m[row[best]] = ends[2, leg[best], 0] + share[best] * np.diff(ends[2, leg[best]])[:, 0]
     return part, coast_m
+
+
+def _legs(values: FloatArray) -> FloatArray:
+    """Values at both ends of each leg of a line, (k - 1, 2)."""
+    return np.stack([values[:-1], values[1:]], axis=1)
 
 
 def _halfway(part: IntArray, coast_m: FloatArray, spacing_m: float) -> tuple[FloatArray, FloatArray]:

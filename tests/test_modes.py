@@ -284,11 +284,11 @@ def test_one_shallow_cell_stands_out():
 
 @pytest.mark.parametrize(("lat_deg", "break_sd"), [(0.0, 0.0), (40.0, 3e3)])
 def test_period_deviation_against_random_depths(lat_deg, break_sd):
-    """Analytic deviation of the first period against 3000 seeded draws of correlated depth errors and breaks.
+    """Analytic deviation of the first period against 1000 seeded draws of correlated depth errors and breaks.
 
-    A deviation from 3000 draws is itself known to 1.3 %; 5 % is four times that, and linearity costs little.
+    A deviation from 1000 draws is itself known to 2.2 %; 9 % is four times that, and linearity costs little.
     """
-    n = 3000
+    n = 1000
     x = np.linspace(0, 240e3, 121)
     depth = np.interp(x, [0, 224e3, 240e3], [20, 130, 4000.0])  # no kink at the break: that is not linear
     error = DepthError(fixed_m=1.0, per_depth=0.02, correlation_m=20e3)
@@ -301,7 +301,7 @@ def test_period_deviation_against_random_depths(lat_deg, break_sd):
         friction_m_s=0.0, depth_error=error, break_sd_m=np.zeros(n),
     )  # fmt: skip
     analytic = modes(x, depth, 200e3, lat=lat_deg, error=error, break_sd=break_sd).period_sd_s[0]
-    assert analytic == pytest.approx(got.node_period_s[:, 0].std(), rel=0.05)
+    assert analytic == pytest.approx(got.node_period_s[:, 0].std(), rel=0.09)
 
 
 # ---- degenerate rows and messages

@@ -378,6 +378,7 @@ def test_inputs_stay_and_results_are_read_only():
         [50.0, -3.0, 100.0],
         [-1.0, 20.0, 100.0],
         [50.0, np.inf, 100.0],
+        [50.0, 1e-9, 100.0],
         [5000.0, 5000.0, 5000.0],
         [300.0, 200.0, 100.0],
     ],
@@ -425,9 +426,10 @@ def test_no_rows_and_no_waves():
 
 
 def test_coast_of_any_small_depth_tends_to_depth_zero():
-    """h -> 0 at the coast is regular: 1 mm of water there moves the gain by less than 1e-4."""
-    dry, wet = (waves([0, 200e3], [h, 100.0], 200e3, M2).gain[0, 0] for h in (0.0, 1e-3))
+    """h -> 0 at the coast is regular: 1 mm of water there moves the gain by less than 1e-4, 1e-9 m by nothing."""
+    dry, damp, wet = (waves([0, 200e3], [h, 100.0], 200e3, M2).gain[0, 0] for h in (0.0, 1e-9, 1e-3))
     assert wet == pytest.approx(dry, rel=1e-4)
+    assert damp == dry
 
 
 def test_deep_end_cuts_exactly_and_keeps_the_answer_continuous():

@@ -37,17 +37,42 @@ def slope_between(row: F64, n: int, step_m: float, from_m: float, to_m: float) -
 
 @njit(cache=True)
 def _shoals_again(
-    row: F64, n: int, step_m: float, from_m: float, depth_m: float, sustain_m: float, ocean_m: float
+    row: F64, n: int, step_m: float, from_m: float, depth_m: float, sustain_m: float, deepest_m: float, ocean_m: float
 ) -> bool:
-    """Whether, before the open ocean, the bed comes back above a depth for longer than `sustain_m`."""
-    run_m = 0.0
+    """Whether, before the open ocean, the bed comes more than halfway back up to a depth, and to shelf depths.
+
+    It must stay there for longer than `sustain_m`. Halfway from the greatest depth since: a trough before a bank, as
+    on glaciated shelves, and not the slope.
+    """
+    run_m, trough_m = 0.0, depth_m
     for j in range(int(np.ceil(from_m / step_m)), n):
         if row[j] >= ocean_m:
             return False
-        run_m = run_m + step_m if row[j] < depth_m else 0.0
+        trough_m = max(trough_m, row[j])
+        run_m = run_m + step_m if row[j] < min(0.5 * (depth_m + trough_m), deepest_m) else 0.0
         if run_m > sustain_m:
             return True
     return False
+
+
+@njit(cache=True)
+def _stretch(
+    row: F64, n: int, step_m: float, start: int, slope: float, confirm: float, smoothing_m: float, ocean_m: float
+) -> tuple[int, int]:
+    """Last place of the stretch from `start` on that keeps to `slope`, short of the ocean; first to `confirm`, or -1."""
+    d = step_m / PLACES_PER_STEP
+    half = 0.5 * smoothing_m
+    place, reached = start, -1
+    while place < (n - 1) * PLACES_PER_STEP + 1:
+        gradient = slope_between(row, n, step_m, place * d - half, place * d + half)
+        if gradient < slope:
+            break
+        if reached < 0 and gradient >= confirm:
+            reached = place
+        place += 1
+        if depth_at(row, n, step_m, (place - 1) * d) >= ocean_m:
+            break
+    return place - 1, reached
 
 
 @njit(cache=True)
@@ -67,63 +92,60 @@ def find_break(
     """Distance of the shelf break from the shore and its depth, metres; NaN where there is none.
 
     The gradient at x is taken over `smoothing_m` centred on x: the slope of the running mean of the depth. A candidate
-    is a stretch of at least `sustain_m` on which it stays at `slope` or more. The break is where the gradient changes
-    most, ``h(x + L) - 2 h(x) + h(x - L)`` at its largest, from one smoothing length before the stretch to where it has
-    its say, moved to where the lines of shelf and slope on both sides meet. It must lie between the depths allowed and
-    have the contrast, and beyond it the bed must not come back above its depth before the ocean. The first candidate
-    that reaches `confirm` and passes is it; where none does, the first with twice the contrast on which the bed falls
-    to three times the break's depth: a long gentle slope.
+    is a stretch of at least `sustain_m`, or down to the open ocean, on which it stays at `slope` or more. The break is
+    where the gradient changes most, ``h(x + L) - 2 h(x) + h(x - L)`` at its largest, from one smoothing length before
+    the stretch to where it has its say and no deeper than `deepest_m`, moved to where the lines of shelf and slope on
+    both sides meet. It must lie between the depths allowed and have the contrast, and beyond the stretch the bed must
+    not come halfway back up to it before the ocean: that would be a trough. The first candidate that reaches `confirm` and
+    passes is it; where none does, the first with twice the contrast on which the bed falls to three times the break's
+    depth, or to the ocean: a long gentle slope.
     """
     d = step_m / PLACES_PER_STEP
-    n_places = (n - 1) * PLACES_PER_STEP + 1
     half = 0.5 * smoothing_m
     fallback, fallback_depth = np.nan, np.nan
     i = 0
-    while i < n_places:
-        x = i * d
-        depth = depth_at(row, n, step_m, x)
-        if depth > deepest_m + smoothing_m * slope:
+    while i < (n - 1) * PLACES_PER_STEP + 1:
+        depth = depth_at(row, n, step_m, i * d)
+        if depth >= ocean_m:
             break
-        if depth < shallowest_m or slope_between(row, n, step_m, x - half, x + half) < slope:
+        if depth < shallowest_m or slope_between(row, n, step_m, i * d - half, i * d + half) < slope:
             i += 1
             continue
-        stop, reached = i, -1
-        while stop < n_places:
-            gradient = slope_between(row, n, step_m, stop * d - half, stop * d + half)
-            if gradient < slope:
-                break
-            if reached < 0 and gradient >= confirm:
-                reached = stop
-            stop += 1
-        if (stop - 1 - i) * d >= sustain_m:
+        last, reached = _stretch(row, n, step_m, i, slope, confirm, smoothing_m, ocean_m)
+        falls_to = depth_at(row, n, step_m, last * d)
+        if (last - i) * d >= sustain_m or falls_to >= ocean_m:
             say = reached if reached >= 0 else i + int(np.ceil(sustain_m / d))
-            corner = _sharpest(row, n, step_m, x - smoothing_m, say * d + half, smoothing_m)
+            corner = _sharpest(row, n, step_m, i * d - smoothing_m, say * d + half, smoothing_m, deepest_m)
             at, depth = meeting(row, n, step_m, corner, smoothing_m)
-            before, beyond = sides(row, n, step_m, at, smoothing_m)
+            before, beyond = sides(row, n, step_m, at, depth, smoothing_m)
             contrast = beyond / max(before, LEAST_SLOPE_BEFORE)
             if (
                 shallowest_m <= depth <= deepest_m
                 and contrast >= least_contrast
-                and not _shoals_again(row, n, step_m, at, depth, sustain_m, ocean_m)
+                and not _shoals_again(row, n, step_m, last * d, depth, sustain_m, deepest_m, ocean_m)
             ):
                 if reached >= 0:
                     return at, depth
-                falls_to = depth_at(row, n, step_m, (stop - 1) * d)
-                if np.isnan(fallback) and contrast >= 2.0 * least_contrast and falls_to >= 3.0 * depth:
+                if np.isnan(fallback) and contrast >= 2.0 * least_contrast and falls_to >= min(3.0 * depth, ocean_m):
                     fallback, fallback_depth = at, depth
-        i = stop + 1
+        i = last + 2
     return fallback, fallback_depth
 
 
 @njit(cache=True)
-def _sharpest(row: F64, n: int, step_m: float, from_m: float, to_m: float, smoothing_m: float) -> float:
-    """Place between two distances where the gradient over `smoothing_m` grows most; the first of equals."""
+def _sharpest(
+    row: F64, n: int, step_m: float, from_m: float, to_m: float, smoothing_m: float, deepest_m: float
+) -> float:
+    """Place between two distances, above a depth, where the gradient over `smoothing_m` grows most; first of equals."""
     d = step_m / PLACES_PER_STEP
     best, best_change = 0.0, -np.inf
     low = max(1, int(np.floor(from_m / d)))
     high = min((n - 1) * PLACES_PER_STEP, int(np.ceil(to_m / d)))
     for k in range(low, high + 1):
-        before, beyond = sides(row, n, step_m, k * d, smoothing_m)
+        depth = depth_at(row, n, step_m, k * d)
+        if depth > deepest_m:
+            continue
+        before, beyond = sides(row, n, step_m, k * d, depth, smoothing_m)
         if beyond - before > best_change + 1e-12:
             best, best_change = k * d, beyond - before
     return best
@@ -154,12 +176,18 @@ def meeting(row: F64, n: int, step_m: float, corner_m: float, smoothing_m: float
 
 
 @njit(cache=True)
-def sides(row: F64, n: int, step_m: float, at_m: float, smoothing_m: float) -> tuple[float, float]:
-    """Gradient over one smoothing length before a place, and beyond it."""
-    return (
-        slope_between(row, n, step_m, at_m - smoothing_m, at_m),
-        slope_between(row, n, step_m, at_m, at_m + smoothing_m),
-    )
+def sides(row: F64, n: int, step_m: float, at_m: float, depth_m: float, smoothing_m: float) -> tuple[float, float]:
+    """Gradients of the lines to a point from the profile one smoothing length before it, and on from it as far.
+
+    The point's own depth counts, not the profile's there: a kink between two samples is blunt in the profile.
+    """
+    from_m, to_m = max(at_m - smoothing_m, 0.0), min(at_m + smoothing_m, (n - 1) * step_m)
+    before, beyond = 0.0, 0.0
+    if at_m > from_m:
+        before = (depth_m - depth_at(row, n, step_m, from_m)) / (at_m - from_m)
+    if to_m > at_m:
+        beyond = (depth_at(row, n, step_m, to_m) - depth_m) / (to_m - at_m)
+    return before, beyond
 
 
 @njit(cache=True)
@@ -192,11 +220,21 @@ def find_breaks(
 
 @njit(cache=True)
 def measure_breaks(
-    depth_m: F64, n_samples: I64, step_m: float, break_m: F64, smoothing_m: float, out_depth_m: F64, out_sides: F64
+    depth_m: F64, n_samples: I64, step_m: float, break_m: F64, break_depth_m: F64, smoothing_m: float, out_sides: F64
 ) -> None:
-    """Depth of the profile at each break and the gradients before and beyond it; NaN without a break."""
+    """Gradients before and beyond each break; NaN without a break."""
     for k in range(depth_m.shape[0]):
-        out_depth_m[k], out_sides[k, 0], out_sides[k, 1] = np.nan, np.nan, np.nan
+        out_sides[k] = np.nan
         if not np.isnan(break_m[k]):
-            out_depth_m[k] = depth_at(depth_m[k], n_samples[k], step_m, break_m[k])
-            out_sides[k, 0], out_sides[k, 1] = sides(depth_m[k], n_samples[k], step_m, break_m[k], smoothing_m)
+            out_sides[k, 0], out_sides[k, 1] = sides(
+                depth_m[k], n_samples[k], step_m, break_m[k], break_depth_m[k], smoothing_m
+            )
+
+
+@njit(cache=True)
+def depths_at(depth_m: F64, n_samples: I64, step_m: float, at_m: F64, out_depth_m: F64) -> None:
+    """Depth of each profile at a distance; NaN where that is NaN."""
+    for k in range(depth_m.shape[0]):
+        out_depth_m[k] = np.nan
+        if not np.isnan(at_m[k]):
+            out_depth_m[k] = depth_at(depth_m[k], n_samples[k], step_m, at_m[k])

@@ -16,6 +16,8 @@ from shelfmap.constants import GRAVITY_M_S2
 
 FloatArray = NDArray[np.float64]
 
+DEPTH_MIN_M = 1e-6  # less is no water; at the coast it counts as zero, which is regular
+DEPTH_MAX_M = 1e5
 FRICTION_FLOOR_M = 1.0  # friction with r/h is ill-posed where h -> 0
 PHASE_PER_CELL = 0.045  # omega * ds aimed at: |gain| then good to 1e-6 or better
 PHASE_PER_CELL_MAX = 0.1
@@ -54,7 +56,7 @@ def used_end(x_m: FloatArray, depth_m: FloatArray, outer_m: float) -> tuple[int,
         n += 1
     bad = n < 2 or not outer_m > 0.0
     for i in range(n):
-        if depth_m[i] < 0.0 or math.isinf(depth_m[i]) or (i > 0 and depth_m[i] == 0.0):
+        if depth_m[i] < 0.0 or depth_m[i] > DEPTH_MAX_M or (i > 0 and depth_m[i] < DEPTH_MIN_M):
             bad = True
     if bad:
         return 0, -1, math.nan, math.nan, False
@@ -105,6 +107,8 @@ def take_profile(
         if i_break < 0 and n > 0 and x_i == break_m:
             i_break = n
         n += 1
+    if h[0] < DEPTH_MIN_M:
+        h[0] = 0.0
     return x[:n], h[:n], i_break
 
 

@@ -29,6 +29,7 @@ NEWTON_TURNS_MAX = 60
 HIGHEST_MU = 1e12  # 1/s^2, far above any wave: ends the search where depths are absurd
 NEWTON_TOLERANCE = 1e-11
 SAME_POLE = 1e-6
+LEAST_LOSS = 1e-9  # a mode that loses less has no Q that numbers of 16 digits could tell
 FRICTION_SHARES = (0.1, 0.25, 0.5, 0.75, 1.0)
 FRICTION_LEAP_MAX = 0.5  # a damped pole that moves by more in one step is another one
 
@@ -184,7 +185,10 @@ def find_poles(fine: Cells, coarse: Cells, speed: float, starts: FloatArray, kap
     for i in range(starts.size):
         for n_divided in (0, n_found):
             pole = find_pole(fine, coarse, speed, complex(START_SHARE * starts[i]), found, n_divided)
-            fresh = pole.imag < 0.0 and POLE_SHARE_MIN * starts[i] < pole.real < POLE_SHARE_MAX * starts[i]
+            fresh = (
+                pole.imag < -LEAST_LOSS * pole.real
+                and POLE_SHARE_MIN * starts[i] < pole.real < POLE_SHARE_MAX * starts[i]
+            )
             for k in range(n_found):
                 if abs(found[k] - pole) <= SAME_POLE * abs(pole):
                     fresh = False

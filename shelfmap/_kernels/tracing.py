@@ -20,7 +20,9 @@ _OUTSIDE = -1.0e30
 
 
 @njit(cache=True)
-def _depth_at(depth: F32, row0: int, col0: int, node_m: F64, node_row: F64, node_col: F64, at_m: float) -> float:
+def _depth_at(
+    depth: F32, row0: int, col0: int, wrap_cols: int, node_m: F64, node_row: F64, node_col: F64, at_m: float
+) -> float:
     """Depth on a transect at a distance from its station; NaN in a void, `_OUTSIDE` beyond grid or transect."""
     n = node_m.shape[0]
     if at_m < node_m[0] or at_m > node_m[n - 1]:
@@ -35,10 +37,11 @@ def _depth_at(depth: F32, row0: int, col0: int, node_m: F64, node_row: F64, node
     part = (at_m - node_m[low]) / (node_m[high] - node_m[low])
     n_rows, n_cols = depth.shape
     i, up = locate(node_row[low] + part * (node_row[high] - node_row[low]), row0, n_rows, 0)
-    j, right = locate(node_col[low] + part * (node_col[high] - node_col[low]), col0, n_cols, 0)
+    j, right = locate(node_col[low] + part * (node_col[high] - node_col[low]), col0, n_cols, wrap_cols)
     if i < 0 or j < 0:
         return _OUTSIDE
-    return float(bilinear_cell(depth, i, j, min(i + 1, n_rows - 1), min(j + 1, n_cols - 1), up, right))
+    next_col = j + 1 if j + 1 < n_cols else 0  # on the last column it weighs nothing, or the grid closes
+    return float(bilinear_cell(depth, i, j, min(i + 1, n_rows - 1), next_col, up, right))
 
 
 @njit(cache=True)
@@ -46,6 +49,7 @@ def _bisect(
     depth: F32,
     row0: int,
     col0: int,
+    wrap_cols: int,
     node_m: F64,
     node_row: F64,
     node_col: F64,
@@ -56,7 +60,7 @@ def _bisect(
     """Where the water begins between a dry and a wet place, to a hundredth of a millimetre."""
     for _ in range(60):
         middle = 0.5 * (dry_m + wet_m)
-        d = _depth_at(depth, row0, col0, node_m, node_row, node_col, middle)
+        d = _depth_at(depth, row0, col0, wrap_cols, node_m, node_row, node_col, middle)
         if d > hair_m:
             wet_m = middle
         else:
@@ -71,6 +75,7 @@ def find_shore(
     depth: F32,
     row0: int,
     col0: int,
+    wrap_cols: int,
     node_m: F64,
     node_row: F64,
     node_col: F64,
@@ -83,7 +88,7 @@ def find_shore(
     From a station in the water the shore is sought landward as far as the transect reaches; from one on land, seaward
     within `seek_m`, and a pool shorter than two looks of `look_m` does not count where more water follows.
     """
-    here = _depth_at(depth, row0, col0, node_m, node_row, node_col, 0.0)
+    here = _depth_at(depth, row0, col0, wrap_cols, node_m, node_row, node_col, 0.0)
     if here == _OUTSIDE:
         return 0.0, START_OUTSIDE
     if np.isnan(here):
@@ -91,30 +96,33 @@ def find_shore(
     if here > hair_m:
         at_m = -look_m
         while at_m >= node_m[0]:
-            d = _depth_at(depth, row0, col0, node_m, node_row, node_col, at_m)
+            d = _depth_at(depth, row0, col0, wrap_cols, node_m, node_row, node_col, at_m)
             if d == _OUTSIDE or np.isnan(d):
                 break
             if d <= hair_m:
-                return _bisect(depth, row0, col0, node_m, node_row, node_col, at_m, at_m + look_m, hair_m), AT_SHORE
+                return _bisect(depth, row0, col0, wrap_cols, node_m, node_row, node_col, at_m, at_m + look_m, hair_m), AT_SHORE
             at_m -= look_m
         return 0.0, IN_WATER
     found_m, wet_run, any_water = 0.0, 0, False
+    dry_m, last_dry_m = 0.0, 0.0
     at_m = look_m
     while at_m <= seek_m and wet_run < 4:
-        d = _depth_at(depth, row0, col0, node_m, node_row, node_col, at_m)
+        d = _depth_at(depth, row0, col0, wrap_cols, node_m, node_row, node_col, at_m)
         if d == _OUTSIDE:
             break
         if d > hair_m:
             if wet_run == 0:
-                found_m = at_m
+                found_m, dry_m = at_m, last_dry_m
             wet_run += 1
             any_water = True
+        elif d <= hair_m:
+            wet_run, last_dry_m = 0, at_m
         else:
-            wet_run = 0
+            any_void = True
         at_m += look_m
     if not any_water:
         return 0.0, NO_WATER
-    return _bisect(depth, row0, col0, node_m, node_row, node_col, found_m - look_m, found_m, hair_m), AT_SHORE
+    return _bisect(depth, row0, col0, wrap_cols, node_m, node_row, node_col, found_m - look_m, found_m, hair_m), AT_SHORE
 
 
 @njit(cache=True)
@@ -122,6 +130,7 @@ def sample_seaward(
     depth: F32,
     row0: int,
     col0: int,
+    wrap_cols: int,
     node_m: F64,
     node_row: F64,
     node_col: F64,
@@ -136,13 +145,29 @@ def sample_seaward(
         at_m = shore_m + j * step_m
         if at_m > last_m:
             return j, LENGTH
-        d = _depth_at(depth, row0, col0, node_m, node_row, node_col, at_m)
+        d = _depth_at(depth, row0, col0, wrap_cols, node_m, node_row, node_col, at_m)
         if d == _OUTSIDE:
             return j, GRID_EDGE
         out[j] = d
         if j == 0 and at_shore:
             out[0] = 0.0
     return out.shape[0], LENGTH
+
+
+@njit(cache=True)
+def median_of_five(row: F64, first: int) -> float:
+    """Median of five neighbours, all of them water; NaN else. By hand: np.sort alone takes 8 s to compile."""
+    median = np.nan
+    for i in range(first, first + 5):
+        if not row[i] > 0.0:
+            return np.nan
+        below, equal = 0, 0
+        for j in range(first, first + 5):
+            below += row[j] < row[i]
+            equal += row[j] == row[i]
+        if below <= 2 < below + equal:
+            median = row[i]
+    return float(median)
 
 
 @njit(cache=True)
@@ -153,14 +178,11 @@ def despike(row: F64, n: int, least_m: float, work: F64, mended: U8) -> int:
     each side, and differs from it by more than `least_m`. A slope, however steep, is its own median and stays.
     """
     count = 0
-    work[:n] = row[:n]
-    five = np.empty(5)
+    for j in range(n):
+        work[j] = row[j]
     for j in range(2, n - 2):
-        five[:] = work[j - 2 : j + 3]
-        if np.isnan(five).any() or (five <= 0.0).any():
-            continue
-        median = np.sort(five)[2]
-        if abs(work[j] - median) > least_m and not 0.5 * median <= work[j] <= 2.0 * median:
+        median = median_of_five(work, j - 2)
+        if median > 0.0 and abs(work[j] - median) > least_m and not 0.5 * median <= work[j] <= 2.0 * median:
             row[j] = median
             mended[j] = 1
             count += 1
@@ -217,6 +239,7 @@ def trace_rows(
     depth: F32,
     row0: int,
     col0: int,
+    wrap_cols: int,
     node_m: F64,
     node_row: F64,
     node_col: F64,
@@ -244,12 +267,12 @@ def trace_rows(
     work = np.empty(out_depth_m.shape[1])
     for k in range(node_m.shape[0]):
         nm, nr, nc = node_m[k, : n_nodes[k]], node_row[k, : n_nodes[k]], node_col[k, : n_nodes[k]]
-        shore_m, start = find_shore(depth, row0, col0, nm, nr, nc, seek_m[k], 0.5 * step_m, hair_m)
+        shore_m, start = find_shore(depth, row0, col0, wrap_cols, nm, nr, nc, seek_m[k], 0.5 * step_m, hair_m)
         out_shore_m[k], out_start[k] = shore_m, start
         if start > IN_WATER:
             continue
         row = out_depth_m[k]
-        n, end = sample_seaward(depth, row0, col0, nm, nr, nc, shore_m, start == AT_SHORE, step_m, row)
+        n, end = sample_seaward(depth, row0, col0, wrap_cols, nm, nr, nc, shore_m, start == AT_SHORE, step_m, row)
         n_kept, reason, land_m, bridged, voids = mend_gaps(row, n, step_m, short, share, hair_m, out_filled[k])
         if reason >= 0:
             end = reason

@@ -1,0 +1,80 @@
+"""Where the numbers of a run come from: settings, versions, sources and counts, as rows of text."""
+
+import importlib.metadata
+import platform
+from collections import Counter
+from collections.abc import Iterator
+from typing import Any, Final
+
+import numpy as np
+from numpy.typing import NDArray
+
+from shelfmap import __version__
+from shelfmap.coast import Coast
+from shelfmap.grid import GridSource
+from shelfmap.layers import Layer
+from shelfmap.settings import Settings
+from shelfmap.words import CAUTIONS, STATUSES
+
+__all__ = ["run_layer", "status_counts"]
+
+_LIBRARIES: Final = ("numpy", "scipy", "numba", "shapely", "rasterio", "pyogrio", "pyproj", "contourpy")
+
+
+def status_counts(status: NDArray[np.object_]) -> dict[str, int]:
+    """How many transects came to each status, in the order of `STATUSES`; those that none came to are left out.
+
+    Examples
+    --------
+    >>> status_counts(np.array(["void", "ok", "ok"], dtype=object))
+    {'ok': 2, 'void': 1}
+    """
+    counts = Counter(status.tolist())
+    return {word: counts[word] for word in STATUSES if counts[word]}
+
+
+def run_layer(
+    settings: Settings, source: GridSource, coast: Coast, step_m: float, status: NDArray[np.object_]
+) -> Layer:
+    """Layer `run`: everything one needs to say where an output comes from, and to make it again.
+
+    Parameters
+    ----------
+    settings : Settings
+        As used, defaults and all.
+    source : GridSource
+        What was understood of the grid.
+    coast : Coast
+        The coast used.
+    step_m : float
+        Sample spacing along the transects, metres.
+    status : (n,) array of str
+        Status of each transect.
+    """
+    counts = status_counts(status)
+    topics: dict[str, dict[str, str | None]] = {
+        "caution": {"cautions": CAUTIONS},
+        "setting": dict(_flat(settings.model_dump(mode="json"))),
+        "source": {
+            "grid": source.path,
+            "grid values": f"positive {source.positive}: {source.positive_why}",
+            "grid coordinate system": f"{source.projection.name} ({source.crs_why})",
+            "sample spacing [km]": f"{step_m / 1e3:.3f}",
+            "coast": coast.source,
+        },
+        "count": {"transects": str(len(status))} | {word: str(counts.get(word, 0)) for word in STATUSES},
+        "version": {"shelfmap": __version__, "python": platform.python_version()}
+        | {name: importlib.metadata.version(name) for name in _LIBRARIES},
+    }
+    rows = [(topic, name, value) for topic, values in topics.items() for name, value in values.items()]
+    topic, name, value = (np.array(column, dtype=object) for column in zip(*rows, strict=True))
+    return Layer(name="run", columns={"topic": topic, "name": name, "value": value})
+
+
+def _flat(tree: dict[str, Any], stem: str = "") -> Iterator[tuple[str, str | None]]:
+    """Settings as dotted names and text."""
+    for key, value in tree.items():
+        if isinstance(value, dict) and value:
+            yield from _flat(value, f"{stem}{key}.")
+        else:
+            yield f"{stem}{key}", None if value is None or value == {} else str(value)

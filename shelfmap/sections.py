@@ -1,0 +1,188 @@
+"""One section of coast: its work, and how the results of sections are put together."""
+
+from collections.abc import Sequence
+from dataclasses import dataclass, fields, is_dataclass, replace
+from typing import Any, Final, TypeVar
+
+import numpy as np
+import shapely
+from numpy.typing import NDArray
+
+from shelfmap.assess import statuses, usable
+from shelfmap.grid import GridSource
+from shelfmap.index import ResonanceIndex, resonance_index
+from shelfmap.profiles import Profiles, distance_along, sample_profiles
+from shelfmap.response import (
+    DepthError,
+    Friction,
+    ShelfModes,
+    WaveResponse,
+    coriolis_rad_s,
+    deep_end,
+    shelf_modes,
+    wave_response,
+)
+from shelfmap.settings import Settings
+from shelfmap.shelfbreak import ShelfBreaks, find_shelf_breaks, measure_picked_breaks
+from shelfmap.tables import Screened, waves_of
+from shelfmap.transects import Transects
+
+__all__ = ["CURVE_PERIODS_H", "Section", "sample_section", "screen_section", "stack"]
+
+FloatArray = NDArray[np.float64]
+BoolArray = NDArray[np.bool_]
+
+#: Periods of the response curves, hours, evenly spaced in their logarithm.
+CURVE_PERIODS_H: Final = np.geomspace(0.5, 48.0, 64)
+#: A curve shows periods from this share of the travel time on: below, its peaks lie closer than its points.
+CURVE_LEAST_SHARE: Final = 0.25
+
+_T = TypeVar("_T")
+#: Distances of the samples, depths, breaks, depth of the deep sea, Coriolis parameter: what the physics is given.
+_Rows = tuple[FloatArray, FloatArray, FloatArray, FloatArray, FloatArray]
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Section:
+    """One section's work: everything its function needs, small enough to send to a process."""
+
+    source: GridSource
+    settings: Settings
+    transects: Transects
+    step_m: float
+    """Sample spacing, metres."""
+    islets: NDArray[np.object_]
+    """Polygons (lon, lat) of land too small to carry stations."""
+    picks: NDArray[np.object_]
+    """(n,) points (lon, lat) of breaks picked by hand; None for none."""
+
+
+def sample_section(section: Section) -> Profiles:
+    """Depths along the transects of a section."""
+    return sample_profiles(
+        section.source,
+        section.transects,
+        section.step_m,
+        seek_m=section.settings.coast.generalise_m / 2,
+        islets=section.islets,
+    )
+
+
+def screen_section(section: Section) -> Screened:
+    """Screen one section of coast: a pure function of its input, fit for any executor."""
+    settings = section.settings
+    profiles = sample_section(section)
+    breaks = _breaks(section, profiles)
+    status = statuses(profiles, breaks, settings.shelf_break.ocean_m)
+    computed = usable(status, profiles, settings.shelf_break.ocean_m)
+    depth_m = np.where(computed[:, None], profiles.depth_m, np.nan)
+    _, outer_depth_m, stepped = deep_end(profiles.distance_m, depth_m, settings.response.deep_m)
+    rows = (
+        profiles.distance_m,
+        depth_m,
+        np.where(computed, breaks.break_m, np.nan),
+        outer_depth_m,
+        coriolis_rad_s(profiles.shore_lat_deg, rotation=settings.response.rotation),
+    )
+    modes = _modes(section, rows, breaks.spread_m)
+    omega_rad_s = 2 * np.pi / (np.array([wave.period_h for wave in waves_of(settings)]) * 3600)
+    waves = wave_response(*rows, omega_rad_s, friction=_friction(settings))
+    index = resonance_index(omega_rad_s, np.where((status == "ok")[:, None], modes.pole_rad_s, np.nan))
+    return Screened(
+        transects=section.transects,
+        profiles=profiles,
+        breaks=breaks,
+        status=status,
+        outer_depth_m=outer_depth_m,
+        is_stepped=stepped,
+        modes=modes,
+        waves=waves,
+        index=_without(index, waves.below_inertial),
+        curve=_curve(settings, rows, modes.travel_time_s) if settings.output.response_curves else None,
+        curve_period_h=CURVE_PERIODS_H,
+    )
+
+
+def _breaks(section: Section, profiles: Profiles) -> ShelfBreaks:
+    """Breaks found, those picked by hand in their place."""
+    settings = section.settings.shelf_break
+    found = find_shelf_breaks(profiles, settings)
+    picked_m = np.full(len(profiles.n_samples), np.nan)
+    for row, point in enumerate(section.picks):
+        if point is not None:
+            along_m = distance_along(section.transects, row, shapely.get_x(point), shapely.get_y(point))
+            picked_m[row] = along_m - profiles.shore_m[row]
+    picked = measure_picked_breaks(profiles, settings, picked_m)
+    return ShelfBreaks(
+        **{
+            field.name: np.where(picked.is_picked, getattr(picked, field.name), getattr(found, field.name))
+            for field in fields(ShelfBreaks)
+        }
+    )
+
+
+def _modes(section: Section, rows: _Rows, break_spread_m: FloatArray) -> ShelfModes:
+    error = section.settings.depth_error
+    return shelf_modes(
+        *rows,
+        friction_m_s=section.settings.response.friction_m_s,
+        depth_error=DepthError(
+            fixed_m=error.fixed_m, per_depth=error.per_depth, correlation_m=error.correlation_km * 1e3
+        ),
+        # half the spread over thresholds, and a break that may lie anywhere within a sample each way
+        break_sd_m=np.hypot(np.nan_to_num(break_spread_m) / 2, section.step_m / np.sqrt(3)),
+    )
+
+
+def _friction(settings: Settings) -> Friction:
+    """Friction of the waves asked for: by drag for those with an amplitude offshore."""
+    response = settings.response
+    if response.drag is None:
+        return Friction(linear_m_s=response.friction_m_s)
+    amplitude = [response.offshore_amplitude_m.get(wave.name, np.nan) for wave in waves_of(settings)]
+    return Friction(linear_m_s=response.friction_m_s, drag=response.drag, offshore_amplitude_m=amplitude)
+
+
+def _curve(settings: Settings, rows: _Rows, travel_time_s: FloatArray) -> WaveResponse:
+    """Response curves; none of it without a break, nor at periods too short to draw it at its points."""
+    linear = Friction(linear_m_s=settings.response.friction_m_s)
+    curve = wave_response(*rows, 2 * np.pi / (CURVE_PERIODS_H * 3600), friction=linear)
+    with np.errstate(invalid="ignore"):
+        shown = CURVE_PERIODS_H[None, :] * 3600 >= CURVE_LEAST_SHARE * travel_time_s[:, None]
+    names = ("gain", "damped_gain", "lag_rad", "edge_ratio")
+    return replace(curve, **{name: np.where(shown, getattr(curve, name), np.nan) for name in names})
+
+
+def _without(index: ResonanceIndex, left_out: BoolArray) -> ResonanceIndex:
+    """Same index, none where left out."""
+    return ResonanceIndex(
+        index=np.where(left_out, np.nan, index.index),
+        mode=np.where(left_out, 0, index.mode),
+        tuning=np.where(left_out, np.nan, index.tuning),
+        strength=np.where(left_out, np.nan, index.strength),
+    )
+
+
+def stack(parts: Sequence[_T]) -> _T:
+    """Put results of the same kind together, row below row; ragged rows are padded with what means no value."""
+    first = parts[0]
+    joined: dict[str, Any] = {}
+    for field in fields(first):  # type: ignore[arg-type]
+        values = [getattr(part, field.name) for part in parts]
+        if is_dataclass(values[0]):
+            joined[field.name] = stack(values)
+        elif isinstance(values[0], np.ndarray) and field.name != "curve_period_h":
+            joined[field.name] = _stack_rows(values)
+        else:
+            joined[field.name] = values[0]
+    return replace(first, **joined)  # type: ignore[type-var]
+
+
+def _stack_rows(arrays: Sequence[NDArray[Any]]) -> NDArray[Any]:
+    if arrays[0].ndim == 1:
+        return np.concatenate(arrays)
+    width = max(array.shape[1] for array in arrays)
+    none = np.nan if arrays[0].dtype.kind in "fc" else 0
+    return np.concatenate(
+        [np.pad(array, ((0, 0), (0, width - array.shape[1])), constant_values=none) for array in arrays]
+    )
