@@ -8,9 +8,8 @@ from numpy.typing import NDArray
 
 from shelfmap.profiles import END_REASONS, START_REASONS, Profiles
 from shelfmap.shelfbreak import ShelfBreaks
-from shelfmap.words import STATUSES
 
-__all__ = ["LEAST_SAMPLES", "Doubt", "break_doubts", "confidences", "statuses", "usable"]
+__all__ = ["LEAST_SAMPLES", "Doubt", "confidences", "doubts", "sill_ratio", "statuses", "usable"]
 
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
@@ -27,6 +26,11 @@ FEWEST_SHELF_SAMPLES: Final = 4.0
 HEAVIEST_CELL: Final = 0.05
 LARGEST_PERIOD_ERROR: Final = 0.15
 LARGEST_WIDTH_CHANGE: Final = 1.5
+#: A basin this many times deeper than a sill seaward of it answers in its own way; this many times, it is shut off.
+LARGEST_SILL_RATIO: Final = 4.0
+SHUT_OFF_SILL_RATIO: Final = 16.0
+#: Water shallower than this, behind a bar, is no basin, metres.
+LEAST_BASIN_M: Final = 20.0
 
 #: A remark on some transects that lowers their confidence: what to say, where.
 Doubt = tuple[TextArray, BoolArray]
@@ -62,7 +66,6 @@ def statuses(profiles: Profiles, breaks: ShelfBreaks, ocean_m: float) -> TextArr
     out[short] = np.where(end[short] == "search_length", "too_short", end[short])
     for reason in ("not_sea", "edge_of_grid", "void"):
         out[profiles.start_reason == START_REASONS.index(reason)] = reason
-    assert set(out) <= set(STATUSES)  # noqa: S101 - every status is one that users are told of
     return out
 
 
@@ -72,7 +75,29 @@ def usable(status: TextArray, profiles: Profiles, ocean_m: float) -> BoolArray:
     return np.asarray((status == "ok") | ((status == "no_break") & deep))
 
 
-def break_doubts(
+def sill_ratio(profiles: Profiles, breaks: ShelfBreaks) -> FloatArray:
+    """How much deeper a basin on each shelf is than the shallowest sill between it and the break.
+
+    Parameters
+    ----------
+    profiles, breaks
+        Results of the stages, n transects.
+
+    Returns
+    -------
+    (n,) array of float
+        Largest ratio of the depth of a sample of at least 20 m to that of one seaward of it, before the break; 1
+        where the shelf only deepens, NaN without a break.
+    """
+    has_break = np.isfinite(breaks.break_m)
+    on_shelf = profiles.distance_m[None, :] <= np.nan_to_num(breaks.break_m, nan=-1.0)[:, None]
+    depth_m = np.where(on_shelf & (profiles.depth_m > 0), profiles.depth_m, np.nan)
+    basin_m = np.fmax.accumulate(np.where(depth_m >= LEAST_BASIN_M, depth_m, np.nan), axis=1)
+    ratio = np.fmax.reduce(basin_m / depth_m, axis=1, initial=1.0)
+    return np.where(has_break, ratio, np.nan)
+
+
+def doubts(
     profiles: Profiles,
     breaks: ShelfBreaks,
     crosses: BoolArray,
@@ -133,12 +158,21 @@ def break_doubts(
         on_shelf = profiles.distance_m[None, :] < np.nan_to_num(breaks.break_m)[:, None]
         gaps = (profiles.is_filled & on_shelf).sum(axis=1)
         yield said("{:d} samples on the shelf bridged, filled or smoothed", gaps), gaps > 0
+        sill = sill_ratio(profiles, breaks)
+        yield said("basin {:.0f} times deeper than the sill before it", sill), sill > LARGEST_SILL_RATIO
+        yield said("that sill all but shuts it off"), sill > SHUT_OFF_SILL_RATIO
         in_water = profiles.start_reason == START_REASONS.index("open_water")
         yield said("starts in open water, off a bridged inlet"), in_water
 
 
-def confidences(status: TextArray, n_doubts: NDArray[np.int64]) -> TextArray:
-    """Confidence in each index: good without doubts, fair with one, poor with more; None where there is no index."""
+def confidences(has_index: BoolArray, n_doubts: NDArray[np.int64]) -> TextArray:
+    """Confidence in each index: good without doubts, fair with one, poor with more; None where there is no index.
+
+    Examples
+    --------
+    >>> confidences(np.array([True, True, True, False]), np.array([0, 1, 3, 0])).tolist()
+    ['good', 'fair', 'poor', None]
+    """
     words = np.array(["good", "fair", "poor"], dtype=object)[np.minimum(n_doubts, 2)]
-    words[status != "ok"] = None
+    words[~has_index] = None
     return words

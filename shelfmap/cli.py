@@ -23,6 +23,13 @@ __all__ = ["main"]
 
 _F = TypeVar("_F", bound=Callable[..., Any])
 
+_FIRST_STEPS = """\b
+First steps:
+  shelfmap demo my_demo            an invented coast, ready to look at and to edit
+  shelfmap inspect dem.tif         what shelfmap understands of your grid
+  shelfmap screen settings.toml    the main job
+"""
+
 EXIT_FAILED = 1
 EXIT_USAGE = 2
 EXIT_NO = 3
@@ -79,22 +86,16 @@ def _output(default: str) -> Callable[[_F], _F]:
     )
 
 
-@click.group(context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100})
+@click.group(epilog=_FIRST_STEPS, context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 100})
 @click.version_option(__version__, prog_name="shelfmap")
 def main() -> None:
     """Say where tides and other long waves grow along a coast, from a bathymetry grid.
 
     Screening from gridded depths: not for navigation or any purpose involving safety at sea.
-
-    \b
-    First steps:
-      shelfmap demo my_demo            an invented coast, ready to look at and to edit
-      shelfmap inspect dem.tif         what shelfmap understands of your grid
-      shelfmap screen settings.toml    the main job
     """
 
 
-@main.command()
+@main.command(epilog="Example: shelfmap screen coast.toml --output coast.gpkg --workers 2")
 @_settings_file
 @_output("output.path of the settings")
 @_overwrite
@@ -102,12 +103,7 @@ def main() -> None:
 @_as_json
 @_spoken
 def screen(settings_file: Path, output: Path | None, overwrite: bool, workers: int, as_json: bool) -> None:
-    """Screen a coast: transects, shelf breaks and resonance index into one GeoPackage.
-
-    \b
-    Example:
-      shelfmap screen coast.toml --output coast.gpkg --workers 2
-    """
+    """Screen a coast: transects, shelf breaks and resonance index into one GeoPackage."""
     settings = _read(settings_file)
     if output is not None:
         written = settings.output.model_copy(update={"path": output.absolute()})
@@ -115,7 +111,7 @@ def screen(settings_file: Path, output: Path | None, overwrite: bool, workers: i
     _screen(settings, overwrite=overwrite, workers=workers, as_json=as_json)
 
 
-@main.command()
+@main.command(epilog="Example: shelfmap inspect dem.tif --positive up")
 @click.argument("grid", type=click.Path(path_type=Path))
 @click.option("--positive", type=click.Choice(["auto", "up", "down"]), help="Whether values are elevations or depths.")
 @click.option("--crs", help="Coordinate system, where the file lacks one: EPSG:n.")
@@ -127,10 +123,6 @@ def inspect(grid: Path, as_json: bool, **given: Any) -> None:
     """Print what shelfmap understands of a grid, or of the grid in a settings file.
 
     Ends with exit code 3, and the reason, where the grid cannot be screened.
-
-    \b
-    Example:
-      shelfmap inspect dem.tif --positive up
     """
     from shelfmap.inspection import inspect_grid
     from shelfmap.settings import Settings
@@ -147,37 +139,27 @@ def inspect(grid: Path, as_json: bool, **given: Any) -> None:
         raise click.exceptions.Exit(EXIT_NO)
 
 
-@main.command()
+@main.command(epilog="Example: shelfmap demo my_demo")
 @click.argument("folder", metavar="DIR", type=click.Path(path_type=Path))
 @_overwrite
 @_workers
 @_as_json
 @_spoken
 def demo(folder: Path, overwrite: bool, workers: int, as_json: bool) -> None:
-    """Write the demo into a folder, an invented coast with settings to edit, and screen it.
-
-    \b
-    Example:
-      shelfmap demo my_demo
-    """
+    """Write the demo into a folder, an invented coast with settings to edit, and screen it."""
     from shelfmap.demo import write_demo
 
     settings_file = write_demo(folder, overwrite=overwrite)[-1]
     _screen(_read(settings_file), overwrite=overwrite, workers=workers, as_json=as_json)
 
 
-@main.command()
+@main.command(epilog="Example: shelfmap coast coast.toml --output coast_lines.gpkg")
 @_settings_file
 @_output("coast_lines.gpkg")
 @_overwrite
 @_spoken
 def coast(settings_file: Path, output: Path | None, overwrite: bool) -> None:
-    """Write the generalised coast, to edit in a GIS and give back as coast.file.
-
-    \b
-    Example:
-      shelfmap coast coast.toml --output coast_lines.gpkg
-    """
+    """Write the generalised coast, to edit in a GIS and give back as coast.file."""
     from shelfmap.pipeline import write_coast
 
     path = output or Path("coast_lines.gpkg")
@@ -187,18 +169,13 @@ def coast(settings_file: Path, output: Path | None, overwrite: bool) -> None:
     click.echo(path)
 
 
-@main.command()
+@main.command(epilog="Example: shelfmap transects coast.toml --output transect_lines.gpkg")
 @_settings_file
 @_output("transect_lines.gpkg")
 @_overwrite
 @_spoken
 def transects(settings_file: Path, output: Path | None, overwrite: bool) -> None:
-    """Write the transects, to edit in a GIS and give back as transects.file.
-
-    \b
-    Example:
-      shelfmap transects coast.toml --output transect_lines.gpkg
-    """
+    """Write the transects, to edit in a GIS and give back as transects.file."""
     from shelfmap.pipeline import write_transects
 
     path = output or Path("transect_lines.gpkg")
@@ -207,14 +184,9 @@ def transects(settings_file: Path, output: Path | None, overwrite: bool) -> None
     click.echo(path)
 
 
-@main.command()
+@main.command(epilog="Example: shelfmap schema > settings.schema.json")
 def schema() -> None:
-    """Print the JSON schema of the settings, for editors that check TOML as you type.
-
-    \b
-    Example:
-      shelfmap schema > settings.schema.json
-    """
+    """Print the JSON schema of the settings, for editors that check TOML as you type."""
     from shelfmap.settings import Settings
 
     click.echo(json.dumps(Settings.model_json_schema(), indent=2))

@@ -5,16 +5,18 @@ width is bridged, everything else stays where it is. It is made tile by tile in 
 pieces are joined at the seams.
 """
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 import shapely
 from contourpy import FillType, contour_generator
 from numpy.typing import NDArray
-from scipy.spatial import cKDTree
+from scipy import ndimage
 
 from shelfmap.basins import SHORE_HAIR_M, Basins, Tile, Tiling, label_basins
+from shelfmap.chains import join_ends
 from shelfmap.errors import CoastError
 from shelfmap.geodesy import area_m2, distance_bearing, geodesic_nodes, local_projection
 from shelfmap.grid import INSIDE, GridSource
@@ -155,9 +157,11 @@ def region_of(source: GridSource, box: tuple[float, float, float, float] | None,
     if source.wraps:
         first, _ = source.index_of(west, south)
         col = float(first) + (edge_lon - west) / source.dx
+    on_map = np.isfinite(col) & np.isfinite(row)
+    col, row = (col[on_map], row[on_map]) if on_map.any() else (np.array([-1e9]), np.array([-1e9]))
     rows, cols = int(margin_m / source.step_y_m) + 2, int(margin_m / source.step_x_m) + 2
-    row0, row1 = max(0, int(np.nanmin(row)) - rows), min(source.n_rows, int(np.nanmax(row)) + rows + 1)
-    col0, col1 = int(np.nanmin(col)) - cols, int(np.nanmax(col)) + cols + 1
+    row0, row1 = max(0, int(row.min()) - rows), min(source.n_rows, int(row.max()) + rows + 1)
+    col0, col1 = int(col.min()) - cols, int(col.max()) + cols + 1
     if source.wraps and col1 - col0 >= source.n_cols:
         col0, col1 = 0, source.n_cols
     elif not source.wraps:
@@ -182,11 +186,28 @@ class _Tracer:
         self.join_cells = max(0.3, 0.05 * self.radius_m / min(source.step_x_m, source.step_y_m))
 
     def _in_index(self, land: Geometries) -> Geometries:
-        def to_index(lonlat: FloatArray) -> FloatArray:
-            col, row = self.source.index_of(lonlat[:, 0], lonlat[:, 1])
-            return np.stack([col, row], axis=1)
+        """Land on the grid as polygons in its index, joined, lakes filled; round the globe once more on both sides."""
+        source = self.source
+        west, south, east, north = source.box_deg
+        spare_deg = 180.0 if source.wraps else 0.5
+        land = shapely.make_valid(land)
+        moved = [
+            shapely.transform(land, lambda lonlat, turn=turn: lonlat + np.array([turn, 0.0]))
+            for turn in (-360.0, 0.0, 360.0)
+        ]
+        cut = shapely.clip_by_rect(np.concatenate(moved), west - spare_deg, south, east + spare_deg, north)
+        whole = shapely.get_parts(shapely.union_all(cut))
+        rings, number = shapely.get_rings(whole[shapely.get_dimensions(whole) == 2], return_index=True)
+        is_shell = np.diff(number, prepend=-1) > 0
+        least_m2 = self.settings.smallest_enclosed_sea_km2 * 1e6
+        is_sea = np.array([area_m2(*shapely.get_coordinates(ring).T) >= least_m2 for ring in rings], dtype=bool)
+        polygons = shapely.polygons(rings[is_shell | is_sea], indices=number[is_shell | is_sea])
 
-        return shapely.get_parts(shapely.make_valid(shapely.transform(land, to_index)))
+        def to_index(lonlat: FloatArray) -> FloatArray:
+            x, y = source.projection.from_lonlat(lonlat[:, 0], lonlat[:, 1])
+            return np.stack([(x - source.x0) / source.dx, (y - source.y0) / source.dy], axis=1)
+
+        return np.asarray(shapely.get_parts(shapely.make_valid(shapely.transform(polygons, to_index))))
 
     def trace(self, tile: Tile) -> tuple[list[FloatArray], Geometries]:
         """Generalised coast inside one tile, in grid index, and the islets met (lon, lat)."""
@@ -233,7 +254,7 @@ class _Tracer:
         return self.basins.tiling.with_margin(tile, rows, cols)
 
     def _land_polygons(self, window: Tile) -> Geometries:
-        """Land of a window as polygons in grid index; lakes are land, missing cells are not."""
+        """Land of a window as polygons in grid index; lakes are land, missing cells are like the nearest known."""
         if self.land is not None:
             frame = (window.col0, window.row0, window.col1 - 1, window.row1 - 1)
             cut = shapely.clip_by_rect(self.land, *frame)
@@ -244,13 +265,18 @@ class _Tracer:
         with np.errstate(invalid="ignore"):
             lake = (depth_m > SHORE_HAIR_M) & ~self.basins.sea_mask(window)
         depth_m[lake] = -1.0
-        depth_m[np.isnan(depth_m)] = 1.0
+        missing = np.isnan(depth_m)
+        if missing.all():
+            return np.zeros(0, dtype=object)
+        if missing.any():
+            nearest = ndimage.distance_transform_edt(missing, return_distances=False, return_indices=True)
+            depth_m = depth_m[tuple(nearest)]
         filled = contour_generator(z=depth_m, fill_type=FillType.OuterOffset).filled(-np.inf, SHORE_HAIR_M)
         corner = np.array([window.col0, window.row0], dtype=float)
         polygons = [
             shapely.polygons(rings[0], rings[1:] or None)
             for rings in (
-                [shapely.linearrings(points[a:b] + corner) for a, b in zip(offsets[:-1], offsets[1:], strict=True)]
+                [shapely.linearrings(points[a:b] + corner) for a, b in pairwise(offsets)]
                 for points, offsets in zip(*filled, strict=True)
             )
         ]
@@ -285,75 +311,6 @@ class _Tracer:
         return [shapely.get_coordinates(part) for part in parts if shapely.get_type_id(part) == 1]
 
 
-def join_ends(pieces: Sequence[FloatArray], *, tolerance: float, turn: int | None = None) -> list[FloatArray]:
-    """Join directed lines whose end lies at another's start.
-
-    Parameters
-    ----------
-    pieces : sequence of (k, 2) array of float
-        Directed lines.
-    tolerance : float
-        Greatest distance between an end and the start it is joined to, in the unit of the lines; nearest first.
-    turn : int, optional
-        Width after which the first coordinate comes round again.
-
-    Returns
-    -------
-    list of (k, 2) array of float
-        Chains; a closed one has its first point again at its end.
-    """
-    if not pieces:
-        return []
-    starts, ends = np.array([p[0] for p in pieces]), np.array([p[-1] for p in pieces])
-    if turn is not None:
-        tree = cKDTree(np.column_stack([np.mod(starts[:, 0], turn), starts[:, 1]]), boxsize=[turn, 1e9])
-        pairs = tree.query_ball_point(np.column_stack([np.mod(ends[:, 0], turn), ends[:, 1]]), tolerance)
-    else:
-        pairs = cKDTree(starts).query_ball_point(ends, tolerance)
-
-    def gap(i: int, j: int) -> float:
-        across = ends[i, 0] - starts[j, 0]
-        if turn is not None:
-            across -= turn * round(across / turn)
-        return float(np.hypot(across, ends[i, 1] - starts[j, 1]))
-
-    candidates = sorted((gap(i, j), i, j) for i, near in enumerate(pairs) for j in near)
-    follows: dict[int, int] = {}
-    led: set[int] = set()
-    for distance, i, j in candidates:
-        tiny = i == j and len(pieces[i]) < 4
-        if i in follows or j in led or (tiny and distance > 0):
-            continue
-        follows[i] = j
-        led.add(j)
-    return list(_chains(pieces, follows, led, turn))
-
-
-def _chains(
-    pieces: Sequence[FloatArray], follows: dict[int, int], led: set[int], turn: int | None
-) -> Iterator[FloatArray]:
-    """Walk the pieces from each open start, then round each closed chain."""
-    done: set[int] = set()
-    for first in [i for i in range(len(pieces)) if i not in led] + list(range(len(pieces))):
-        if first in done:
-            continue
-        parts, i = [pieces[first]], first
-        done.add(i)
-        while follows.get(i, first) not in done:
-            i = follows[i]
-            done.add(i)
-            part = pieces[i]
-            if turn is not None:
-                part = part + [turn * round((parts[-1][-1, 0] - part[0, 0]) / turn), 0.0]
-            parts.append(part[1:])
-        chain = np.concatenate(parts)
-        if follows.get(i) == first:
-            end = chain[0] if turn is None else chain[0] + [turn * round((chain[-1, 0] - chain[0, 0]) / turn), 0.0]
-            chain = np.concatenate([chain[:-1], end[None]])
-        if len(chain) > 1:
-            yield chain
-
-
 def _sort_out(
     source: GridSource, chains: Sequence[FloatArray], settings: CoastSettings
 ) -> tuple[list[CoastLine], Geometries]:
@@ -361,6 +318,8 @@ def _sort_out(
     lines: list[CoastLine] = []
     dropped: list[shapely.Geometry] = []
     for chain in chains:
+        if source.wraps:
+            chain[:, 0] -= source.n_cols * np.round((chain[:, 0].mean() - (source.n_cols - 1) / 2) / source.n_cols)
         line = CoastLine.through(*source.lonlat_of(chain[:, 0], chain[:, 1]))
         if len(line.lon_deg) < 2 or line.length_m <= 0:
             continue

@@ -181,10 +181,10 @@ _TABLE: Final[tuple[tuple[str, tuple[str, ...], tuple[_Row, ...]], ...]] = (
     )),
     ("index", _LINES, (
         ("index_max", "float64", "", "Resonance index, largest",
-         "Largest resonance index over the waves asked for, from 0 (not tuned) to 1 (tuned, fully reflecting shelf).",
+         "Largest index over the constituents (periods if none is asked for): 0 not tuned, 1 tuned and leak-proof.",
          _NO_INDEX),
         ("index_constituent", "str", "", "Wave with the largest index",
-         "Constituent or period that has the largest index.", _NO_INDEX),
+         "Constituent that has the largest index.", _NO_INDEX),
         ("index_mode", "int64", "", "Mode with the largest index",
          "Number of the natural mode behind the largest index, 1 the slowest.", _NO_INDEX),
         ("index_class", "str", "", "Resonance class", "The largest index as a word, for colouring.", _NO_INDEX),
@@ -193,7 +193,7 @@ _TABLE: Final[tuple[tuple[str, tuple[str, ...], tuple[_Row, ...]], ...]] = (
         ("strength", "float64", "", "Strength of that mode",
          "How well that mode holds its energy on the shelf, from 0 to 1.", _NO_INDEX),
         ("confidence", "str", "", "Confidence in the index",
-         "How far the index can be trusted here.", "Nothing was computed to be confident of: see status."),
+         "How far the index can be trusted here.", _NO_INDEX),
     )),
     ("shelfbreak", _DRAWN, (
         ("shelf_width_km", "float64", "km", "Shelf width", "Distance from the shore to the shelf break.", _NO_BREAK),
@@ -252,7 +252,7 @@ _TABLE: Final[tuple[tuple[str, tuple[str, ...], tuple[_Row, ...]], ...]] = (
         ("deep_m", "float64", "m", "Depth of the deep sea",
          "Depth of the sea taken beyond the transect.", "No usable profile: see status."),
         ("friction_m_s", "float64", "m/s", "Bottom friction",
-         "Linear friction coefficient used.", "No usable profile, or friction varies (quadratic drag): see note."),
+         "Linear friction coefficient used.", "No usable profile, or quadratic drag was asked for: see run."),
     )),
     ("profiles", _TRANSECTS, (
         ("n_bridged", "int64", "", "Land samples bridged", "Number of dry samples bridged inside the transect.", ""),
@@ -281,11 +281,11 @@ _TABLE: Final[tuple[tuple[str, tuple[str, ...], tuple[_Row, ...]], ...]] = (
         ("lon_deg", "float64", "deg", "Longitude of the sample", "Longitude of the sample.", ""),
         ("lat_deg", "float64", "deg", "Latitude of the sample", "Latitude of the sample.", ""),
         ("depth_m", "float64", "m", "Water depth",
-         "Depth used, positive down, 0 at the shoreline.", "Depth is missing or dry there."),
+         "Depth used, positive down, 0 at the shoreline.", ""),
         ("filled", "bool", "", "Filled or mended", "Whether the depth was bridged, filled or despiked, not read.", ""),
         ("period1_kernel_per_km", "float64", "1/km", "Hold on the slowest period",
-         "Share per km of this stretch of seabed in the slowest period: where it is large, a survey pays.",
-         "Beyond the break, or no shelf break."),
+         "Share per km of this stretch of seabed in the slowest period, 0 beyond the break: where it is large, a "
+         "survey pays.", "No shelf break: see status."),
     )),
     ("response", ("response",), (
         ("wave", "str", "", "Constituent", "Name of the constituent; no letters for other periods.", ""),

@@ -128,8 +128,8 @@ friction_m_s = 1.0e-3
 deep_m = 4000.0
 
 [depth_error]               # how wrong the depths may be: sd = sqrt(fixed_m^2 + (per_depth * depth)^2)
-fixed_m = 0.5
-per_depth = 0.012
+fixed_m = 5.0               # 0.5 and 0.012 for a survey to Order 2 of IHO S-44
+per_depth = 0.12
 correlation_km = 20.0
 
 [output]

@@ -21,6 +21,8 @@ IntArray = NDArray[np.int64]
 Geometries = NDArray[np.object_]
 
 _POINT, _LINE, _POLYGON = 0, 1, 2
+#: Names of the column of identities: ours, and what a shapefile leaves of it.
+_ID_NAMES: Final = ("transect_id", "transect_i")
 #: A line that begins deeper than it ends by more than this may have been drawn from the sea to the shore, metres.
 BACKWARD_FALL_M: Final = 20.0
 
@@ -79,10 +81,15 @@ def make_transects(source: GridSource, coast: Coast, settings: Settings) -> Tran
     if not is_line.any():
         raise TransectError(f"{data.path}: holds no lines; draw each transect from the shore seaward")
     lines = _seaward(source, coast, data.geometry[is_line])
-    ids = data.columns.get("transect_id")
+    ids = _identities(data)
     return transects_from_lines(
         lines, None if ids is None else _whole_numbers(data, ids)[is_line], coast, settings.transects.spacing_m
     )
+
+
+def _identities(data: VectorData) -> NDArray[Any] | None:
+    """Column of identities as it stands in a file; None without one."""
+    return next((data.columns[name] for name in _ID_NAMES if name in data.columns), None)
 
 
 def _whole_numbers(data: VectorData, ids: NDArray[Any]) -> IntArray:
@@ -96,7 +103,7 @@ def _whole_numbers(data: VectorData, ids: NDArray[Any]) -> IntArray:
             f"{data.path}: the column transect_id holds {ids.dtype} values that are no whole numbers; "
             "make it an integer column, or delete it to number the transects anew"
         )
-    return numbers.astype(np.int64)
+    return np.asarray(numbers, dtype=np.int64)
 
 
 def _seaward(source: GridSource, coast: Coast, lines: Geometries) -> Geometries:
@@ -143,10 +150,11 @@ def picked_breaks(settings: Settings, transect_id: IntArray) -> Geometries:
     if settings.shelf_break.file is None:
         return picks
     data = read_vector(settings.shelf_break.file, settings.shelf_break.layer)
-    if "transect_id" not in data.columns or (shapely.get_dimensions(data.geometry) != _POINT).any():
+    column = _identities(data)
+    if column is None or (shapely.get_dimensions(data.geometry) != _POINT).any():
         raise SettingsError(f"{data.path}: breaks picked by hand must be points with a column transect_id")
-    points, row = shapely.get_parts(data.geometry, return_index=True)
-    ids = data.columns["transect_id"][row]
+    points, part_of = shapely.get_parts(data.geometry, return_index=True)
+    ids = column[part_of]
     known = {int(number): row for row, number in enumerate(transect_id)}
     strangers = sorted({str(number) for number in ids if number not in known})
     if strangers:

@@ -283,9 +283,10 @@ def _warn_of_picks_unused(sections: Sequence[Section], screened: Screened) -> No
     is_given = np.concatenate([[pick is not None for pick in section.picks] for section in sections]).astype(bool)
     unused = screened.transects.transect_id[is_given & ~screened.breaks.is_picked]
     if len(unused):
+        some = ", ".join(map(str, unused[:10])) + ", ..." * (len(unused) > 10)
         warnings.warn(
-            f"breaks picked for transect_id {', '.join(map(str, unused[:10]))}{', ...' * (len(unused) > 10)} lie beyond "
-            "the depths of these transects and are not used; move them between shore and end",
+            f"breaks picked for transect_id {some} lie beyond the depths of these transects and are not used; "
+            "move them between shore and end",
             ShelfmapWarning,
             stacklevel=3,
         )

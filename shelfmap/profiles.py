@@ -228,7 +228,7 @@ def _joined(box: FloatArray, other: FloatArray) -> FloatArray:
 
 def _window(source: GridSource, box: FloatArray) -> tuple[int, int, int, int]:
     """Window of the grid that holds a box of indices, with a cell to spare, and two rows and columns at least."""
-    row0, row1, col0, col1 = np.clip(np.nan_to_num(box), -1e9, 1e9).astype(int) + [-1, 3, -1, 3]
+    row0, row1, col0, col1 = np.clip(np.nan_to_num(box), -1e9, 1e9).astype(int) + np.array([-1, 3, -1, 3])
     if not source.wraps:
         col0, col1 = min(max(col0, 0), source.n_cols - 2), max(min(col1, source.n_cols), 2)
     return min(max(row0, 0), source.n_rows - 2), max(min(row1, source.n_rows), 2), col0, col1

@@ -3,7 +3,7 @@
 import importlib.metadata
 import platform
 from collections import Counter
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from typing import Any, Final
 
 import numpy as np
@@ -52,7 +52,7 @@ def run_layer(
         Status of each transect.
     """
     counts = status_counts(status)
-    topics: dict[str, dict[str, str | None]] = {
+    topics: dict[str, Mapping[str, str | None]] = {
         "caution": {"cautions": CAUTIONS},
         "setting": dict(_flat(settings.model_dump(mode="json"))),
         "source": {

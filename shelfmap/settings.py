@@ -6,11 +6,12 @@ stages, through the ``_m`` properties here.
 """
 
 import difflib
+import json
 import tomllib
 from pathlib import Path
-from typing import Annotated, Any, Literal, Self, TypeVar
+from typing import Annotated, Any, Final, Literal, Self, TypeVar
 
-from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, ValidationError, model_validator
+from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, ValidationError, field_validator, model_validator
 
 from shelfmap.constants import CONSTITUENTS
 from shelfmap.errors import SettingsError
@@ -24,7 +25,13 @@ __all__ = [
     "Settings",
     "ShelfBreakSettings",
     "TransectSettings",
+    "markdown_settings",
 ]
+
+#: Missing cells taken as land (`GridSettings.void_is_land`) stand this high, metres.
+VOID_LAND_M: Final = 10.0
+#: Depths a deep sea may have, metres.
+DEEP_M: Final = (500.0, 11_000.0)
 
 
 def _constituent_name(value: object) -> object:
@@ -38,6 +45,13 @@ def _constituent_name(value: object) -> object:
             f"constituent {value!r} is unknown; did you mean {usual[near[0]]!r}? Known: {', '.join(CONSTITUENTS)}"
         )
     return usual[value.lower()]
+
+
+def _deep(value: object) -> object:
+    """Refuse what is no depth in one sentence, not one for each kind of value allowed."""
+    if value != "deepest" and not (isinstance(value, int | float) and DEEP_M[0] <= value <= DEEP_M[1]):
+        raise ValueError(f'deep_m = {value!r}: give {DEEP_M[0]:g} to {DEEP_M[1]:g} m, or "deepest"')
+    return value
 
 
 def _as_path(value: object) -> object:
@@ -208,10 +222,19 @@ class ResponseSettings(_Stage):
     offshore_amplitude_m: dict[ConstituentName, Annotated[float, Field(gt=0, le=20)]] = Field(
         default_factory=dict, description="Amplitude at the deep sea by constituent, m, for the drag."
     )
-    deep_m: Annotated[float, Field(ge=500, le=11_000)] | Literal["deepest"] = Field(
+    deep_m: Annotated[
+        Annotated[float, Field(ge=DEEP_M[0], le=DEEP_M[1])] | Literal["deepest"], BeforeValidator(_deep)
+    ] = Field(
         4000.0,
         description="Depth of the deep sea beyond the transect, m; or deepest: the greatest depth on it.",
     )
+
+    @field_validator("offshore_amplitude_m", mode="before")
+    @classmethod
+    def _each_once(cls, value: object) -> object:
+        if isinstance(value, dict) and len({str(name).lower() for name in value}) != len(value):
+            raise ValueError(f"{list(value)}: the same constituent stands twice")
+        return value
 
     @model_validator(mode="after")
     def _consistent(self) -> Self:
@@ -229,12 +252,18 @@ class ResponseSettings(_Stage):
 
 
 class DepthErrorSettings(_Stage):
-    """How wrong the grid's depths may be: sd = sqrt(fixed_m^2 + (per_depth * depth)^2)."""
+    """How wrong the grid's depths may be: sd = sqrt(fixed_m^2 + (per_depth * depth)^2).
+
+    The form is that of IHO S-44. The defaults are for global grids: two of them, ETOPO1 and ETOPO5, differ on the
+    shelves of the Gulf of Maine and the south-eastern United States by a robust sd of 6-14 m in 20-50 m of water,
+    16-26 m in 50-100 m and 27-51 m in 100-200 m; the square root of 2 is taken off, as both are in error. A survey to
+    Order 2 of S-44 has fixed_m = 0.5, per_depth = 0.012.
+    """
 
     fixed_m: float = Field(
-        0.5, ge=0, le=1000, description="Part of the depth error that is the same at all depths, one sd, m."
+        5.0, ge=0, le=1000, description="Part of the depth error that is the same at all depths, one sd, m."
     )
-    per_depth: float = Field(0.012, ge=0, le=1, description="Part that grows with depth, one sd as a share of it.")
+    per_depth: float = Field(0.12, ge=0, le=1, description="Part that grows with depth, one sd as a share of it.")
     correlation_km: float = Field(20.0, gt=0, le=2000, description="Distance over which depth errors go together, km.")
 
 
@@ -258,6 +287,15 @@ class Settings(_Stage):
     response: ResponseSettings = ResponseSettings()
     depth_error: DepthErrorSettings = DepthErrorSettings()
     output: OutputSettings = OutputSettings()
+
+    @model_validator(mode="after")
+    def _void_below_shoreline(self) -> Self:
+        if self.grid.void_is_land and self.coast.level_m >= VOID_LAND_M:
+            raise ValueError(
+                f"grid.void_is_land with coast.level_m = {self.coast.level_m}: missing cells are read as land "
+                f"{VOID_LAND_M:g} m high; give a level_m below that, or move the water with grid.level_shift_m"
+            )
+        return self
 
     @classmethod
     def from_toml(cls, path: str | Path) -> Self:
@@ -301,6 +339,33 @@ class Settings(_Stage):
             raise SettingsError(f"{where}: {error.error_count()} setting(s) to mend\n{faults}") from error
 
 
+def markdown_settings() -> str:
+    r"""Table of all settings for README: name, default as TOML, meaning.
+
+    Examples
+    --------
+    >>> print("\n".join(markdown_settings().splitlines()[:4]))
+    | setting | default | meaning |
+    |---|---|---|
+    | `title` | `""` | A name for the run. |
+    | `grid.path` | must be given | Bathymetry raster, anything GDAL reads; relative to the settings file. |
+    """
+    return "\n".join(["| setting | default | meaning |", "|---|---|---|", *_setting_rows(Settings, "")])
+
+
+def _setting_rows(model: type[BaseModel], stem: str) -> list[str]:
+    rows = []
+    for name, field in model.model_fields.items():
+        inner = field.annotation
+        if isinstance(inner, type) and issubclass(inner, BaseModel):
+            rows += _setting_rows(inner, f"{stem}{name}.")
+            continue
+        default = field.get_default(call_default_factory=True)
+        shown = "none" if default is None else f"`{json.dumps(default, default=str)}`"
+        rows.append(f"| `{stem}{name}` | {'must be given' if field.is_required() else shown} | {field.description} |")
+    return rows
+
+
 def _rooted(settings: _S, folder: Path) -> _S:
     """Return the same settings with every relative path standing in `folder`."""
     update: dict[str, object] = {}
@@ -315,7 +380,7 @@ def _rooted(settings: _S, folder: Path) -> _S:
 
 def _fault(model: type[BaseModel], fault: dict[str, Any]) -> str:
     """Say one fault as a person would: where, what is wrong with its value, what is allowed."""
-    where = ".".join(str(part) for part in fault["loc"])
+    where = ".".join(str(part) for part in fault["loc"] if part != "[key]")
     if fault["type"] == "extra_forbidden":
         known = sorted(_known_names(model, fault["loc"][:-1]))
         near = difflib.get_close_matches(str(fault["loc"][-1]), known, n=1, cutoff=0.5)
@@ -323,9 +388,11 @@ def _fault(model: type[BaseModel], fault: dict[str, Any]) -> str:
         return f"{where}: no such setting; {hint}"
     if fault["type"] == "missing":
         return f"{where}: must be given"
+    if fault["type"] == "path_type":
+        return f"{where} = {fault['input']!r}: must be the name of a file, in quotes"
     message = str(fault["msg"]).removeprefix("Value error, ")
     value = "" if fault["type"] == "value_error" else f" = {fault['input']!r}"
-    return f"{where}{value}: {message[:1].lower() + message[1:]}"
+    return f"{where}{value}: ".removeprefix(": ") + message[:1].lower() + message[1:]
 
 
 def _known_names(model: type[BaseModel], loc: tuple[int | str, ...]) -> set[str]:

@@ -7,7 +7,7 @@ import numpy as np
 import shapely
 from numpy.typing import NDArray
 
-from shelfmap.assess import break_doubts, confidences
+from shelfmap.assess import confidences, doubts
 from shelfmap.coast import Coast
 from shelfmap.columns import columns_of
 from shelfmap.constants import CONSTITUENTS
@@ -103,13 +103,14 @@ def result_layers(screened: Screened, coast: Coast, settings: Settings) -> list[
         np.stack([break_lon, break_lat], axis=1),
         screened.transects.coast_part,
     )
+    of_waves = _wave_columns(screened, waves)
     columns = {
         **transect_columns(screened.transects, screened.profiles),
         **_profile_columns(screened, settings),
         **_break_columns(screened, break_lon, break_lat),
         **_mode_columns(screened),
-        **_wave_columns(screened, waves),
-        **_remark_columns(screened, waves, crosses),
+        **of_waves,
+        **_remark_columns(screened, waves, crosses, np.isfinite(of_waves["index_max"])),
         "crosses": crosses,
     }
     pieces = [coast_piece(coast, screened.transects, row) for row in range(len(screened.transects))]
@@ -234,23 +235,28 @@ def _wave_columns(screened: Screened, waves: tuple[Wave, ...]) -> Columns:
         columns[f"lag_{wave.label}_deg"] = np.degrees(response.lag_rad[:, k])
         columns[f"edge_ratio_{wave.label}"] = response.edge_ratio[:, k]
         columns[f"index_{wave.label}"] = index.index[:, k]
-    filled = np.where(np.isnan(index.index), -1.0, index.index)
+    counted = np.array([bool(wave.name) for wave in waves])
+    if not counted.any():
+        counted[:] = True
+    filled = np.where(np.isnan(index.index) | ~counted, -1.0, index.index)
     best = np.argmax(filled, axis=1)
     rows = np.arange(len(best))
     none = filled[rows, best] < 0
     names = np.array([wave.name or f"{wave.period_h:g} h" for wave in waves], dtype=object)
-    largest = index.index[rows, best]
+    largest = np.where(none, np.nan, index.index[rows, best])
     return columns | {
         "index_max": largest,
         "index_constituent": _nullable(names[best], none),
         "index_mode": _nullable(index.mode[rows, best], none),
         "index_class": _nullable(index_class(largest), none),
-        "tuning": index.tuning[rows, best],
-        "strength": index.strength[rows, best],
+        "tuning": np.where(none, np.nan, index.tuning[rows, best]),
+        "strength": np.where(none, np.nan, index.strength[rows, best]),
     }
 
 
-def _remark_columns(screened: Screened, waves: tuple[Wave, ...], crosses: NDArray[np.bool_]) -> Columns:
+def _remark_columns(
+    screened: Screened, waves: tuple[Wave, ...], crosses: NDArray[np.bool_], has_index: NDArray[np.bool_]
+) -> Columns:
     profiles, modes = screened.profiles, screened.modes
     n = len(screened.status)
     remarks: list[list[str]] = [[] for _ in range(n)]
@@ -258,7 +264,7 @@ def _remark_columns(screened: Screened, waves: tuple[Wave, ...], crosses: NDArra
     holds_index = screened.status == "ok"
     error = modes.period_sd_s / modes.node_period_s[:, 0]
     change = _width_change(screened.transects, np.where(holds_index, screened.breaks.break_m, np.nan))
-    for text, holds in break_doubts(profiles, screened.breaks, crosses, change, modes.kernel_peak_share, error):
+    for text, holds in doubts(profiles, screened.breaks, crosses, change, modes.kernel_peak_share, error):
         for row in np.flatnonzero(holds & holds_index):
             remarks[row].append(text[row])
         n_doubts += holds
@@ -273,7 +279,7 @@ def _remark_columns(screened: Screened, waves: tuple[Wave, ...], crosses: NDArra
         deepest_m = np.nanmax(profiles.depth_m[row])
         remarks[row].append(f"deepest {deepest_m:.0f} m, stepped to {screened.outer_depth_m[row]:.0f} m")
     notes = np.array(["; ".join(parts) or None for parts in remarks], dtype=object)
-    return {"note": notes, "confidence": confidences(screened.status, n_doubts)}
+    return {"note": notes, "confidence": confidences(has_index, n_doubts)}
 
 
 def _width_change(transects: Transects, width_m: FloatArray) -> FloatArray:

@@ -91,7 +91,7 @@ def lay_transects(coast: Coast, settings: TransectSettings, coast_settings: Coas
     columns: dict[str, list[FloatArray]] = {name: [] for name in ("part", "along", "piece", "lon", "lat", "bearing")}
     for part, line in enumerate(coast.lines, start=1):
         n = max(1, round(line.length_m / settings.spacing_m))
-        along_m = (np.arange(n) + 0.5) * (line.length_m / n)
+        along_m = np.asarray((np.arange(n) + 0.5) * (line.length_m / n), dtype=np.float64)
         lon_deg, lat_deg = _points_along(line, along_m)
         keep = _in_box(lon_deg, lat_deg, coast_settings.box)
         bearing_deg = _seaward_bearings(line, along_m[keep], coast_settings.generalise_m)
@@ -241,7 +241,9 @@ def _nearest_on_coast(
     """Piece of coast each point is nearest to and the distance along it; 0 and NaN where none is within reach."""
     part, coast_m = np.zeros(len(lon_deg), dtype=np.int64), np.full(len(lon_deg), np.nan)
     number = np.concatenate([np.full(len(line.along_m) - 1, i) for i, line in enumerate(coast.lines, start=1)])
-    ends = np.concatenate([np.stack([_legs(a) for a in (c.lon_deg, c.lat_deg, c.along_m)]) for c in coast.lines], axis=1)
+    ends = np.concatenate(
+        [np.stack([_legs(a) for a in (c.lon_deg, c.lat_deg, c.along_m)]) for c in coast.lines], axis=1
+    )
     squeeze = np.maximum(np.cos(np.radians(lat_deg)), 0.01)
     reach_deg = within_m / _LEAST_DEGREE_M
     tree = shapely.STRtree(shapely.linestrings(ends[:2].transpose(1, 2, 0)))
@@ -295,9 +297,11 @@ def _nodes_of(lonlat: FloatArray) -> FloatArray:
     for i, leg in enumerate(leg_m):
         if leg <= 0:
             continue
-        along_m = np.linspace(0.0, leg, int(np.ceil(leg / NODE_M)) + 1)[1:]
-        lon, lat = geodesic_nodes(lon_deg[i], lat_deg[i], bearing_deg[i], along_m)
-        out.append(np.stack([start_m + along_m, lon[0], lat[0]]))
+        if leg > NODE_M:
+            along_m = np.linspace(0.0, leg, int(np.ceil(leg / NODE_M)) + 1)[1:-1]
+            lon, lat = geodesic_nodes(lon_deg[i], lat_deg[i], bearing_deg[i], along_m)
+            out.append(np.stack([start_m + along_m, lon[0], lat[0]]))
+        out.append(np.array([[start_m + leg], [lon_deg[i + 1]], [lat_deg[i + 1]]]))
         start_m += leg
     return np.concatenate(out, axis=1)
 

@@ -11,6 +11,8 @@ I64 = NDArray[np.int64]
 PLACES_PER_STEP = 4
 #: A shelf flatter than this counts as this steep in the contrast, rise over run.
 LEAST_SLOPE_BEFORE = 1e-4
+#: Gradient of the mean shelf (Heezen, Tharp & Ewing 1959, as quoted in general works): flatter ones count alike.
+MEAN_SHELF_SLOPE = 1e-3
 
 
 @njit(cache=True)
@@ -59,7 +61,7 @@ def _shoals_again(
 def _stretch(
     row: F64, n: int, step_m: float, start: int, slope: float, confirm: float, smoothing_m: float, ocean_m: float
 ) -> tuple[int, int]:
-    """Last place of the stretch from `start` on that keeps to `slope`, short of the ocean; first to `confirm`, or -1."""
+    """Last place of the stretch from `start` that keeps to `slope`, short of the ocean; first to `confirm` or -1."""
     d = step_m / PLACES_PER_STEP
     half = 0.5 * smoothing_m
     place, reached = start, -1
@@ -93,22 +95,25 @@ def find_break(
 
     The gradient at x is taken over `smoothing_m` centred on x: the slope of the running mean of the depth. A candidate
     is a stretch of at least `sustain_m`, or down to the open ocean, on which it stays at `slope` or more. The break is
-    where the gradient changes most, ``h(x + L) - 2 h(x) + h(x - L)`` at its largest, from one smoothing length before
+    where the gradient grows by the largest factor, beyond over (before + 1:1000), from one smoothing length before
     the stretch to where it has its say and no deeper than `deepest_m`, moved to where the lines of shelf and slope on
     both sides meet. It must lie between the depths allowed and have the contrast, and beyond the stretch the bed must
-    not come halfway back up to it before the ocean: that would be a trough. The first candidate that reaches `confirm` and
-    passes is it; where none does, the first with twice the contrast on which the bed falls to three times the break's
-    depth, or to the ocean: a long gentle slope.
+    not come halfway back up to it before the ocean: that would be a trough. The first candidate that reaches `confirm`
+    and passes is it; where none does, the first with twice the contrast on which the bed falls to three times the
+    break's depth, or to the ocean: a long gentle slope.
     """
     d = step_m / PLACES_PER_STEP
     half = 0.5 * smoothing_m
     fallback, fallback_depth = np.nan, np.nan
+    falls_to = 0.0
     i = 0
     while i < (n - 1) * PLACES_PER_STEP + 1:
-        depth = depth_at(row, n, step_m, i * d)
-        if depth >= ocean_m:
+        if falls_to >= ocean_m or depth_at(row, n, step_m, i * d - half) >= ocean_m:
             break
-        if depth < shallowest_m or slope_between(row, n, step_m, i * d - half, i * d + half) < slope:
+        if (
+            depth_at(row, n, step_m, i * d) < shallowest_m
+            or slope_between(row, n, step_m, i * d - half, i * d + half) < slope
+        ):
             i += 1
             continue
         last, reached = _stretch(row, n, step_m, i, slope, confirm, smoothing_m, ocean_m)
@@ -120,7 +125,8 @@ def find_break(
             before, beyond = sides(row, n, step_m, at, depth, smoothing_m)
             contrast = beyond / max(before, LEAST_SLOPE_BEFORE)
             if (
-                shallowest_m <= depth <= deepest_m
+                at > 0.0
+                and shallowest_m <= depth <= deepest_m
                 and contrast >= least_contrast
                 and not _shoals_again(row, n, step_m, last * d, depth, sustain_m, deepest_m, ocean_m)
             ):
@@ -136,9 +142,9 @@ def find_break(
 def _sharpest(
     row: F64, n: int, step_m: float, from_m: float, to_m: float, smoothing_m: float, deepest_m: float
 ) -> float:
-    """Place between two distances, above a depth, where the gradient over `smoothing_m` grows most; first of equals."""
+    """Place between two distances, above a depth, where the gradient grows by the largest factor; first of equals."""
     d = step_m / PLACES_PER_STEP
-    best, best_change = 0.0, -np.inf
+    best, best_growth = 0.0, -np.inf
     low = max(1, int(np.floor(from_m / d)))
     high = min((n - 1) * PLACES_PER_STEP, int(np.ceil(to_m / d)))
     for k in range(low, high + 1):
@@ -146,8 +152,9 @@ def _sharpest(
         if depth > deepest_m:
             continue
         before, beyond = sides(row, n, step_m, k * d, depth, smoothing_m)
-        if beyond - before > best_change + 1e-12:
-            best, best_change = k * d, beyond - before
+        growth = beyond / (max(before, 0.0) + MEAN_SHELF_SLOPE)
+        if growth > best_growth + 1e-9:
+            best, best_growth = k * d, growth
     return best
 
 

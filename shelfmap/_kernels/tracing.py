@@ -5,6 +5,7 @@ from numba import njit
 from numpy.typing import NDArray
 
 from shelfmap._kernels.sampling import bilinear_cell, locate
+from shelfmap.constants import GRAVITY_M_S2
 
 F64 = NDArray[np.float64]
 F32 = NDArray[np.float32]
@@ -71,6 +72,81 @@ def _bisect(
 
 
 @njit(cache=True)
+def seek_landward(
+    depth: F32,
+    row0: int,
+    col0: int,
+    wrap_cols: int,
+    node_m: F64,
+    node_row: F64,
+    node_col: F64,
+    look_m: float,
+    hair_m: float,
+) -> tuple[float, int]:
+    """Where the shore lies behind a station in the water; the station itself where the transect meets none."""
+    look_m = min(look_m, -0.25 * node_m[0])  # looks, however coarse the grid; none where the transect starts here
+    at_m = -look_m
+    while look_m > 0.0 and at_m >= node_m[0]:
+        d = _depth_at(depth, row0, col0, wrap_cols, node_m, node_row, node_col, at_m)
+        if d == _OUTSIDE or np.isnan(d):
+            break
+        if d <= hair_m:
+            return _bisect(
+                depth, row0, col0, wrap_cols, node_m, node_row, node_col, at_m, at_m + look_m, hair_m
+            ), AT_SHORE
+        at_m -= look_m
+    return 0.0, IN_WATER
+
+
+@njit(cache=True)
+def seek_seaward(
+    depth: F32,
+    row0: int,
+    col0: int,
+    wrap_cols: int,
+    node_m: F64,
+    node_row: F64,
+    node_col: F64,
+    seek_m: float,
+    look_m: float,
+    short: int,
+    hair_m: float,
+) -> tuple[float, int]:
+    """Where the water begins before a station on land, within `seek_m`.
+
+    A pool of fewer than four looks of `look_m` does not count where more water follows. Where depth is missing between
+    the last dry look and the water, that look is the shore if at most `short` samples of two looks are missing; else
+    the transect starts in a void.
+    """
+    found_m, shore_dry_m, dry_m, wet_run, reason = 0.0, 0.0, 0.0, 0, NO_WATER
+    at_m = look_m
+    while at_m <= seek_m and wet_run < 4:
+        d = _depth_at(depth, row0, col0, wrap_cols, node_m, node_row, node_col, at_m)
+        if d == _OUTSIDE:
+            reason = AT_SHORE if reason == AT_SHORE else START_OUTSIDE
+            break
+        if d > hair_m:
+            if wet_run == 0:
+                found_m, shore_dry_m = at_m, dry_m
+            wet_run += 1
+            reason = AT_SHORE
+        elif d <= hair_m:
+            wet_run, dry_m = 0, at_m
+            reason = AT_SHORE if reason == AT_SHORE else NO_WATER
+        elif reason == NO_WATER:
+            reason = START_VOID
+        at_m += look_m
+    if reason != AT_SHORE:
+        return 0.0, reason
+    missing_m = found_m - shore_dry_m - look_m
+    if missing_m < 0.5 * look_m:
+        return _bisect(depth, row0, col0, wrap_cols, node_m, node_row, node_col, shore_dry_m, found_m, hair_m), AT_SHORE
+    if missing_m < (2 * short + 0.5) * look_m:
+        return shore_dry_m, AT_SHORE
+    return 0.0, START_VOID
+
+
+@njit(cache=True)
 def find_shore(
     depth: F32,
     row0: int,
@@ -81,48 +157,18 @@ def find_shore(
     node_col: F64,
     seek_m: float,
     look_m: float,
+    short: int,
     hair_m: float,
 ) -> tuple[float, int]:
-    """Where on a transect its water begins (distance from the station), and how it starts.
-
-    From a station in the water the shore is sought landward as far as the transect reaches; from one on land, seaward
-    within `seek_m`, and a pool shorter than two looks of `look_m` does not count where more water follows.
-    """
+    """Where on a transect its water begins (distance from the station), and how it starts."""
     here = _depth_at(depth, row0, col0, wrap_cols, node_m, node_row, node_col, 0.0)
     if here == _OUTSIDE:
         return 0.0, START_OUTSIDE
     if np.isnan(here):
         return 0.0, START_VOID
     if here > hair_m:
-        at_m = -look_m
-        while at_m >= node_m[0]:
-            d = _depth_at(depth, row0, col0, wrap_cols, node_m, node_row, node_col, at_m)
-            if d == _OUTSIDE or np.isnan(d):
-                break
-            if d <= hair_m:
-                return _bisect(depth, row0, col0, wrap_cols, node_m, node_row, node_col, at_m, at_m + look_m, hair_m), AT_SHORE
-            at_m -= look_m
-        return 0.0, IN_WATER
-    found_m, wet_run, any_water = 0.0, 0, False
-    dry_m, last_dry_m = 0.0, 0.0
-    at_m = look_m
-    while at_m <= seek_m and wet_run < 4:
-        d = _depth_at(depth, row0, col0, wrap_cols, node_m, node_row, node_col, at_m)
-        if d == _OUTSIDE:
-            break
-        if d > hair_m:
-            if wet_run == 0:
-                found_m, dry_m = at_m, last_dry_m
-            wet_run += 1
-            any_water = True
-        elif d <= hair_m:
-            wet_run, last_dry_m = 0, at_m
-        else:
-            any_void = True
-        at_m += look_m
-    if not any_water:
-        return 0.0, NO_WATER
-    return _bisect(depth, row0, col0, wrap_cols, node_m, node_row, node_col, found_m - look_m, found_m, hair_m), AT_SHORE
+        return seek_landward(depth, row0, col0, wrap_cols, node_m, node_row, node_col, look_m, hair_m)
+    return seek_seaward(depth, row0, col0, wrap_cols, node_m, node_row, node_col, seek_m, look_m, short, hair_m)
 
 
 @njit(cache=True)
@@ -196,19 +242,21 @@ def mend_gaps(
     """Bridge short runs of land and fill short voids; stop at the first longer one.
 
     Land of at most `short` samples, and missing depth of at most `short` samples or of at most `share` of the
-    profile's travel time, are replaced by straight lines between the water on both sides and marked in `filled`.
+    travel time up to the first longer land, are replaced by straight lines between the water on both sides and marked
+    in `filled`.
     Returns the samples kept, the reason they end (-1: the whole profile is kept), the middle of the land it ends at
     (metres from the shore), and how many samples were bridged and filled.
     """
-    bridged, voids, tau = 0, 0, 0.0
-    whole_tau = 0.0
+    bridged, voids, dry_run, whole_tau = 0, 0, 0, 0.0
     for j in range(1, n):
         if row[j] > hair_m:
-            whole_tau += step_m / np.sqrt(9.81 * row[j])
+            whole_tau += step_m / np.sqrt(GRAVITY_M_S2 * row[j])
+        dry_run = dry_run + 1 if row[j] <= hair_m else 0
+        if dry_run > short:
+            break
     j = 1
     while j < n:
         if row[j] > hair_m:
-            tau += step_m / np.sqrt(9.81 * row[j])
             j += 1
             continue
         stop, has_land = j, False
@@ -219,7 +267,7 @@ def mend_gaps(
         fits = stop < n and run <= short
         if not fits and stop < n and not has_land:
             mean = 0.5 * (max(row[j - 1], 1.0) + row[stop])
-            fits = run * step_m / np.sqrt(9.81 * mean) <= share * whole_tau
+            fits = run * step_m / np.sqrt(GRAVITY_M_S2 * mean) <= share * whole_tau
         if not fits or (j == 1 and row[0] <= hair_m and has_land):
             return j, (LAND if has_land else VOID), (j + 0.5 * (run - 1)) * step_m, bridged, voids
         for i in range(j, stop):
@@ -267,7 +315,7 @@ def trace_rows(
     work = np.empty(out_depth_m.shape[1])
     for k in range(node_m.shape[0]):
         nm, nr, nc = node_m[k, : n_nodes[k]], node_row[k, : n_nodes[k]], node_col[k, : n_nodes[k]]
-        shore_m, start = find_shore(depth, row0, col0, wrap_cols, nm, nr, nc, seek_m[k], 0.5 * step_m, hair_m)
+        shore_m, start = find_shore(depth, row0, col0, wrap_cols, nm, nr, nc, seek_m[k], 0.5 * step_m, short, hair_m)
         out_shore_m[k], out_start[k] = shore_m, start
         if start > IN_WATER:
             continue

@@ -1,0 +1,38 @@
+"""Small coasts with settings, and exact comparison of outputs, for the tests of whole runs."""
+
+import numpy as np
+
+from shelfmap.layers import read_table
+from shelfmap.settings import Settings
+from shelfmap.synthetic import shelf_profile, straight_coast
+
+RESULTS = ("coast_index", "transects", "shelf_breaks", "profiles", "response")
+SHELF = shelf_profile(100e3, 150.0, 0.05, 3000.0)
+
+
+def small_coast(**more):
+    """Straight coast at 40 N, 300 km of it, sea in the west, a shelf of 100 km."""
+    return straight_coast(270.0, 40.0, SHELF, **{"cell": 0.05, "shape": (55, 95), **more})
+
+
+def settings_for(grid, folder, **tables):
+    """Settings of a quick run of a grid into a folder; tables as in TOML, merged into these."""
+    content = {
+        "title": "test",
+        "grid": {"path": str(grid), "positive": "up"},
+        "coast": {"generalise_km": 10.0},
+        "transects": {"spacing_km": 10.0, "length_km": 200.0},
+        "output": {"path": "out.gpkg"},
+    }
+    for name, table in tables.items():
+        content[name] = {**content.get(name, {}), **table}
+    return Settings.from_dict(content, folder=folder)
+
+
+def assert_same_results(path, other):
+    """Every table of two outputs is the same, number for number."""
+    for layer in RESULTS:
+        one, two = read_table(path, layer), read_table(other, layer)
+        assert list(one) == list(two)
+        for name in one:
+            np.testing.assert_array_equal(one[name], two[name], err_msg=f"{layer}.{name}")
