@@ -14,6 +14,9 @@ from shelfmap.grid import Grid, GridSource
 
 __all__ = ["SHORE_HAIR_M", "Basins", "Tile", "Tiling", "label_basins"]
 
+#: Label of missing cells; 0 is land, water is numbered above.
+_MISSING = 1
+
 #: Water is deeper than this. Contours are drawn here too: at exactly the level of integer depths they touch themselves.
 SHORE_HAIR_M = 1e-6
 
@@ -93,7 +96,7 @@ class Basins:
     packed : dict of (int, int) to bytes
         Labels of each tile's water, int32, compressed.
     is_sea : (n_labels,) array of bool
-        Whether a label's basin is sea; label 0 is land.
+        Whether a label's basin is sea; label 0 is land, 1 missing.
     areas_m2 : (n_seas,) array of float
         Areas of the basins that are sea, square metres, largest first.
     """
@@ -143,7 +146,7 @@ def label_basins(
     smallest_sea_m2: float,
     smallest_enclosed_sea_m2: float,
 ) -> Basins:
-    """Find the water that is sea: large enough, and larger still where it does not reach the region's edge.
+    """Find the water that is sea: large enough, and larger still where it is known to be enclosed.
 
     Parameters
     ----------
@@ -154,7 +157,8 @@ def label_basins(
     level_m : float
         Elevation of the shoreline, metres.
     smallest_sea_m2, smallest_enclosed_sea_m2 : float
-        Least area of a basin that reaches the edge of the region, and of one that does not, square metres.
+        Least area of a basin that reaches the edge of the region or missing cells, beyond which it may go on, and of
+        one enclosed by land, square metres.
 
     Returns
     -------
@@ -164,14 +168,13 @@ def label_basins(
     n_i, n_j = tiling.shape
     packed: dict[tuple[int, int], bytes] = {}
     sides: dict[tuple[int, int], dict[str, IntArray]] = {}
-    areas: list[NDArray[np.float64]] = [np.zeros(1)]
-    n_labels = 1
+    areas: list[NDArray[np.float64]] = [np.zeros(_MISSING + 1)]
+    open_labels: list[IntArray] = []
+    n_labels = _MISSING + 1
     for i in range(n_i):
         for j in range(n_j):
             tile = tiling.tile(i, j)
-            grid = source.read(tile.row0, tile.row1, tile.col0, tile.col1)
-            labels, n = ndimage.label(is_water(grid, level_m))
-            labels = np.where(labels > 0, labels + (n_labels - 1), 0).astype(np.int32)
+            labels, n = _tile_labels(source.read(tile.row0, tile.row1, tile.col0, tile.col1), level_m, n_labels)
             cell_m2 = _cell_area_m2(source, tile)
             counted = np.bincount(labels.ravel(), weights=np.repeat(cell_m2, labels.shape[1]), minlength=n_labels + n)
             areas.append(counted[n_labels : n_labels + n])
@@ -182,16 +185,22 @@ def label_basins(
                 "west": labels[:, 0].astype(np.int64),
                 "east": labels[:, -1].astype(np.int64),
             }
+            open_labels.append(np.unique(labels[ndimage.binary_dilation(labels == _MISSING)]).astype(np.int64))
             n_labels += n
     basin, at_edge = _join(tiling, sides, n_labels)
     area = np.bincount(basin, weights=np.concatenate(areas), minlength=basin.max() + 1)
-    reaches_edge = np.zeros(len(area), dtype=bool)
-    reaches_edge[basin[at_edge]] = True
-    sea = area >= np.where(reaches_edge, smallest_sea_m2, smallest_enclosed_sea_m2)
-    sea[basin[0]] = False
-    is_sea = sea[basin]
-    is_sea[0] = False
-    return Basins(tiling, packed, is_sea, np.sort(area[sea])[::-1])
+    is_open = np.zeros(len(area), dtype=bool)
+    is_open[basin[np.concatenate([at_edge, *open_labels])]] = True
+    sea = area >= np.where(is_open, smallest_sea_m2, smallest_enclosed_sea_m2)
+    sea[basin[: _MISSING + 1]] = False
+    return Basins(tiling, packed, sea[basin], np.sort(area[sea])[::-1])
+
+
+def _tile_labels(grid: Grid, level_m: float, first: int) -> tuple[NDArray[np.int32], int]:
+    """Labels of a tile's cells, its water numbered from `first`, and the number of its waters."""
+    labels, n = ndimage.label(is_water(grid, level_m))
+    labels = np.where(labels > 0, labels + (first - 1), np.where(np.isnan(grid.depth_m), _MISSING, 0))
+    return labels.astype(np.int32), n
 
 
 def is_water(grid: Grid, level_m: float) -> BoolArray:
@@ -214,7 +223,7 @@ def _cell_area_m2(source: GridSource, tile: Tile) -> NDArray[np.float64]:
 def _join(
     tiling: Tiling, sides: dict[tuple[int, int], dict[str, IntArray]], n_labels: int
 ) -> tuple[IntArray, IntArray]:
-    """Basin number of every label, and the labels that touch the region's edge."""
+    """Basin number of every label, and the labels at the region's edge or beside missing cells of another tile."""
     n_i, n_j = tiling.shape
     pairs: list[IntArray] = []
     edge: list[IntArray] = []
@@ -232,7 +241,9 @@ def _join(
             pairs.append(np.stack([side["north"], sides[north]["south"]]))
     joined = np.concatenate(pairs, axis=1) if pairs else np.zeros((2, 0), dtype=np.int64)
     joined = joined[:, (joined > 0).all(axis=0)]
+    beside_missing = (joined == _MISSING).any(axis=0)
+    edge.append(joined[:, beside_missing].ravel())
+    joined = joined[:, ~beside_missing]
     graph = coo_array((np.ones(joined.shape[1], dtype=np.int8), (joined[0], joined[1])), shape=(n_labels, n_labels))
     _, basin = connected_components(graph, directed=False)
-    at_edge = np.unique(np.concatenate(edge)) if edge else np.zeros(0, dtype=np.int64)
-    return np.asarray(basin, dtype=np.int64), at_edge[at_edge > 0]
+    return np.asarray(basin, dtype=np.int64), np.unique(np.concatenate(edge))

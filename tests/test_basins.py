@@ -61,6 +61,23 @@ def test_enclosed_water_needs_the_larger_area(write_grid):
     assert len(without.areas_m2) == 1
 
 
+@pytest.mark.parametrize("tile_cells", [8, 1024])
+def test_water_beside_missing_cells_may_go_on(write_grid, tile_cells):
+    """A sea that ends at missing corners and not at the edge counts as open; a lake on land stays enclosed."""
+    path = write_grid(
+        scene(
+            lambda x, y: np.where(
+                np.abs(x) + np.abs(y) > 110, np.nan, np.where(np.hypot(x, y + 40) < 15, -5.0, -5 * y)
+            ),
+            n=121,
+        )
+    )
+    basins, mask = mask_of(open_up(path), least_km2=500, least_enclosed_km2=1e5, tile_cells=tile_cells)
+    assert len(basins.areas_m2) == 1
+    assert mask[70, 60]
+    assert not mask[40, 60]
+
+
 def test_water_that_meets_at_a_corner_is_not_connected(write_grid):
     elevation = np.full((20, 20), 10.0, dtype=np.float32)
     elevation[5:10, 5:10] = elevation[10:15, 10:15] = -10.0

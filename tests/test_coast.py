@@ -157,22 +157,23 @@ def paired(laid, lon0_deg, lat_sign, mirror):
     [(100.0, 1, False), (180.0, 1, False), (-179.0, 1, False), (10.0, -1, False), (10.0, 1, True)],
 )
 def test_copies_of_a_coast_give_the_same_transects(write_grid, lon, lat_sign, mirror):
-    """Moved, moved over 180, southern and mirrored: stations within 100 m, bearings within 0.5 degrees.
+    """Moved, moved over 180, southern and mirrored: stations within 200 m, bearings within 0.5 degrees.
 
     Contours and simplification start elsewhere on a mirrored grid, which moves the coast by up to the tolerance of the
-    simplification, radius / 50 = 200 m, and less on average.
+    simplification, radius / 50 = 200 m; over the 40 km of a bearing that is 0.3 degrees.
     """
     first = paired(lay(write_grid(ragged())), 10.0, 1, False)
     copy = paired(lay(write_grid(ragged(lon, lat_sign, mirror))), lon, lat_sign, mirror)
     assert first[0].shape == copy[0].shape
     away_m, _ = distance_bearing(*first[0].T, *copy[0].T)
-    assert away_m.max() < 100.0
+    assert away_m.max() < 200.0
     assert np.abs(first[1] - copy[1]).max() < np.radians(0.5)
     width = min(first[2].shape[1], copy[2].shape[1])
-    both = np.isfinite(first[2][:, :width]) & np.isfinite(copy[2][:, :width])
+    first_m, copy_m = first[2][:, 1:width], copy[2][:, 1:width]
+    both = np.isfinite(first_m) & np.isfinite(copy_m)
     assert both.mean() > 0.3
-    # the bed falls by up to 0.1 m in 1 m; 100 m and half a degree move a depth by some per cent at most
-    assert np.nanmedian(np.abs(first[2][:, :width] / copy[2][:, :width] - 1)[both]) < 0.01
+    # a station 200 m along a coast that winds by up to 45 degrees starts up to 200 m elsewhere; cells are 5 km
+    assert np.median(np.abs(first_m[both] / copy_m[both] - 1)) < 0.01
 
 
 # ---- closing
@@ -199,8 +200,6 @@ def test_small_island_is_dropped_and_named_as_islet(write_grid):
     east_km, north_km = scene_km(laid.source, shapely.get_x(islet.centroid), shapely.get_y(islet.centroid))
     # contour of a cone on 2 km cells
     assert float(np.hypot(east_km, north_km - 30)) < 0.5
-    facing = laid.profiles.end_reason[np.argmin(np.abs(scene_km(laid.source, laid.transects.lon_deg, 50.0)[0]))]
-    assert facing == 0  # 90 km off, beyond the search
 
 
 def test_large_island_carries_stations(write_grid):
@@ -265,7 +264,7 @@ def test_missing_margins_of_a_turned_grid_make_no_coast_along_them(write_grid):
 
 def test_missing_cells_can_count_as_land(write_grid):
     path = write_grid(scene(lambda x, y: np.where(y < 0, np.nan, -5.0 - 5 * y)))
-    with pytest.raises(CoastError, match="set grid.void_is_land = true"):
+    with pytest.raises(CoastError, match=r"set grid\.void_is_land = true"):
         lay(path)
     laid = lay(path, void_is_land=True)
     _, north_km = scene_km(laid.source, laid.coast.lines[0].lon_deg, laid.coast.lines[0].lat_deg)
@@ -305,7 +304,7 @@ def test_grid_in_other_units(write_grid, crs):
 
 @pytest.mark.parametrize("lon", [3.0, 179.9, -100.0])
 def test_land_polygons_give_the_coast_of_the_grid(write_grid, lon):
-    """Within a cell of the grid's; far land, whose rings cross the side of the globe away from the grid, does not matter."""
+    """Within a cell of the grid's; land on the far side of the globe does not matter."""
     grid = straight_coast(0.0, 10.0, SHELF, lon_deg=lon, shape=(61, 61))
     far = lon - 180.0
     land = [
@@ -431,7 +430,7 @@ def test_ends_are_joined_nearest_first_and_closed():
     pieces = [np.array([[0, 0], [1, 0]]), np.array([[1.1, 0], [1, 1]]), np.array([[1, 1.2], [0, 0.2]])]
     [chain] = join_ends([piece.astype(float) for piece in pieces], tolerance=0.25)
     np.testing.assert_array_equal(chain[0], chain[-1])
-    assert len(chain) == 6 - 0 - 1 - 1
+    assert len(chain) == 4
 
 
 def test_ends_are_joined_over_the_seam():

@@ -145,9 +145,10 @@ def test_profiles_too_short_to_tell_have_no_break(row):
     assert np.isnan(find([row], 1000.0).break_m[0])
 
 
-def test_a_shore_in_deep_water_has_no_break_at_the_shore():
-    found = find([bent([0, 40], [60, 4000], 1000.0, 100e3)], 1000.0)
-    assert np.isnan(found.break_m[0])
+@pytest.mark.parametrize("row", [np.linspace(60, 4000, 41), 500.0 + 1000.0 * np.arange(5)])
+def test_a_shore_in_deep_water_has_no_break_at_the_shore(row):
+    """A profile from a bridged inlet may begin at 500 m and be below all shelf breaks a quarter step on."""
+    assert np.isnan(find([row], 1000.0).break_m[0])
 
 
 def random_row(rng, n):

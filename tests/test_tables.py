@@ -170,6 +170,7 @@ def test_the_shelf_next_door_of_another_width_is_remarked(run, settings):
     width_m[row - 2 : row + 3] = 90e3, 90e3, 30e3, 60e3, 60e3
     screened = replace(run.screened, breaks=replace(breaks, break_m=width_m))
     note = tables(screened, run, settings)["transects"]["note"]
+    assert "shelf width changes 3.0-fold to a neighbour" in note[row - 1]
     assert "shelf width changes 3.0-fold to a neighbour" in note[row]
     assert "shelf width changes 2.0-fold to a neighbour" in note[row + 1]
 

@@ -118,6 +118,7 @@ def seek_seaward(
     the last dry look and the water, that look is the shore if at most `short` samples of two looks are missing; else
     the transect starts in a void.
     """
+    look_m = min(look_m, 0.25 * seek_m)  # looks, however coarse the grid
     found_m, shore_dry_m, dry_m, wet_run, reason = 0.0, 0.0, 0.0, 0, NO_WATER
     at_m = look_m
     while at_m <= seek_m and wet_run < 4:
