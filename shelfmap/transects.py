@@ -240,6 +240,8 @@ def _nearest_on_coast(
 ) -> tuple[IntArray, FloatArray]:
     """Piece of coast each point is nearest to and the distance along it; 0 and NaN where none is within reach."""
     part, coast_m = np.zeros(len(lon_deg), dtype=np.int64), np.full(len(lon_deg), np.nan)
+    if not coast.lines:
+        return part, coast_m
     number = np.concatenate([np.full(len(line.along_m) - 1, i) for i, line in enumerate(coast.lines, start=1)])
     ends = np.concatenate(
         [np.stack([_legs(a) for a in (c.lon_deg, c.lat_deg, c.along_m)]) for c in coast.lines], axis=1

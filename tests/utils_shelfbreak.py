@@ -133,7 +133,7 @@ class SlowBreak:
             at_m, depth_m = self.meeting(corner_m)
             before, beyond = self.sides(at_m, depth_m)
             contrast = beyond / max(before, 1e-4)
-            if at_m <= 0 or not shallowest_m <= depth_m <= deepest_m or contrast < least_contrast:
+            if at_m < self.step_m or not shallowest_m <= depth_m <= deepest_m or contrast < least_contrast:
                 continue
             if self.is_trough(self.place_m[last], depth_m, sustain_m, deepest_m, ocean_m):
                 continue

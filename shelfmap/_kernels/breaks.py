@@ -97,10 +97,10 @@ def find_break(
     is a stretch of at least `sustain_m`, or down to the open ocean, on which it stays at `slope` or more. The break is
     where the gradient grows by the largest factor, beyond over (before + 1:1000), from one smoothing length before
     the stretch to where it has its say and no deeper than `deepest_m`, moved to where the lines of shelf and slope on
-    both sides meet. It must lie between the depths allowed and have the contrast, and beyond the stretch the bed must
-    not come halfway back up to it before the ocean: that would be a trough. The first candidate that reaches `confirm`
-    and passes is it; where none does, the first with twice the contrast on which the bed falls to three times the
-    break's depth, or to the ocean: a long gentle slope.
+    both sides meet. It must lie beyond the first sample, between the depths allowed, and have the contrast, and beyond
+    the stretch the bed must not come halfway back up to it before the ocean: that would be a trough. The first
+    candidate that reaches `confirm` and passes is it; where none does, the first with twice the contrast on which the
+    bed falls to three times the break's depth, or to the ocean: a long gentle slope.
     """
     d = step_m / PLACES_PER_STEP
     half = 0.5 * smoothing_m
@@ -125,7 +125,7 @@ def find_break(
             before, beyond = sides(row, n, step_m, at, depth, smoothing_m)
             contrast = beyond / max(before, LEAST_SLOPE_BEFORE)
             if (
-                at > 0.0
+                at >= step_m  # in the first cell the grid holds no shelf
                 and shallowest_m <= depth <= deepest_m
                 and contrast >= least_contrast
                 and not _shoals_again(row, n, step_m, last * d, depth, sustain_m, deepest_m, ocean_m)
