@@ -177,7 +177,7 @@ def label_basins(
             labels, n = _tile_labels(source.read(tile.row0, tile.row1, tile.col0, tile.col1), level_m, n_labels)
             cell_m2 = _cell_area_m2(source, tile)
             counted = np.bincount(labels.ravel(), weights=np.repeat(cell_m2, labels.shape[1]), minlength=n_labels + n)
-            areas.append(counted[n_labels : n_labels + n])
+            areas.append(counted[n_labels : n_labels + n].astype(np.float64))
             packed[i, j] = zlib.compress(labels.tobytes(), 1)
             sides[i, j] = {
                 "south": labels[0].astype(np.int64),
@@ -188,7 +188,7 @@ def label_basins(
             open_labels.append(np.unique(labels[ndimage.binary_dilation(labels == _MISSING)]).astype(np.int64))
             n_labels += n
     basin, at_edge = _join(tiling, sides, n_labels)
-    area = np.bincount(basin, weights=np.concatenate(areas), minlength=basin.max() + 1)
+    area = np.bincount(basin, weights=np.concatenate(areas)).astype(np.float64)
     is_open = np.zeros(len(area), dtype=bool)
     is_open[basin[np.concatenate([at_edge, *open_labels])]] = True
     sea = area >= np.where(is_open, smallest_sea_m2, smallest_enclosed_sea_m2)
@@ -210,13 +210,16 @@ def is_water(grid: Grid, level_m: float) -> BoolArray:
 
 
 def _cell_area_m2(source: GridSource, tile: Tile) -> NDArray[np.float64]:
-    """Area of one cell in each row of a tile, square metres (on a sphere in latitude: good to 1 %)."""
+    """Area of one cell in each row of a tile, square metres.
+
+    On a sphere in latitude, good to 1 %; of a projected grid, that in its middle.
+    """
     rows = np.arange(tile.row0, tile.row1)
     area = np.full(len(rows), source.step_x_m * source.step_y_m)
     if source.is_geographic:
         _, lat_deg = source.lonlat_of(np.zeros(len(rows)), rows.astype(float))
         _, middle_deg = source.lonlat_of(0.0, (source.n_rows - 1) / 2)
-        area *= np.cos(np.radians(np.clip(lat_deg, -90, 90))) / np.cos(np.radians(middle_deg))
+        area = area * np.cos(np.radians(np.clip(lat_deg, -90, 90))) / np.cos(np.radians(middle_deg))
     return area
 
 

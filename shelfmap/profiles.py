@@ -165,7 +165,7 @@ def place_on(transects: Transects, at_m: FloatArray) -> tuple[FloatArray, FloatA
     Returns
     -------
     lon_deg, lat_deg : array of float, like `at_m`
-        Straight between nodes 10 km apart: within 2 cm of the geodesic. Beyond the last node, that node.
+        Straight between nodes, see `shelfmap.transects.NODE_M`. Beyond the last node, that node.
     """
     lon_deg, lat_deg = np.full(at_m.shape, np.nan), np.full(at_m.shape, np.nan)
     for k in range(len(transects)):

@@ -18,7 +18,8 @@ FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 BoolArray = NDArray[np.bool_]
 
-#: Chords of this length between points of a geodesic leave it by about 2 cm.
+#: Straight lines of this length in longitude and latitude leave a geodesic by at most 2.3 m at latitude 45, 8 at 75
+#: and 13 at 80 (measured): far below a cell.
 NODE_M: Final = 1e4
 #: No degree of latitude is shorter than this, metres.
 _LEAST_DEGREE_M: Final = 1.1e5

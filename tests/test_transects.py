@@ -1,5 +1,7 @@
 """Stations along a coast, and transects drawn by hand."""
 
+from itertools import pairwise
+
 import numpy as np
 import pytest
 import shapely
@@ -85,7 +87,7 @@ def test_pieces_cover_the_coast_once():
     coast = coast_of(([12, 11.9, 11.2, 10], [0, 0.2, -0.1, 0]))
     t = lay_transects(coast, TransectSettings(spacing_km=40), CoastSettings())
     pieces = [coast_piece(coast, t, row) for row in range(len(t))]
-    for one, after in zip(pieces[:-1], pieces[1:], strict=True):
+    for one, after in pairwise(pieces):
         np.testing.assert_allclose(one[-1], after[0], atol=1e-9)
     whole = np.concatenate([pieces[0], *[piece[1:] for piece in pieces[1:]]])
     np.testing.assert_allclose(whole[0], [12, 0], atol=1e-12)
@@ -171,7 +173,7 @@ def slow_nearest(coast, lon_deg, lat_deg):
 @settings(max_examples=50)
 @given(st.floats(10.0, 12.0), st.floats(59.0, 61.0))
 def test_nearest_coast_equals_a_search_of_points(lon_deg, lat_deg):
-    """At 60 N. Distances agree to 60 m: points are 30 m apart, and legs of 30 km bend by 20 m against a straight line."""
+    """At 60 N, to 60 m: points are 30 m apart, legs of 30 km bend by 20 m against straight ones."""
     coast = coast_of(([10, 10.5, 11.2, 12], [59.5, 60.2, 59.8, 60.4]), ([12, 11, 10], [59.2, 59.4, 59.1]))
     t = transects_from_lines(lines_of(([lon_deg, lon_deg], [lat_deg, lat_deg + 1])), None, coast, 2e5)
     line = coast.lines[t.coast_part[0] - 1]
