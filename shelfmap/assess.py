@@ -26,6 +26,8 @@ FEWEST_SHELF_SAMPLES: Final = 4.0
 HEAVIEST_CELL: Final = 0.05
 LARGEST_PERIOD_ERROR: Final = 0.15
 LARGEST_WIDTH_CHANGE: Final = 1.5
+#: A mode with less Q than this, friction counted, loses 99.8 % of its energy in a cycle: tuning means little there.
+LEAST_DAMPED_Q: Final = 1.0
 #: A basin this many times deeper than a sill seaward of it answers in its own way; this many times, it is shut off.
 LARGEST_SILL_RATIO: Final = 4.0
 SHUT_OFF_SILL_RATIO: Final = 16.0
@@ -104,6 +106,7 @@ def doubts(
     width_change: FloatArray,
     kernel_share: FloatArray,
     period_error: FloatArray,
+    damped_q: FloatArray,
 ) -> Iterator[Doubt]:
     """Go through the reasons to trust an index less, each with the transects it holds for.
 
@@ -119,6 +122,8 @@ def doubts(
         Largest share of one sample in the slowest period.
     period_error : (n,) array of float
         Standard deviation of the slowest period over that period.
+    damped_q : (n,) array of float
+        Q of the slowest mode with friction.
 
     Yields
     ------
@@ -135,7 +140,7 @@ def doubts(
     width_km, spread_km = breaks.break_m / 1e3, breaks.spread_m / 1e3
     with np.errstate(invalid="ignore"):
         cells = breaks.break_m / profiles.step_m
-        yield said("crosses a neighbour before the break"), crosses
+        yield said("crosses another transect before the break"), crosses
         yield (
             said("break found by {:.0%} of the thresholds and smoothings tried", breaks.found_share),
             breaks.found_share < LEAST_FOUND_SHARE,
@@ -157,7 +162,8 @@ def doubts(
         )
         on_shelf = profiles.distance_m[None, :] < np.nan_to_num(breaks.break_m)[:, None]
         gaps = (profiles.is_filled & on_shelf).sum(axis=1)
-        yield said("{:d} samples on the shelf bridged, filled or smoothed", gaps), gaps > 0
+        yield said("samples on the shelf bridged, filled or smoothed: {:d}", gaps), gaps > 0
+        yield said("friction all but stops mode 1, Q {:.1f}", damped_q), damped_q < LEAST_DAMPED_Q
         sill = sill_ratio(profiles, breaks)
         yield said("basin {:.0f} times deeper than the sill before it", sill), sill > LARGEST_SILL_RATIO
         yield said("that sill all but shuts it off"), sill > SHUT_OFF_SILL_RATIO

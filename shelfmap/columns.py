@@ -167,8 +167,8 @@ _TABLE: Final[tuple[tuple[str, tuple[str, ...], tuple[_Row, ...]], ...]] = (
          "The transect has no seaward end: see status."),
     )),
     ("transects", _TRANSECTS, (
-        ("crosses", "bool", "", "Crosses a neighbour",
-         "Whether it crosses a neighbouring transect before the break.", ""),
+        ("crosses", "bool", "", "Crosses another",
+         "Whether it crosses another transect of the same stretch of coast before the break.", ""),
     )),
     ("shelfbreak", _BREAKS, (
         ("lon_deg", "float64", "deg", "Longitude of the break", "Longitude of the shelf break.", ""),

@@ -66,7 +66,8 @@ def write_geotiff(  # noqa: PLR0913 - a raster's place is five numbers, and each
     Raises
     ------
     GridError
-        If the array, the cell sides, `nodata` or `crs` cannot be stored, or the file cannot be written; an earlier file is then left as it was.
+        If the array, the cell sides, `nodata` or `crs` cannot be stored, or the file cannot be written; an earlier
+        file is then left as it was.
     OutputExistsError
         If the file exists and `overwrite` is off.
 

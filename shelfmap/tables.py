@@ -264,7 +264,8 @@ def _remark_columns(
     holds_index = screened.status == "ok"
     error = modes.period_sd_s / modes.node_period_s[:, 0]
     change = _width_change(screened.transects, np.where(holds_index, screened.breaks.break_m, np.nan))
-    for text, holds in doubts(profiles, screened.breaks, crosses, change, modes.kernel_peak_share, error):
+    doubtful = doubts(profiles, screened.breaks, crosses, change, modes.kernel_peak_share, error, modes.damped_q[:, 0])
+    for text, holds in doubtful:
         for row in np.flatnonzero(holds & holds_index):
             remarks[row].append(text[row])
         n_doubts += holds

@@ -80,8 +80,8 @@ def test_gains_need_a_break_or_the_open_ocean():
     assert not usable(statuses(profiles, breaks, OCEAN_M), profiles, OCEAN_M).any()
 
 
-def remarks(profiles, breaks, crosses=False, width_change=1.0, kernel_share=0.01, period_error=0.01):
-    given = [np.array([value]) for value in (crosses, width_change, kernel_share, period_error)]
+def remarks(profiles, breaks, crosses=False, width_change=1.0, kernel_share=0.01, period_error=0.01, damped_q=4.0):
+    given = [np.array([value]) for value in (crosses, width_change, kernel_share, period_error, damped_q)]
     return [text[0] for text, holds in doubts(profiles, breaks, *given) if holds[0]]
 
 
@@ -92,10 +92,11 @@ def test_a_clear_straight_shelf_raises_no_doubt():
 @pytest.mark.parametrize(
     ("change", "remark"),
     [
-        ({"crosses": True}, "crosses a neighbour before the break"),
+        ({"crosses": True}, "crosses another transect before the break"),
         ({"width_change": 1.6}, "shelf width changes 1.6-fold to a neighbour"),
         ({"kernel_share": 0.06}, "one sample holds 6% of the period"),
         ({"period_error": 0.2}, "period known to 20% only"),
+        ({"damped_q": 0.9}, "friction all but stops mode 1, Q 0.9"),
     ],
 )
 def test_doubts_of_the_surroundings(change, remark):
@@ -122,7 +123,7 @@ def test_doubts_of_the_profile():
     filled = profiles.is_filled.copy()
     filled[0, 58:63] = True  # two on the shelf, three beyond
     assert remarks(replace(profiles, is_filled=filled), breaks) == [
-        "2 samples on the shelf bridged, filled or smoothed"
+        "samples on the shelf bridged, filled or smoothed: 2"
     ]
     assert remarks(*one(SHELF, 60e3, start="open_water")) == ["starts in open water, off a bridged inlet"]
 
