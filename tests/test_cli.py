@@ -133,7 +133,7 @@ def test_coast_and_transects_print_their_paths(coast_toml, tmp_path, monkeypatch
     monkeypatch.chdir(tmp_path)
     result = run("coast", "coast.toml")
     assert result.stdout == "coast_lines.gpkg\n"
-    assert result.stderr.startswith("1 stretches of coast, 30")
+    assert result.stderr.startswith("1 stretches of coast, 291 km in all: shoreline at 0 m")
     result = run("transects", "coast.toml", "--output", tmp_path / "t.gpkg")
     assert result.stdout == f"{tmp_path / 't.gpkg'}\n"
     assert result.stderr == "15 transects, sampled every 4.27 km\n"
@@ -220,7 +220,7 @@ def test_grid_without_coordinate_system(tmp_path):
     [
         (100.0, "grid.positive"),
         (-100.0, "no shoreline"),
-        (-32768.0, "missing"),
+        (-32768.0, "no water body"),
         (np.where(np.arange(20) < 1, -5.0, 50.0), "no water body of at least 2000 km2"),
     ],
     ids=["all land", "all water", "all missing", "no sea"],
@@ -266,7 +266,7 @@ def test_read_only_folder_is_refused(coast_toml):
 
 def test_read_only_folder_is_refused_as_the_system_says(coast_toml, monkeypatch):
     """The same where tests run as root, who may write anywhere: only the system's answer is made up."""
-    monkeypatch.setattr("shelfmap.replacement.os.access", lambda *_: False)
+    monkeypatch.setattr("shelfmap.replacement.os.access", lambda _path, mode: mode != os.W_OK)
     assert "is read-only; write to another folder" in sentence(run("screen", coast_toml, code=1))
 
 
