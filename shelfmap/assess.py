@@ -6,10 +6,11 @@ from typing import Any, Final
 import numpy as np
 from numpy.typing import NDArray
 
+from shelfmap.index import Q_STOPPED
 from shelfmap.profiles import END_REASONS, START_REASONS, Profiles
 from shelfmap.shelfbreak import ShelfBreaks
 
-__all__ = ["LEAST_SAMPLES", "Doubt", "confidences", "doubts", "sill_ratio", "statuses", "usable"]
+__all__ = ["LEAST_SAMPLES", "Doubt", "confidences", "doubts", "sills", "statuses", "usable"]
 
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
@@ -26,11 +27,9 @@ FEWEST_SHELF_SAMPLES: Final = 4.0
 HEAVIEST_CELL: Final = 0.05
 LARGEST_PERIOD_ERROR: Final = 0.15
 LARGEST_WIDTH_CHANGE: Final = 1.5
-#: A mode with less Q than this, friction counted, loses 99.8 % of its energy in a cycle: tuning means little there.
-LEAST_DAMPED_Q: Final = 1.0
 #: A basin this many times deeper than a sill seaward of it answers in its own way; this many times, it is shut off.
-LARGEST_SILL_RATIO: Final = 4.0
-SHUT_OFF_SILL_RATIO: Final = 16.0
+SILL_RATIO: Final = 4.0
+SHUT_OFF_RATIO: Final = 16.0
 #: Water shallower than this, behind a bar, is no basin, metres.
 LEAST_BASIN_M: Final = 20.0
 
@@ -47,7 +46,7 @@ def statuses(profiles: Profiles, breaks: ShelfBreaks, ocean_m: float) -> TextArr
         Results of the stages, n transects.
     ocean_m : float
         A transect that gets this deep has reached the open ocean, metres: land, the grid's edge or missing depth
-        beyond count no more.
+        beyond count no more. A sill before the break, 16 times shallower than a basin behind it, counts as land.
 
     Returns
     -------
@@ -64,6 +63,9 @@ def statuses(profiles: Profiles, breaks: ShelfBreaks, ocean_m: float) -> TextArr
     closed = np.isin(end, ["facing_land", "island"]) & ~reached_ocean
     cut = ~has_break & ~reached_ocean & np.isin(end, ["edge_of_grid", "void"])
     out[closed | cut] = end[closed | cut]
+    basin_m, sill_m = sills(profiles, breaks)
+    with np.errstate(invalid="ignore"):
+        out[(out == "ok") & (basin_m > SHUT_OFF_RATIO * sill_m)] = "island"
     short = profiles.n_samples < LEAST_SAMPLES
     out[short] = np.where(end[short] == "search_length", "too_short", end[short])
     for reason in ("not_sea", "edge_of_grid", "void"):
@@ -77,8 +79,8 @@ def usable(status: TextArray, profiles: Profiles, ocean_m: float) -> BoolArray:
     return np.asarray((status == "ok") | ((status == "no_break") & deep))
 
 
-def sill_ratio(profiles: Profiles, breaks: ShelfBreaks) -> FloatArray:
-    """How much deeper a basin on each shelf is than the shallowest sill between it and the break.
+def sills(profiles: Profiles, breaks: ShelfBreaks) -> tuple[FloatArray, FloatArray]:
+    """The basin on each shelf that is deepest for the sill between it and the break, and that sill.
 
     Parameters
     ----------
@@ -87,16 +89,16 @@ def sill_ratio(profiles: Profiles, breaks: ShelfBreaks) -> FloatArray:
 
     Returns
     -------
-    (n,) array of float
-        Largest ratio of the depth of a sample of at least 20 m to that of one seaward of it, before the break; 1
-        where the shelf only deepens, NaN without a break.
+    basin_m, sill_m : (n,) array of float
+        Depths of a sample of at least 20 m, and of one seaward of it but before the break, whose ratio is largest;
+        equal where the shelf only deepens, NaN without a break or a basin.
     """
-    has_break = np.isfinite(breaks.break_m)
     on_shelf = profiles.distance_m[None, :] <= np.nan_to_num(breaks.break_m, nan=-1.0)[:, None]
     depth_m = np.where(on_shelf & (profiles.depth_m > 0), profiles.depth_m, np.nan)
     basin_m = np.fmax.accumulate(np.where(depth_m >= LEAST_BASIN_M, depth_m, np.nan), axis=1)
-    ratio = np.fmax.reduce(basin_m / depth_m, axis=1, initial=1.0)
-    return np.where(has_break, ratio, np.nan)
+    worst = np.argmax(np.nan_to_num(basin_m / depth_m, nan=0.0), axis=1)
+    rows = np.arange(len(worst))
+    return basin_m[rows, worst], np.where(np.isnan(basin_m[rows, worst]), np.nan, depth_m[rows, worst])
 
 
 def doubts(
@@ -134,8 +136,8 @@ def doubts(
     """
     n = len(profiles.n_samples)
 
-    def said(text: str, values: NDArray[Any] | None = None) -> TextArray:
-        return np.array([text if values is None else text.format(values[k]) for k in range(n)], dtype=object)
+    def said(text: str, *values: NDArray[Any]) -> TextArray:
+        return np.array([text.format(*(column[k] for column in values)) for k in range(n)], dtype=object)
 
     width_km, spread_km = breaks.break_m / 1e3, breaks.spread_m / 1e3
     with np.errstate(invalid="ignore"):
@@ -155,7 +157,7 @@ def doubts(
             said("one sample holds {:.0%} of the period", kernel_share),
             (kernel_share > HEAVIEST_CELL) & (kernel_share * np.maximum(cells, FEWEST_SHELF_SAMPLES) > 3.0),
         )
-        yield said("period known to {:.0%} only", period_error), period_error > LARGEST_PERIOD_ERROR
+        yield said("period uncertain by {:.0%}", period_error), period_error > LARGEST_PERIOD_ERROR
         yield (
             said("shelf width changes {:.1f}-fold to a neighbour", width_change),
             width_change > LARGEST_WIDTH_CHANGE,
@@ -163,10 +165,9 @@ def doubts(
         on_shelf = profiles.distance_m[None, :] < np.nan_to_num(breaks.break_m)[:, None]
         gaps = (profiles.is_filled & on_shelf).sum(axis=1)
         yield said("samples on the shelf bridged, filled or smoothed: {:d}", gaps), gaps > 0
-        yield said("friction all but stops mode 1, Q {:.1f}", damped_q), damped_q < LEAST_DAMPED_Q
-        sill = sill_ratio(profiles, breaks)
-        yield said("basin {:.0f} times deeper than the sill before it", sill), sill > LARGEST_SILL_RATIO
-        yield said("that sill all but shuts it off"), sill > SHUT_OFF_SILL_RATIO
+        yield said("friction all but stops mode 1, Q {:.1f}", damped_q), damped_q < Q_STOPPED
+        basin_m, sill_m = sills(profiles, breaks)
+        yield said("basin of {:.0f} m behind a sill of {:.1f} m", basin_m, sill_m), basin_m > SILL_RATIO * sill_m
         in_water = profiles.start_reason == START_REASONS.index("open_water")
         yield said("starts in open water, off a bridged inlet"), in_water
 

@@ -155,14 +155,14 @@ def demo(folder: Path, overwrite: bool, workers: int, as_json: bool) -> None:
 
 @main.command(epilog="Example: shelfmap coast coast.toml --output coast_lines.gpkg")
 @_settings_file
-@_output("coast_lines.gpkg")
+@_output("coast_lines.gpkg beside the settings")
 @_overwrite
 @_spoken
 def coast(settings_file: Path, output: Path | None, overwrite: bool) -> None:
     """Write the generalised coast, to edit in a GIS and give back as coast.file."""
     from shelfmap.pipeline import write_coast
 
-    path = output or Path("coast_lines.gpkg")
+    path = output or settings_file.with_name("coast_lines.gpkg")
     traced = write_coast(_read(settings_file), path, overwrite=overwrite)
     length_km = sum(line.length_m for line in traced.lines) / 1e3
     _say(f"{len(traced.lines)} stretches of coast, {length_km:.0f} km in all: {traced.source}")
@@ -171,14 +171,14 @@ def coast(settings_file: Path, output: Path | None, overwrite: bool) -> None:
 
 @main.command(epilog="Example: shelfmap transects coast.toml --output transect_lines.gpkg")
 @_settings_file
-@_output("transect_lines.gpkg")
+@_output("transect_lines.gpkg beside the settings")
 @_overwrite
 @_spoken
 def transects(settings_file: Path, output: Path | None, overwrite: bool) -> None:
     """Write the transects, to edit in a GIS and give back as transects.file."""
     from shelfmap.pipeline import write_transects
 
-    path = output or Path("transect_lines.gpkg")
+    path = output or settings_file.with_name("transect_lines.gpkg")
     profiles = write_transects(_read(settings_file), path, overwrite=overwrite)
     _say(f"{len(profiles.n_samples)} transects, sampled every {profiles.step_m / 1e3:.2f} km")
     click.echo(path)

@@ -29,6 +29,8 @@ Geometries = NDArray[np.object_]
 
 #: Round joins of the closing use this many segments a quarter circle: chords stay within 0.5 % of the radius.
 QUARTER_SEGMENTS = 8
+#: Seams between tiles lie off the cells by this much of one: a coast along the cells would lie on both sides of them.
+SEAM_CELLS = 0.3719
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -109,7 +111,8 @@ def trace_coast(source: GridSource, settings: CoastSettings, land: Geometries | 
     if not len(basins.areas_m2):
         raise CoastError(
             f"{source.path}: no water body of at least {settings.smallest_sea_km2:g} km2 in this region; "
-            "check the sign (grid.positive), the level (grid.level_shift_m) and coast.smallest_sea_km2"
+            "check that it holds depths here, their sign (grid.positive), the level (grid.level_shift_m) and "
+            "coast.smallest_sea_km2"
         )
     tracer = _Tracer(source, settings, basins, land)
     pieces: list[FloatArray] = []
@@ -296,16 +299,12 @@ class _Tracer:
                 col = col + source.n_cols * np.round((middle - col) / source.n_cols)
             return np.stack([col, row], axis=1)
 
+        west, east = tile.col0 - SEAM_CELLS, tile.col1 - SEAM_CELLS
+        south, north = tile.row0 - SEAM_CELLS, tile.row1 - SEAM_CELLS
         # the edge of the grid is no coast: stay off it by three quarters of a cell
-        west, east = (
-            (tile.col0, tile.col1)
-            if self.basins.tiling.closes
-            else (
-                max(tile.col0, region.col0 + 0.75),
-                min(tile.col1, region.col1 - 1.75),
-            )
-        )
-        south, north = max(tile.row0, region.row0 + 0.75), min(tile.row1, region.row1 - 1.75)
+        south, north = max(south, region.row0 + 0.75), min(north, region.row1 - 1.75)
+        if not self.basins.tiling.closes:
+            west, east = max(west, region.col0 + 0.75), min(east, region.col1 - 1.75)
         clipped = shapely.clip_by_rect(shapely.transform(rings, to_index), west, south, east, north)
         parts = shapely.get_parts(clipped[~shapely.is_empty(clipped)])
         return [shapely.get_coordinates(part) for part in parts if shapely.get_type_id(part) == 1]

@@ -5,7 +5,8 @@ Inside, rows run from south to north and columns from west to east, `depth_m` is
 (col, row) is a float that is 0 at the centre of the south-west cell.
 """
 
-from collections.abc import Iterable, Iterator
+import logging
+from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import dataclass, replace
 from typing import Any, Final
 
@@ -20,6 +21,8 @@ from shelfmap.settings import GridSettings
 from shelfmap.vertical import Positive, check_unit, datum_words, decide_positive
 
 __all__ = ["FARTHEST_VALUE_M", "INSIDE", "OUTSIDE", "VOID", "Grid", "GridSource", "open_grid"]
+
+_LOG = logging.getLogger(__name__)
 
 FloatArray = NDArray[np.float64]
 StateArray = NDArray[np.uint8]
@@ -344,6 +347,8 @@ def open_grid(settings: GridSettings) -> GridSource:
     positive, why = settings.positive, "set by grid.positive"
     if positive == "auto":
         positive, why = decide_positive(header.vertical, lowest, highest, name)
+    else:
+        why += _objection(positive, header.vertical, lowest, highest)
     return replace(
         as_stored,
         positive=positive,
@@ -351,6 +356,18 @@ def open_grid(settings: GridSettings) -> GridSource:
         level_shift_m=settings.level_shift_m,
         void_is_land=settings.void_is_land,
     )
+
+
+def _objection(positive: Positive, texts: Mapping[str, str], lowest: float, highest: float) -> str:
+    """What speaks against the sign that was set; empty where nothing does."""
+    try:
+        other, why = decide_positive(texts, lowest, highest, "")
+    except GridError:
+        return ""
+    if other == positive:
+        return ""
+    _LOG.warning("grid.positive = %r, although %s speaks for %r: look at the range of elevations", positive, why, other)
+    return f", although {why} speaks for {other}"
 
 
 def _source_of(header: RasterHeader) -> GridSource:

@@ -8,7 +8,7 @@ from numpy.typing import ArrayLike, NDArray
 
 from shelfmap.errors import ResponseError
 
-__all__ = ["INDEX_CLASSES", "Q_OVERDAMPED", "ResonanceIndex", "index_class", "resonance_index"]
+__all__ = ["INDEX_CLASSES", "Q_OVERDAMPED", "Q_STOPPED", "ResonanceIndex", "index_class", "resonance_index"]
 
 IntArray = NDArray[np.int64]
 FloatArray = NDArray[np.float64]
@@ -16,7 +16,10 @@ FloatArray = NDArray[np.float64]
 #: Lower bound of each class of the index, and its name.
 INDEX_CLASSES: Final = ((0.0, "none"), (0.05, "low"), (0.2, "moderate"), (0.4, "high"), (0.7, "very high"))
 
+#: Below this a mode leaks so fast that it does not swing.
 Q_OVERDAMPED: Final = 0.5
+#: Below this, friction counted, a mode loses 99.8 % of its energy in a cycle: there is nothing to tune.
+Q_STOPPED: Final = 1.0
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -43,7 +46,7 @@ class ResonanceIndex:
             getattr(self, field.name).setflags(write=False)
 
 
-def resonance_index(omega_rad_s: ArrayLike, pole_rad_s: ArrayLike) -> ResonanceIndex:
+def resonance_index(omega_rad_s: ArrayLike, pole_rad_s: ArrayLike, damped_q: ArrayLike | None = None) -> ResonanceIndex:
     """Resonance index of each transect at each wave.
 
     Parameters
@@ -52,12 +55,14 @@ def resonance_index(omega_rad_s: ArrayLike, pole_rad_s: ArrayLike) -> ResonanceI
         Angular frequencies of the waves, rad/s, > 0.
     pole_rad_s : (n, k) array_like of complex
         Frictionless poles of the modes of each transect (`ShelfModes.pole_rad_s`), rad/s.
+    damped_q : (n, k) array_like of float, optional
+        Q of the same modes with friction; NaN where not known.
 
     Returns
     -------
     ResonanceIndex
         One row per transect, one column per wave. Modes without a pole and overdamped ones (Q < 0.5) are left
-        out; NaN where none is left.
+        out, and so are those that friction all but stops (damped Q < 1); NaN where none is left.
 
     Raises
     ------
@@ -93,6 +98,8 @@ def resonance_index(omega_rad_s: ArrayLike, pole_rad_s: ArrayLike) -> ResonanceI
     natural = np.where(valid, pole.real, np.nan)
     q = natural / (2.0 * np.abs(np.where(valid, pole.imag, np.nan)))
     q[q < Q_OVERDAMPED] = np.nan
+    if damped_q is not None:
+        q[np.asarray(damped_q, dtype=float) < Q_STOPPED] = np.nan
     y = omega[None, :, None] / natural[:, None, :]
     tuning = 1.0 / (1.0 + (q[:, None, :] * (y - 1.0 / y)) ** 2)
     strength = np.broadcast_to((1.0 / np.cosh(np.pi / (4.0 * q)) ** 2)[:, None, :], tuning.shape)

@@ -1,5 +1,6 @@
 """What a user may draw instead of having it computed: the coast, the transects, the shelf breaks."""
 
+import logging
 from typing import Any, Final
 
 import numpy as np
@@ -15,6 +16,8 @@ from shelfmap.settings import Settings
 from shelfmap.transects import Transects, lay_transects, transects_from_lines
 
 __all__ = ["make_coast", "make_transects", "picked_breaks"]
+
+_LOG = logging.getLogger(__name__)
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -119,6 +122,8 @@ def _seaward(source: GridSource, coast: Coast, lines: Geometries) -> Geometries:
     away = shapely.distance(shapely.points(lon_deg, ends[:, 1]), shore)
     with np.errstate(invalid="ignore"):
         backward = (depth_m[::2] - depth_m[1::2] > BACKWARD_FALL_M) & (away[::2] > away[1::2])
+    if backward.any():
+        _LOG.warning("%d of the transects drawn ran from the sea to the shore and were turned round", backward.sum())
     out = lines.copy()
     out[backward] = shapely.reverse(lines[backward])
     return out
@@ -159,7 +164,7 @@ def picked_breaks(settings: Settings, transect_id: IntArray) -> Geometries:
     strangers = sorted({str(number) for number in ids if number not in known})
     if strangers:
         raise SettingsError(
-            f"{data.path}: transect_id {', '.join(strangers[:5])} belong(s) to no transect of this run; "
+            f"{data.path}: no transect of this run has transect_id {', '.join(strangers[:5])}; "
             "delete or mend these points, or give the transects they were picked on as transects.file"
         )
     for number, point in zip(ids, points, strict=True):

@@ -17,10 +17,11 @@ from numpy.typing import NDArray
 
 from shelfmap.coast import Coast
 from shelfmap.errors import LayerError, SettingsError, ShelfmapError, ShelfmapWarning
+from shelfmap.geodesy import distance_bearing
 from shelfmap.grid import GridSource, open_grid
 from shelfmap.inputs import make_coast, make_transects, picked_breaks
 from shelfmap.layers import Layer, write_layers
-from shelfmap.profiles import START_REASONS, Profiles, place_on, step_of
+from shelfmap.profiles import END_REASONS, START_REASONS, Profiles, place_on, step_of
 from shelfmap.provenance import run_layer, status_counts
 from shelfmap.replacement import check_target
 from shelfmap.sections import Section, sample_section, screen_section, stack
@@ -37,6 +38,9 @@ Progress = Callable[[str, int, int], None]
 SECTION_STATIONS: Final = 64
 #: Lines to be edited begin this far landward of the shoreline, metres, so that they meet it when they come back.
 SETBACK_M: Final = 10.0
+
+#: A grid with fewer cells than this in `generalise_km` gives bearings that follow the steps of its shoreline.
+FEWEST_COAST_CELLS: Final = 4.0
 
 _LOG = logging.getLogger(__name__)
 
@@ -58,7 +62,6 @@ class Run:
 
     def summary(self) -> dict[str, Any]:
         """Counts and totals of the run, ready for JSON."""
-        index = self.screened.index.index
         return {
             "path": str(self.path),
             "transects": len(self.screened.status),
@@ -66,7 +69,6 @@ class Run:
             "coast_parts": len(self.coast.lines),
             "coast_km": round(_length_km(self.coast), 1),
             "step_km": round(self.step_m / 1e3, 3),
-            "index_max": round(float(np.nanmax(index)), 3) if np.isfinite(index).any() else None,
             "positive": f"{self.source.positive} ({self.source.positive_why})",
         }
 
@@ -109,17 +111,18 @@ def screen(
     Warns
     -----
     ShelfmapWarning
-        If breaks picked by hand lie beyond the depths of their transects; they are not used.
+        If breaks picked by hand lie beyond the depths of their transects, and are not used, or off their lines.
     """
     _check_output(settings, settings.output.path, overwrite=overwrite)
     source = open_grid(settings.grid)
     _LOG.info("values of %s taken as %s: %s", source.path, source.positive, source.positive_why)
+    _warn_of_coarse_cells(source, settings)
     coast = make_coast(source, settings)
     _LOG.info("coast: %d stretches, %.0f km, %s", len(coast.lines), _length_km(coast), coast.source)
     transects = make_transects(source, coast, settings)
     sections = _sections(source, coast, transects, settings)
     screened = _screen_sections(sections, workers, executor, progress)
-    _warn_of_picks_unused(sections, screened)
+    _warn_of_picks(sections, screened)
     run = Run(
         path=settings.output.path,
         source=source,
@@ -279,27 +282,58 @@ def _mapping(workers: int, executor: Executor | None) -> Iterator[Callable[..., 
         ) from error
 
 
-def _warn_of_picks_unused(sections: Sequence[Section], screened: Screened) -> None:
-    is_given = np.concatenate([[pick is not None for pick in section.picks] for section in sections]).astype(bool)
-    unused = screened.transects.transect_id[is_given & ~screened.breaks.is_picked]
-    if len(unused):
-        some = ", ".join(map(str, unused[:10])) + ", ..." * (len(unused) > 10)
+def _warn_of_coarse_cells(source: GridSource, settings: Settings) -> None:
+    """Say where the grid is too coarse for the scale of the coast asked for."""
+    cells = settings.coast.generalise_m / source.step_m
+    if settings.transects.file is None and cells < FEWEST_COAST_CELLS:
+        _LOG.warning(
+            "coast.generalise_km = %g is %.1f cells of this grid: bearings follow its steps, less so from %.0f on",
+            settings.coast.generalise_km,
+            cells,
+            np.ceil(FEWEST_COAST_CELLS * source.step_m / 1e3),
+        )
+
+
+def _warn_of_picks(sections: Sequence[Section], screened: Screened) -> None:
+    """Say which breaks picked by hand could not be used, and which lie off their transects."""
+    picks = np.concatenate([section.picks for section in sections])
+    is_given = np.array([pick is not None for pick in picks], dtype=bool)
+    ids, is_used = screened.transects.transect_id, screened.breaks.is_picked
+    if (is_given & ~is_used).any():
         warnings.warn(
-            f"breaks picked for transect_id {some} lie beyond the depths of these transects and are not used; "
-            "move them between shore and end",
+            f"breaks picked for transect_id {_some(ids[is_given & ~is_used])} lie beyond the depths of these transects "
+            "and are not used; move them between shore and end",
+            ShelfmapWarning,
+            stacklevel=3,
+        )
+    lon_deg, lat_deg = place_on(screened.transects, screened.profiles.shore_m + screened.breaks.break_m)
+    rows = np.flatnonzero(is_used)
+    off_m, _ = distance_bearing(lon_deg[rows], lat_deg[rows], shapely.get_x(picks[rows]), shapely.get_y(picks[rows]))
+    far = rows[off_m > 2 * screened.profiles.step_m]
+    if len(far):
+        warnings.warn(
+            f"breaks picked for transect_id {_some(ids[far])} lie up to {off_m.max() / 1e3:.1f} km off their lines; "
+            "the nearest places on these are used",
             ShelfmapWarning,
             stacklevel=3,
         )
 
 
+def _some(ids: NDArray[np.int64]) -> str:
+    return ", ".join(map(str, ids[:10])) + ", ..." * (len(ids) > 10)
+
+
 def _lines_to_edit(transects: Transects, profiles: Profiles) -> NDArray[np.object_]:
     """Line of each transect that comes back as the same transect: from just landward of its shore to past its end.
 
-    What a profile ends at (land, missing depth, the grid's edge) lies on the line too, else it would be forgotten.
+    What a profile ends at (land, missing depth, the grid's edge) lies on the line too, else it would be forgotten;
+    one that ends at the search length ends there.
     """
     at_shore = profiles.start_reason == START_REASONS.index("shore")
     start_m = np.nan_to_num(profiles.shore_m) - SETBACK_M * at_shore
-    stop_m = np.nan_to_num(profiles.shore_m) + (profiles.n_samples + 0.5) * profiles.step_m
+    searched = profiles.end_reason == END_REASONS.index("search_length")
+    past = np.where(searched, -0.9, 0.5)  # steps past the last sample, less one
+    stop_m = np.nan_to_num(profiles.shore_m) + (profiles.n_samples + past) * profiles.step_m
     start_m = np.maximum(start_m, np.nanmin(transects.node_m, axis=1))
     stop_m = np.minimum(stop_m, np.nanmax(transects.node_m, axis=1))
     lines = []

@@ -87,7 +87,8 @@ def screen_section(section: Section) -> Screened:
     modes = _modes(section, rows, breaks.spread_m)
     omega_rad_s = 2 * np.pi / (np.array([wave.period_h for wave in waves_of(settings)]) * 3600)
     waves = wave_response(*rows, omega_rad_s, friction=_friction(settings))
-    index = resonance_index(omega_rad_s, np.where((status == "ok")[:, None], modes.pole_rad_s, np.nan))
+    pole_rad_s = np.where((status == "ok")[:, None], modes.pole_rad_s, np.nan)
+    index = resonance_index(omega_rad_s, pole_rad_s, modes.damped_q)
     return Screened(
         transects=section.transects,
         profiles=profiles,

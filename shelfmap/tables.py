@@ -1,5 +1,6 @@
 """Stage results of all transects, put into the columns of the column table: units turned, remarks written."""
 
+from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import Any
 
@@ -7,10 +8,11 @@ import numpy as np
 import shapely
 from numpy.typing import NDArray
 
-from shelfmap.assess import confidences, doubts
+from shelfmap.assess import SHUT_OFF_RATIO, confidences, doubts, sills
 from shelfmap.coast import Coast
 from shelfmap.columns import columns_of
 from shelfmap.constants import CONSTITUENTS
+from shelfmap.geodesy import unwrap_lon_deg
 from shelfmap.index import ResonanceIndex, index_class
 from shelfmap.layers import Layer
 from shelfmap.profiles import END_REASONS, Profiles, place_on
@@ -161,7 +163,7 @@ def transect_columns(transects: Transects, profiles: Profiles) -> Columns:
         "transect_id": transects.transect_id,
         "coast_part": _nullable(transects.coast_part, transects.coast_part < 1),
         "coast_km": transects.coast_m / 1e3,
-        "lon_deg": np.where(no_shore, transects.lon_deg, profiles.shore_lon_deg),
+        "lon_deg": unwrap_lon_deg(np.where(no_shore, transects.lon_deg, profiles.shore_lon_deg), 0.0),
         "lat_deg": np.where(no_shore, transects.lat_deg, profiles.shore_lat_deg),
         "bearing_deg": transects.bearing_deg,
         "search_km": np.nanmax(transects.node_m, axis=1) / 1e3,
@@ -195,7 +197,7 @@ def _break_columns(screened: Screened, break_lon: FloatArray, break_lat: FloatAr
     area_m2 = (depth_m.sum(axis=1) - 0.5 * (depth_m[:, 0] + depth_m[rows, last])) * profiles.step_m
     area_m2 += 0.5 * (depth_m[rows, last] + breaks.depth_m) * (breaks.break_m - last * profiles.step_m)
     return {
-        "break_lon_deg": break_lon,
+        "break_lon_deg": unwrap_lon_deg(break_lon, 0.0),
         "break_lat_deg": break_lat,
         "shelf_width_km": breaks.break_m / 1e3,
         "break_depth_m": breaks.depth_m,
@@ -271,16 +273,40 @@ def _remark_columns(
         n_doubts += holds
     computed = np.isfinite(screened.outer_depth_m)
     slow = screened.waves.below_inertial & computed[:, None]
+    for missed, reason in _why_not(screened):
+        remarks[missed].append(reason)
     for row in np.flatnonzero(slow.any(axis=1)):
         names = [wave.name or f"{wave.period_h:g} h" for wave, is_slow in zip(waves, slow[row], strict=True) if is_slow]
-        remarks[row].append(f"below_inertial: {', '.join(names)}")
+        remarks[row].append(f"below_inertial (slower than the inertial period): {', '.join(names)}")
     for row in np.flatnonzero(holds_index & (modes.q[:, 0] < 0.5)):
         remarks[row].append("mode 1 is overdamped")
     for row in np.flatnonzero(screened.is_stepped & computed):
         deepest_m = np.nanmax(profiles.depth_m[row])
-        remarks[row].append(f"deepest {deepest_m:.0f} m, stepped to {screened.outer_depth_m[row]:.0f} m")
+        remarks[row].append(
+            f"profile ends at {deepest_m:.0f} m, sea beyond taken as {screened.outer_depth_m[row]:.0f} m"
+        )
     notes = np.array(["; ".join(parts) or None for parts in remarks], dtype=object)
     return {"note": notes, "confidence": confidences(has_index, n_doubts)}
+
+
+def _why_not(screened: Screened) -> Iterator[tuple[int, str]]:
+    """Rows without an index, and where and how their transects end."""
+    profiles = screened.profiles
+    basin_m, sill_m = sills(profiles, screened.breaks)
+    for row in np.flatnonzero((screened.status != "ok") & (profiles.n_samples > 0)).tolist():
+        km, depth_m = profiles.length_m[row] / 1e3, profiles.depth_m[row, profiles.n_samples[row] - 1]
+        status = screened.status[row]
+        searched = profiles.end_reason[row] == END_REASONS.index("search_length")
+        if status == "no_break" and searched and np.isnan(screened.outer_depth_m[row]):
+            yield row, f"search ended {km:.0f} km out in {depth_m:.0f} m of water: raise transects.length_km"
+        elif status == "edge_of_grid":
+            yield row, f"grid ends {km:.0f} km out in {depth_m:.0f} m of water"
+        elif status == "void":
+            yield row, f"depths are missing {km:.0f} km out"
+        elif status == "island" and basin_m[row] > SHUT_OFF_RATIO * sill_m[row]:
+            yield row, f"basin of {basin_m[row]:.0f} m behind a sill of {sill_m[row]:.1f} m"
+        elif status in {"facing_land", "island"}:
+            yield row, f"land {km:.0f} km out"
 
 
 def _width_change(transects: Transects, width_m: FloatArray) -> FloatArray:
@@ -305,7 +331,7 @@ def _profile_layer(screened: Screened) -> Layer:
         columns={
             "transect_id": profiles.transect_id[row],
             "distance_km": profiles.distance_m[sample] / 1e3,
-            "lon_deg": lon_deg[wet],
+            "lon_deg": unwrap_lon_deg(lon_deg[wet], 0.0),
             "lat_deg": lat_deg[wet],
             "depth_m": profiles.depth_m[wet],
             "filled": profiles.is_filled[wet],

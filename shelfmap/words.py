@@ -30,10 +30,10 @@ CAUTIONS: Final = (
 )
 
 STATUSES: Final[Mapping[str, str]] = MappingProxyType({
-    "ok": "A shelf with a break, facing the open sea: all results hold.",
+    "ok": "A shelf with a break, facing the open sea: confidence and note say how good its results are.",
     "no_break": "No shelf break was found; results that need one are empty.",
     "facing_land": "The transect meets land on the other side: a gulf or strait, not a shelf.",
-    "island": "Land stands in the transect before the break: 1-D physics does not hold there.",
+    "island": "Land, or a bank that all but shuts off the water behind, stands in the transect: no open shelf.",
     "edge_of_grid": "The grid ends before a break or the deep sea is reached: take a larger grid.",
     "void": "Depths are missing over too long a stretch of the transect.",
     "too_short": "The transect holds too few wet samples to compute anything.",

@@ -8,7 +8,7 @@ from utils_shelfbreak import bent, profiles_of
 
 from shelfmap import words
 from shelfmap._kernels import tracing
-from shelfmap.assess import LEAST_SAMPLES, confidences, doubts, sill_ratio, statuses, usable
+from shelfmap.assess import LEAST_SAMPLES, confidences, doubts, sills, statuses, usable
 from shelfmap.profiles import END_REASONS, START_REASONS
 from shelfmap.settings import ShelfBreakSettings
 from shelfmap.shelfbreak import measure_picked_breaks
@@ -95,7 +95,7 @@ def test_a_clear_straight_shelf_raises_no_doubt():
         ({"crosses": True}, "crosses another transect before the break"),
         ({"width_change": 1.6}, "shelf width changes 1.6-fold to a neighbour"),
         ({"kernel_share": 0.06}, "one sample holds 6% of the period"),
-        ({"period_error": 0.2}, "period known to 20% only"),
+        ({"period_error": 0.2}, "period uncertain by 20%"),
         ({"damped_q": 0.9}, "friction all but stops mode 1, Q 0.9"),
     ],
 )
@@ -129,30 +129,32 @@ def test_doubts_of_the_profile():
 
 
 @pytest.mark.parametrize(
-    ("bed", "ratio", "n_doubts"),
+    ("bed", "basin_m", "sill_m", "status"),
     [
-        ([0, 120, 120], 1.0, 0),
-        ([0, 300, 100], 3.0, 0),
-        ([0, 300, 60], 5.0, 1),
-        ([0, 800, 5], 160.0, 2),  # a strait behind a bank
-        ([0, 15, 1], 1.0, 0),  # a pond behind a bar is no basin
+        ([0, 120, 40], 120, 40, "ok"),
+        ([0, 120, 20], 120, 20, "ok"),
+        ([0, 800, 10], 800, 10, "island"),
+        ([0, 15, 1], np.nan, np.nan, "ok"),  # a pond behind a bar is no basin
     ],
 )
-def test_a_basin_behind_a_sill_is_doubted_and_one_shut_off_is_poor(bed, ratio, n_doubts):
+def test_a_basin_behind_a_sill_is_doubted_and_one_shut_off_is_no_shelf(bed, basin_m, sill_m, status):
     row = bent([0, 20, 40, 60, 120], [*bed, 130, 3000], STEP_M, 120e3)
     profiles, breaks = one(row, 60e3)
-    assert sill_ratio(profiles, breaks)[0] == pytest.approx(ratio)
-    said = remarks(profiles, breaks)
-    assert len(said) == n_doubts
-    assert n_doubts == 0 or said[0] == f"basin {ratio:.0f} times deeper than the sill before it"
-    expected = ["good", "fair", "poor"][n_doubts]
-    assert confidences(np.array([True]), np.array([len(said)])).tolist() == [expected]
+    found = [depth_m[0] for depth_m in sills(profiles, breaks)]
+    if np.isfinite(basin_m):
+        assert found == pytest.approx([basin_m, sill_m])
+    else:
+        assert found[0] / found[1] < 4
+    assert statuses(profiles, breaks, OCEAN_M).tolist() == [status]
+    doubted = basin_m > 4 * sill_m
+    assert remarks(profiles, breaks) == [f"basin of {basin_m:.0f} m behind a sill of {sill_m:.1f} m"] * doubted
 
 
 def test_a_deep_sea_beyond_the_break_is_no_basin():
     row = bent([0, 60, 80, 100, 120], [0, 120, 900, 100, 90], STEP_M, 120e3)
-    assert sill_ratio(*one(row, 60e3))[0] == 1.0
-    assert np.isnan(sill_ratio(*one(row, np.nan))[0])
+    basin_m, sill_m = sills(*one(row, 60e3))
+    assert basin_m == sill_m
+    assert np.isnan(sills(*one(row, np.nan))).all()
 
 
 def test_confidence_falls_with_doubts_and_is_empty_without_an_index():

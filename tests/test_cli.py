@@ -26,7 +26,7 @@ title = "test"
 path = {grid}
 positive = "up"
 [coast]
-generalise_km = 10.0
+generalise_km = 40.0
 [transects]
 spacing_km = 20.0
 length_km = 200.0

@@ -411,7 +411,10 @@ def test_coast_round_the_globe_has_no_seam(write_grid):
 
 
 def test_all_land_is_refused_with_its_cure(write_grid):
-    with pytest.raises(CoastError, match=r"no water body of at least 500 km2 .* check the sign \(grid.positive\)"):
+    with pytest.raises(
+        CoastError,
+        match=r"no water body of at least 500 km2 .* check that it holds depths here, their sign \(grid.positive\)",
+    ):
         lay(write_grid(scene(lambda x, y: 0 * x + 5.0)))
 
 

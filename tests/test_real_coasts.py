@@ -75,7 +75,9 @@ def test_runs_through_with_default_settings(screened, window):
     assert run.source.positive == "up"
     assert set(table.status) <= set(STATUSES)
     assert (table.status == "ok").sum() >= 0.1 * len(table)
-    assert table.loc[table.status == "ok", "index_max"].notna().all()
+    without = table[(table.status == "ok") & table.index_max.isna()]
+    assert without.note.str.contains("friction all but stops mode 1").all()
+    assert len(without) < 0.1 * len(table)
     pieces = read_vector(run.path, "coast_index").geometry
     lon, lat = shapely.get_coordinates(pieces).T
     part = shapely.get_coordinates(shapely.get_parts(pieces), return_index=True)[1]

@@ -281,7 +281,7 @@ def test_two_breaks_on_one_transect_are_refused(picked):
 
 def test_break_of_no_transect_is_refused(picked):
     _, after = picked
-    with pytest.raises(SettingsError, match=r"transect_id 999 belong\(s\) to no transect of this run; delete or mend"):
+    with pytest.raises(SettingsError, match=r"no transect of this run has transect_id 999; delete or mend"):
         after(lambda frame: frame.iloc[[4]].assign(transect_id=999))
 
 

@@ -141,7 +141,7 @@ def test_confidence_counts_the_doubts_named_in_the_note(layers):
     table = layers["transects"]
     good = table[table["confidence"] == "good"]
     told = good["note"].dropna().str.split("; ").explode()
-    assert told.str.contains("below_inertial|deepest|overdamped").all()  # remarks that are no doubts
+    assert told.str.contains("below_inertial|profile ends|overdamped").all()  # remarks that are no doubts
     assert table.loc[table["confidence"] == "poor", "note"].str.contains("; ").all()
 
 
@@ -151,13 +151,13 @@ def test_waves_slower_than_the_earth_turns_are_named_and_have_no_gain(run, setti
     slow[:, 3] = True  # K1, as if farther north
     screened = replace(run.screened, waves=replace(waves, below_inertial=slow))
     table = tables(screened, run, settings)["transects"]
-    told = table["note"].fillna("").str.contains("below_inertial: .*K1")
+    told = table["note"].fillna("").str.contains(r"below_inertial \(slower than the inertial period\): .*K1")
     np.testing.assert_array_equal(told, table["deep_m"].notna())
 
 
 def test_a_profile_that_stops_short_of_the_deep_sea_says_how_deep_it_is(layers, run):
     stepped = run.screened.is_stepped & np.isfinite(run.screened.outer_depth_m)
-    told = layers["transects"]["note"].fillna("").str.contains(r"deepest \d+ m, stepped to 4000 m")
+    told = layers["transects"]["note"].fillna("").str.contains(r"profile ends at \d+ m, sea beyond taken as 4000 m")
     np.testing.assert_array_equal(told, stepped)
 
 

@@ -31,17 +31,17 @@ def test_words_decide_and_are_quoted(texts, positive, why):
 
 
 @pytest.mark.parametrize(
-    ("lowest", "highest"), [(-6000, 4100), (0, 6000), (-6000, -1), (10, 20), (-100, 4000), (math.nan, math.nan)]
+    ("lowest", "highest"), [(-6000, 5100), (0, 6000), (-6000, -1), (10, 20), (-100, 4000), (math.nan, math.nan)]
 )
 def test_values_that_do_not_tell_are_not_guessed(lowest, highest):
     with pytest.raises(GridError, match=r'cannot tell elevations .*set grid\.positive = "up" .* or "down"'):
         decide_positive({"long_name": "depth or height", "units": "m"}, lowest, highest, "dem")
 
 
-def test_deepest_half_as_large_again_as_highest_is_the_limit():
-    assert decide_positive({}, -150.0, 100.0, "dem") == ("up", "deepest value -150 m against highest 100 m")
-    with pytest.raises(GridError, match=r"-149\.9 to 100"):
-        decide_positive({}, -149.9, 100.0, "dem")
+def test_deepest_a_fifth_larger_than_highest_is_the_limit():
+    assert decide_positive({}, -120.0, 100.0, "dem") == ("up", "deepest value -120 m against highest 100 m")
+    with pytest.raises(GridError, match=r"-119\.9 to 100"):
+        decide_positive({}, -119.9, 100.0, "dem")
 
 
 def test_contradicting_words_are_both_named():
@@ -97,7 +97,9 @@ def test_vertical_part_of_a_compound_system_tells(tmp_path):
     assert source.vertical_words == ("vertical system: EGM2008 height",)
 
 
-def test_setting_wins_over_every_word(tmp_path):
+def test_setting_wins_over_every_word_and_is_objected_to(tmp_path, caplog):
     path = write_nc(tmp_path / "a.nc", np.array([[5, 9], [2, 3]], np.int16), [1.0, 2.0], [3.0, 4.0], positive="up")
     source = open_grid(GridSettings(path=path, positive="down"))
-    assert (source.positive, source.positive_why) == ("down", "set by grid.positive")
+    assert source.positive == "down"
+    assert source.positive_why == 'set by grid.positive, although attribute positive "up" speaks for up'
+    assert "grid.positive = 'down', although" in caplog.text

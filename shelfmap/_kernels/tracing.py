@@ -188,6 +188,7 @@ def sample_seaward(
 ) -> tuple[int, int]:
     """Depths every `step_m` from the shore; how many lie on the transect and in the grid, and why they stop."""
     last_m = node_m[node_m.shape[0] - 1]
+    last_m = min(last_m, shore_m + last_m)  # a shore landward of the station makes no transect longer
     for j in range(out.shape[0]):
         at_m = shore_m + j * step_m
         if at_m > last_m:
