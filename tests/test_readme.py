@@ -116,7 +116,7 @@ def test_python_example_runs(tmp_path, monkeypatch, capsys):
     (tmp_path / "demo.toml").rename(tmp_path / "coast.toml")
     monkeypatch.chdir(tmp_path)
     (example,) = fenced("python")
-    exec(compile(example.replace(", workers=2", ""), "README", "exec"), {})
+    exec(compile(example, "README", "exec"), {})
     assert "'ok'" in capsys.readouterr().out
 
 
@@ -127,6 +127,12 @@ def test_stages_named_exist():
     for name in re.findall(r"`(\w+)`", paragraph):
         assert name in shelfmap.__all__
         assert callable(getattr(shelfmap, name))
+
+
+def test_nothing_is_left_to_fill_in():
+    """No placeholder, a word in capitals on a line of its own, is left in the two guides."""
+    for name in ("README.md", "DEVELOPERS.md"):
+        assert not re.findall(r"^[A-Z_]{4,}$", (TOP / name).read_text(encoding="utf-8"), flags=re.MULTILINE)
 
 
 def test_cautions_stand_in_full():

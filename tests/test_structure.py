@@ -131,3 +131,10 @@ def test_the_top_of_the_repository_holds_only_what_was_agreed(repository):
     listed = subprocess.run(["git", "ls-files"], cwd=repository, capture_output=True, text=True, check=True)
     top = {line.split("/")[0] for line in listed.stdout.splitlines()}
     assert {entry for entry in top if not entry.startswith(".")} <= TOP_LEVEL
+
+
+def test_compiled_loops_are_exact():
+    """No fastmath: with contraction allowed, a first run and worker processes differed in the last bit."""
+    for path in (PACKAGE / "_kernels").glob("*.py"):
+        calls = [node for node in ast.walk(ast.parse(path.read_text(encoding="utf-8"))) if isinstance(node, ast.Call)]
+        assert not [word for call in calls for word in call.keywords if word.arg == "fastmath"], path

@@ -44,7 +44,7 @@ def coast_series(y: complex) -> tuple[complex, complex, complex, complex]:
     return eta, flux, -flux, flux_y
 
 
-@njit(cache=True, error_model="numpy", fastmath={"contract"})
+@njit(cache=True, error_model="numpy")
 def march_real(cells: Cells, stiffness: FloatArray, eta: FloatArray, flux: FloatArray, eta_break: FloatArray) -> None:
     """March all waves without friction; `stiffness` is omega^2 - f^2. Fills the values at the end and the break."""
     n, first = cells.inertia_s2_m.size, 0
@@ -65,7 +65,7 @@ def march_real(cells: Cells, stiffness: FloatArray, eta: FloatArray, flux: Float
         flux[q] += cells.width_m[n] * eta[q]
 
 
-@njit(cache=True, error_model="numpy", fastmath={"contract"})
+@njit(cache=True, error_model="numpy")
 def _march_cells(cells: Cells, begin: int, end: int, stiffness: FloatArray, eta: FloatArray, flux: FloatArray) -> None:
     """March on from node `begin` to node `end`; two cells at a time halve the stores."""
     width, inertia = cells.width_m, cells.inertia_s2_m
@@ -84,7 +84,7 @@ def _march_cells(cells: Cells, begin: int, end: int, stiffness: FloatArray, eta:
             eta[q] = e - inertia_b * stiffness[q] * p
 
 
-@njit(cache=True, error_model="numpy", fastmath={"contract"})
+@njit(cache=True, error_model="numpy")
 def march_damped(
     cells: Cells,
     omega: FloatArray,
