@@ -46,7 +46,7 @@ def statuses(profiles: Profiles, breaks: ShelfBreaks, ocean_m: float) -> TextArr
         Results of the stages, n transects.
     ocean_m : float
         A transect that gets this deep has reached the open ocean, metres: land, the grid's edge or missing depth
-        beyond count no more. A sill before the break, 16 times shallower than a basin behind it, counts as land.
+        beyond count no more. A sill 16 times shallower than a basin behind it counts as land.
 
     Returns
     -------
@@ -65,7 +65,7 @@ def statuses(profiles: Profiles, breaks: ShelfBreaks, ocean_m: float) -> TextArr
     out[closed | cut] = end[closed | cut]
     basin_m, sill_m = sills(profiles, breaks)
     with np.errstate(invalid="ignore"):
-        out[(out == "ok") & (basin_m > SHUT_OFF_RATIO * sill_m)] = "island"
+        out[np.isin(out, ["ok", "no_break"]) & (basin_m > SHUT_OFF_RATIO * sill_m)] = "island"
     short = profiles.n_samples < LEAST_SAMPLES
     out[short] = np.where(end[short] == "search_length", "too_short", end[short])
     for reason in ("not_sea", "edge_of_grid", "void"):
@@ -90,10 +90,12 @@ def sills(profiles: Profiles, breaks: ShelfBreaks) -> tuple[FloatArray, FloatArr
     Returns
     -------
     basin_m, sill_m : (n,) array of float
-        Depths of a sample of at least 20 m, and of one seaward of it but before the break, whose ratio is largest;
-        equal where the shelf only deepens, NaN without a break or a basin.
+        Depths of a sample of at least 20 m, and of one seaward of it but before the break, or before the greatest
+        depth where there is no break, whose ratio is largest; equal where the bed only deepens, NaN without a basin.
     """
-    on_shelf = profiles.distance_m[None, :] <= np.nan_to_num(breaks.break_m, nan=-1.0)[:, None]
+    deepest = np.argmax(np.nan_to_num(profiles.depth_m, nan=-1.0), axis=1) * profiles.step_m
+    end_m = np.where(np.isnan(breaks.break_m), deepest, breaks.break_m)
+    on_shelf = profiles.distance_m[None, :] <= end_m[:, None]
     depth_m = np.where(on_shelf & (profiles.depth_m > 0), profiles.depth_m, np.nan)
     basin_m = np.fmax.accumulate(np.where(depth_m >= LEAST_BASIN_M, depth_m, np.nan), axis=1)
     worst = np.argmax(np.nan_to_num(basin_m / depth_m, nan=0.0), axis=1)

@@ -127,9 +127,9 @@ def trace_coast(source: GridSource, settings: CoastSettings, land: Geometries | 
     lines, dropped = _sort_out(source, chains, settings)
     if not lines:
         raise CoastError(
-            f"{source.path}: no shoreline at level {settings.level_m:g} m in this region: all of it is "
-            f"{'water' if basins.areas_m2.sum() > 0 else 'land'}, or its islands are below coast.smallest_island_km2 = "
-            f"{settings.smallest_island_km2:g}; where missing cells are the land, set grid.void_is_land = true"
+            f"{source.path}: no shoreline at level {settings.level_m:g} m in this region: all of it is water, or its "
+            f"islands are below coast.smallest_island_km2 = {settings.smallest_island_km2:g}; "
+            "where missing cells are the land, set grid.void_is_land = true"
         )
     return Coast(
         lines=tuple(lines),

@@ -154,7 +154,15 @@ def test_a_deep_sea_beyond_the_break_is_no_basin():
     row = bent([0, 60, 80, 100, 120], [0, 120, 900, 100, 90], STEP_M, 120e3)
     basin_m, sill_m = sills(*one(row, 60e3))
     assert basin_m == sill_m
-    assert np.isnan(sills(*one(row, np.nan))).all()
+
+
+def test_without_a_break_a_bank_before_the_greatest_depth_counts():
+    row = bent([0, 40, 60, 80, 120], [0, 800, 5, 100, 3000], STEP_M, 120e3)
+    profiles, breaks = one(row, np.nan)
+    assert [depth_m[0] for depth_m in sills(profiles, breaks)] == pytest.approx([800, 5])
+    assert statuses(profiles, breaks, OCEAN_M).tolist() == ["island"]
+    beyond = bent([0, 60, 80, 120], [0, 3000, 5, 10], STEP_M, 120e3)
+    assert statuses(*one(beyond, np.nan), OCEAN_M).tolist() == ["no_break"]
 
 
 def test_confidence_falls_with_doubts_and_is_empty_without_an_index():
