@@ -8,8 +8,12 @@ from typing import TYPE_CHECKING
 __version__ = "0.1.0"
 
 __all__ = [
+    "DepthError",
+    "Friction",
     "Settings",
     "__version__",
+    "coriolis_rad_s",
+    "deep_end",
     "find_shelf_breaks",
     "lay_transects",
     "open_grid",
@@ -29,13 +33,17 @@ if TYPE_CHECKING:
     from shelfmap.layers import read_table
     from shelfmap.pipeline import screen
     from shelfmap.profiles import sample_profiles
-    from shelfmap.response import shelf_modes, wave_response
+    from shelfmap.response import DepthError, Friction, coriolis_rad_s, deep_end, shelf_modes, wave_response
     from shelfmap.settings import Settings
     from shelfmap.shelfbreak import find_shelf_breaks
     from shelfmap.transects import lay_transects
 else:
     _HOMES = {
+        "DepthError": "response",
+        "Friction": "response",
         "Settings": "settings",
+        "coriolis_rad_s": "response",
+        "deep_end": "response",
         "find_shelf_breaks": "shelfbreak",
         "lay_transects": "transects",
         "open_grid": "grid",

@@ -131,10 +131,12 @@ _DRAWN = ("coast_index", "transects", "shelf_breaks")
 _KEYED = ("coast_index", "transects", "shelf_breaks", "profiles", "response", "transect_lines")
 
 _NO_BREAK = "No shelf break: see status."
+_NO_PERIOD = "No shelf break, or nothing was computed on this transect: see status and note."
 _NO_BREAK_FIGURE = "No shelf break, or too little around it to say."
 _NO_MODE = "Mode not found or no usable profile: see status."
-_NO_INDEX = "No index at any wave: see status and note."
-_NO_WAVE = "No usable profile (see status), or this wave is too slow for the latitude (below_inertial in the note)."
+_NO_INDEX = "No index at any constituent: see status and note."
+_NO_WAVE_INDEX = "No shelf with a break (see status), no mode that swings, or a wave without a gain: see note."
+_NO_WAVE = "No usable profile (see status), or a wave too slow for the latitude or too short to compute: see note."
 
 _Row = tuple[str, Dtype, str, str, str, str]
 
@@ -213,17 +215,18 @@ _TABLE: Final[tuple[tuple[str, tuple[str, ...], tuple[_Row, ...]], ...]] = (
         ("picked", "bool", "", "Picked by hand", "Whether the break was given by the user and not found here.", ""),
     )),
     ("response", _TRANSECTS, (
-        ("mean_depth_m", "float64", "m", "Mean depth of the shelf", "Mean water depth from shore to break.", _NO_BREAK),
+        ("mean_depth_m", "float64", "m", "Mean depth of the shelf",
+         "Mean water depth from shore to break.", _NO_PERIOD),
         ("travel_time_h", "float64", "h", "Travel time over the shelf",
-         "Time a long wave takes from the break to the shore.", _NO_BREAK),
+         "Time a long wave takes from the break to the shore.", _NO_PERIOD),
         ("quarter_wave_h", "float64", "h", "Four travel times",
-         "Four travel times, without rotation: a first guess that is too long for a sloping shelf.", _NO_BREAK),
+         "Four travel times, without rotation: a first guess that is too long for a sloping shelf.", _NO_PERIOD),
     )),
     ("response", _LINES, (
         ("period1_h", "float64", "h", "Natural period, mode 1",
-         "Slowest natural period of the shelf, with a node at the break.", _NO_BREAK),
+         "Slowest natural period of the shelf, with a node at the break.", _NO_PERIOD),
         ("period1_sd_h", "float64", "h", "Natural period, mode 1, error",
-         "One standard deviation of that period from errors of depth and break position.", _NO_BREAK),
+         "One standard deviation of that period from errors of depth and break position.", _NO_PERIOD),
     )),
     ("response", _TRANSECTS, (
         ("pole1_h", "float64", "h", "Period with leakage, mode 1",
@@ -237,22 +240,25 @@ _TABLE: Final[tuple[tuple[str, tuple[str, ...], tuple[_Row, ...]], ...]] = (
     ("response", _TRANSECTS, (
         ("damped_q1", "float64", "", "Quality factor with friction, mode 1",
          "Q of the slowest mode with friction.", _NO_MODE),
-        ("period2_h", "float64", "h", "Natural period, mode 2", "Second natural period, node at the break.", _NO_BREAK),
+        ("period2_h", "float64", "h", "Natural period, mode 2",
+         "Second natural period, node at the break.", _NO_PERIOD),
         ("pole2_h", "float64", "h", "Period with leakage, mode 2",
          "Period of the second mode of shelf and deep sea.", _NO_MODE),
         ("q2", "float64", "", "Quality factor, mode 2", "Q of the second mode from leakage alone.", _NO_MODE),
-        ("period3_h", "float64", "h", "Natural period, mode 3", "Third natural period, node at the break.", _NO_BREAK),
+        ("period3_h", "float64", "h", "Natural period, mode 3",
+         "Third natural period, node at the break.", _NO_PERIOD),
         ("pole3_h", "float64", "h", "Period with leakage, mode 3",
          "Period of the third mode of shelf and deep sea.", _NO_MODE),
         ("q3", "float64", "", "Quality factor, mode 3", "Q of the third mode from leakage alone.", _NO_MODE),
         ("current_antinode_km", "float64", "km", "Strongest currents, mode 1",
-         "Distance from the shore where the slowest mode drives its strongest currents.", _NO_BREAK),
+         "Distance from the shore where the slowest mode drives its strongest currents.", _NO_PERIOD),
         ("kernel_peak_share", "float64", "", "Weight of the heaviest cell",
-         "Largest share of one sample in the slowest period: above 0.05 a single shoal may decide it.", _NO_BREAK),
+         "Largest share of one sample in the slowest period: above 0.05 a single shoal may decide it.", _NO_PERIOD),
         ("deep_m", "float64", "m", "Depth of the deep sea",
          "Depth of the sea taken beyond the transect.", "No usable profile: see status."),
         ("friction_m_s", "float64", "m/s", "Bottom friction",
-         "Linear friction coefficient used.", "No usable profile, or quadratic drag was asked for: see run."),
+         "Linear friction; constituents with an offshore amplitude use drag instead, see run.",
+         "No usable profile: see status."),
     )),
     ("profiles", _TRANSECTS, (
         ("n_bridged", "int64", "", "Land samples bridged", "Number of dry samples bridged inside the transect.", ""),
@@ -267,14 +273,15 @@ _TABLE: Final[tuple[tuple[str, tuple[str, ...], tuple[_Row, ...]], ...]] = (
         ("damped_gain_{wave}", "float64", "", "Gain with friction at {wave}",
          "The same gain of {wave} with friction.", _NO_WAVE),
         ("lag_{wave}_deg", "float64", "deg", "Lag at {wave}",
-         "How much later {wave} peaks at the shore than at the wall, with friction, from -180 to 180.", _NO_WAVE),
+         "How much later {wave} peaks at the shore than at a wall at the profile's deep end, with friction.",
+         _NO_WAVE),
         ("edge_ratio_{wave}", "float64", "", "Shore over break at {wave}",
          "Amplitude of {wave} at the shore over that at the break: what a pair of gauges would see.",
          "No shelf break, no usable profile, or the break lies near a node."),
     )),
     ("index", _LINES, (
         ("index_{wave}", "float64", "", "Resonance index at {wave}",
-         "Tuning x strength at {wave}, the largest over the first three modes.", _NO_WAVE),
+         "Tuning x strength at {wave}, the largest over the first three modes.", _NO_WAVE_INDEX),
     )),
     ("profiles", ("profiles",), (
         ("distance_km", "float64", "km", "Distance from the shore", "Distance of the sample along the transect.", ""),
@@ -296,7 +303,7 @@ _TABLE: Final[tuple[tuple[str, tuple[str, ...], tuple[_Row, ...]], ...]] = (
          "Amplitude at the shore over that at a straight wall in the deep sea, without friction.", _NO_WAVE),
         ("damped_gain", "float64", "", "Gain with friction", "The same gain with friction.", _NO_WAVE),
         ("lag_deg", "float64", "deg", "Lag with friction",
-         "How much later the wave peaks at the shore than at the wall, from -180 to 180.", _NO_WAVE),
+         "How much later the wave peaks at the shore than at a wall at the profile's deep end, -180 to 180.", _NO_WAVE),
         ("edge_ratio", "float64", "", "Shore over break",
          "Amplitude at the shore over that at the break.",
          "No shelf break, no usable profile, or the break lies near a node."),

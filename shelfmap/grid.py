@@ -17,7 +17,7 @@ from shelfmap._kernels.sampling import INSIDE, OUTSIDE, VOID, sample_points
 from shelfmap.errors import GridError
 from shelfmap.geodesy import Projection, distance_bearing, unwrap_lon_deg
 from shelfmap.rasterfile import Indices, RasterFile, RasterHeader, projection_of, read_header
-from shelfmap.settings import GridSettings
+from shelfmap.settings import VOID_LAND_M, GridSettings
 from shelfmap.vertical import Positive, check_unit, datum_words, decide_positive
 
 __all__ = ["FARTHEST_VALUE_M", "INSIDE", "OUTSIDE", "VOID", "Grid", "GridSource", "open_grid"]
@@ -29,10 +29,6 @@ StateArray = NDArray[np.uint8]
 
 #: No sea or mountain is farther from the zero than this, metres: such a value means "missing".
 FARTHEST_VALUE_M: Final = 12_000.0
-
-#: Elevation above the water that missing cells get where they count as land, metres: the shoreline of a grid that
-#: holds depths only then falls between its last wet cell and the next.
-VOID_LAND_ELEVATION_M: Final = 10.0
 
 # A sample of a large grid: this many windows a side, of this many cells a side.
 _SAMPLE_WINDOWS: Final = 8
@@ -290,7 +286,7 @@ class GridSource:
         value_m = np.hstack([self.file.values(dataset, (*rows, *piece)) for piece in pieces if piece[0] < piece[1]])
         depth_m = self.level_shift_m + (value_m if self.positive == "down" else -value_m)
         if self.void_is_land:
-            depth_m[np.isnan(depth_m)] = -VOID_LAND_ELEVATION_M
+            depth_m[np.isnan(depth_m)] = -VOID_LAND_M
         return Grid(
             depth_m=np.ascontiguousarray(depth_m, dtype=np.float32),
             row0=rows[0],

@@ -118,14 +118,18 @@ def _seaward(source: GridSource, coast: Coast, lines: Geometries) -> Geometries:
     depth_m, _ = source.sample(ends[:, 0], ends[:, 1])
     depth_m = np.maximum(np.nan_to_num(depth_m, nan=np.inf), 0.0)  # off the grid and in voids: deep, as far as we know
     lon_deg = unwrap_lon_deg(ends[:, 0], float(coast.lines[0].lon_deg.mean()))
-    shore = shapely.multilinestrings([shapely.linestrings(line.lon_deg, line.lat_deg) for line in coast.lines])
-    away = shapely.distance(shapely.points(lon_deg, ends[:, 1]), shore)
+    squeeze = np.cos(np.radians(ends[:, 1].mean()))
+    shore = shapely.multilinestrings(
+        [shapely.linestrings(line.lon_deg * squeeze, line.lat_deg) for line in coast.lines]
+    )
+    away = shapely.distance(shapely.points(lon_deg * squeeze, ends[:, 1]), shore)
     with np.errstate(invalid="ignore"):
         backward = (depth_m[::2] - depth_m[1::2] > BACKWARD_FALL_M) & (away[::2] > away[1::2])
     if backward.any():
         _LOG.warning("%d of the transects drawn ran from the sea to the shore and were turned round", backward.sum())
     out = lines.copy()
-    out[backward] = shapely.reverse(lines[backward])
+    for row in np.flatnonzero(backward):  # reversing a multi-part line would keep the order of its parts
+        out[row] = shapely.linestrings(shapely.get_coordinates(lines[row])[::-1])
     return out
 
 

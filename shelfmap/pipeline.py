@@ -36,6 +36,8 @@ Progress = Callable[[str, int, int], None]
 
 #: Stations in one section of coast: the unit of work, the same whatever the number of workers.
 SECTION_STATIONS: Final = 64
+#: Whole turns by which longitudes of the same place may differ.
+TURNS_DEG: Final = np.array([-360.0, 0.0, 360.0])
 #: Lines to be edited begin this far landward of the shoreline, metres, so that they meet it when they come back.
 SETBACK_M: Final = 10.0
 
@@ -120,7 +122,8 @@ def screen(
     coast = make_coast(source, settings)
     _LOG.info("coast: %d stretches, %.0f km, %s", len(coast.lines), _length_km(coast), coast.source)
     transects = make_transects(source, coast, settings)
-    sections = _sections(source, coast, transects, settings)
+    picks = picked_breaks(settings, transects.transect_id)
+    sections = _sections(source, coast, transects, settings, picks)
     screened = _screen_sections(sections, workers, executor, progress)
     _warn_of_picks(sections, screened)
     run = Run(
@@ -196,7 +199,9 @@ def write_transects(settings: Settings, path: Path, *, overwrite: bool = False) 
     source = open_grid(settings.grid)
     coast = make_coast(source, settings)
     transects = make_transects(source, coast, settings)
-    profiles = stack([sample_section(section) for section in _sections(source, coast, transects, settings)])
+    no_picks = np.full(len(transects), None, dtype=object)
+    sections = _sections(source, coast, transects, settings, no_picks)
+    profiles = stack([sample_section(section) for section in sections])
     layer = Layer(
         name="transect_lines",
         columns=transect_columns(transects, profiles),
@@ -226,21 +231,40 @@ def _length_km(coast: Coast) -> float:
     return sum(line.length_m for line in coast.lines) / 1e3
 
 
-def _sections(source: GridSource, coast: Coast, transects: Transects, settings: Settings) -> list[Section]:
+def _sections(
+    source: GridSource, coast: Coast, transects: Transects, settings: Settings, picks: NDArray[np.object_]
+) -> list[Section]:
     """Cut the transects into sections of neighbouring stations."""
-    picks = picked_breaks(settings, transects.transect_id)
     step_m = step_of(source, settings.transects)
+    if settings.transects.step_km is not None and step_m > settings.transects.step_km * 1e3:
+        _LOG.warning(
+            "transects.step_km = %g would take too many samples over %g km; %.3f km is used",
+            settings.transects.step_km,
+            settings.transects.length_km,
+            step_m / 1e3,
+        )
     return [
         Section(
             source=source,
             settings=settings,
             transects=transects.rows(start, start + SECTION_STATIONS),
             step_m=step_m,
-            islets=coast.islets,
+            islets=_islets_near(coast, transects.rows(start, start + SECTION_STATIONS)),
             picks=picks[start : start + SECTION_STATIONS],
         )
         for start in range(0, len(transects), SECTION_STATIONS)
     ]
+
+
+def _islets_near(coast: Coast, transects: Transects) -> NDArray[np.object_]:
+    """Islets that transects may meet: those in the box round them, longitudes a turn away too."""
+    if not len(coast.islets):
+        return coast.islets
+    lon_deg, lat_deg = transects.node_lon_deg, transects.node_lat_deg
+    west, south, east, north = np.nanmin(lon_deg), np.nanmin(lat_deg), np.nanmax(lon_deg), np.nanmax(lat_deg)
+    boxes = shapely.box(west + TURNS_DEG, south, east + TURNS_DEG, north)
+    _, near = shapely.STRtree(coast.islets).query(boxes, predicate="intersects")
+    return np.asarray(coast.islets[np.unique(near)])
 
 
 def _screen_sections(

@@ -47,7 +47,7 @@ class Friction:
         Linear coefficient r, m/s, >= 0: bottom stress over density is r u.
     drag : float, optional
         Drag coefficient Cd, > 0: bottom stress over density is Cd |u| u, and r(x) = 8 / (3 pi) Cd U(x) with U the
-        amplitude of the current (Lorentz linearisation, from memory).
+        amplitude of the current across the shelf (Lorentz linearisation, from memory).
     offshore_amplitude_m : (p,) array_like of float, optional
         By wave, metres: amplitude at a straight wall in the deep sea, that is twice the incident wave, to which
         `WaveResponse.gain` refers. NaN where not known: that wave keeps `linear_m_s`.

@@ -17,6 +17,7 @@ from shelfmap.constants import CONSTITUENTS
 from shelfmap.errors import SettingsError
 
 __all__ = [
+    "VOID_LAND_M",
     "CoastSettings",
     "DepthErrorSettings",
     "GridSettings",
@@ -28,7 +29,8 @@ __all__ = [
     "markdown_settings",
 ]
 
-#: Missing cells taken as land (`GridSettings.void_is_land`) stand this high, metres.
+#: Missing cells taken as land (`GridSettings.void_is_land`) stand this high above the water, metres: the shoreline of a
+#: grid that holds depths only falls between its last wet cell and the next.
 VOID_LAND_M: Final = 10.0
 #: Depths a deep sea may have, metres.
 DEEP_M: Final = (500.0, 11_000.0)
@@ -97,7 +99,12 @@ class GridSettings(_Stage):
 class CoastSettings(_Stage):
     """How the shoreline becomes the coast that stations stand on."""
 
-    level_m: float = Field(0.0, ge=-500, le=500, description="Elevation of the shoreline above the water level, m.")
+    level_m: float = Field(
+        0.0,
+        ge=-500,
+        le=500,
+        description="Elevation of the line stations stand on, above the water level, m; transects start at the water.",
+    )
     generalise_km: float = Field(
         20.0, gt=0, le=500, description="Inlets narrower than this are bridged for the normals, km."
     )

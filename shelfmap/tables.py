@@ -175,7 +175,6 @@ def transect_columns(transects: Transects, profiles: Profiles) -> Columns:
 def _profile_columns(screened: Screened, settings: Settings) -> Columns:
     profiles = screened.profiles
     at_land = np.isin(profiles.end_reason, [END_REASONS.index("facing_land"), END_REASONS.index("island")])
-    no_linear_friction = np.isnan(screened.outer_depth_m) | (settings.response.drag is not None)
     return {
         "status": screened.status,
         "n_bridged": profiles.n_bridged,
@@ -183,7 +182,7 @@ def _profile_columns(screened: Screened, settings: Settings) -> Columns:
         "n_despiked": profiles.n_despiked,
         "fetch_km": np.where(at_land, profiles.length_m / 1e3, np.nan),
         "deep_m": screened.outer_depth_m,
-        "friction_m_s": np.where(no_linear_friction, np.nan, settings.response.friction_m_s),
+        "friction_m_s": np.where(np.isnan(screened.outer_depth_m), np.nan, settings.response.friction_m_s),
     }
 
 
@@ -278,6 +277,14 @@ def _remark_columns(
     for row in np.flatnonzero(slow.any(axis=1)):
         names = [wave.name or f"{wave.period_h:g} h" for wave, is_slow in zip(waves, slow[row], strict=True) if is_slow]
         remarks[row].append(f"below_inertial (slower than the inertial period): {', '.join(names)}")
+    uncomputed = np.isnan(screened.waves.damped_gain) & computed[:, None] & ~slow
+    for row in np.flatnonzero(uncomputed.any(axis=1)):
+        names = [
+            wave.name or f"{wave.period_h:g} h" for wave, is_not in zip(waves, uncomputed[row], strict=True) if is_not
+        ]
+        remarks[row].append(f"not computed (wave too short for this transect, or drag unsettled): {', '.join(names)}")
+    for row in np.flatnonzero(holds_index & np.isnan(modes.pole_rad_s.real).all(axis=1)):
+        remarks[row].append("no mode found")
     for row in np.flatnonzero(holds_index & (modes.q[:, 0] < 0.5)):
         remarks[row].append("mode 1 is overdamped")
     for row in np.flatnonzero(screened.is_stepped & computed):

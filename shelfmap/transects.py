@@ -344,7 +344,7 @@ def crossing_transects(start_lonlat: FloatArray, end_lonlat: FloatArray, coast_p
         return crosses
     lines = shapely.linestrings(np.stack([start_lonlat[rows], end_lonlat[rows]], axis=1))
     first, second = shapely.STRtree(lines).query(lines, predicate="intersects")
-    pair = (first < second) & (coast_part[rows[first]] == coast_part[rows[second]])
+    pair = (first < second) & (coast_part[rows[first]] == coast_part[rows[second]]) & (coast_part[rows[first]] > 0)
     crosses[rows[first[pair]]] = True
     crosses[rows[second[pair]]] = True
     return crosses

@@ -37,7 +37,7 @@ STATUSES: Final[Mapping[str, str]] = MappingProxyType({
     "edge_of_grid": "The grid ends before a break or the deep sea is reached: take a larger grid.",
     "void": "Depths are missing over too long a stretch of the transect.",
     "too_short": "The transect holds too few wet samples to compute anything.",
-    "not_sea": "The water in front of the station is not the sea: a lake or land below zero.",
+    "not_sea": "No water was found within reach of the station.",
 })  # fmt: skip
 
 END_REASONS: Final[Mapping[str, str]] = MappingProxyType({
@@ -55,7 +55,7 @@ CONFIDENCES: Final[Mapping[str, str]] = MappingProxyType({
 })  # fmt: skip
 
 INDEX_CLASSES: Final[Mapping[str, str]] = MappingProxyType({
-    "none": "The shelf is not tuned to any of the waves asked for.",
+    "none": "The shelf is not tuned to any of the constituents asked for.",
     "low": "A slight tuning.",
     "moderate": "Tuned well enough to matter locally.",
     "high": "Near resonance.",

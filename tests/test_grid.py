@@ -21,8 +21,8 @@ from utils_grid import DATA, masked_bilinear, write_nc, write_tif
 
 from shelfmap.errors import GridError
 from shelfmap.geodesy import Projection, distance_bearing
-from shelfmap.grid import INSIDE, OUTSIDE, VOID, VOID_LAND_ELEVATION_M, Grid, open_grid
-from shelfmap.settings import GridSettings
+from shelfmap.grid import INSIDE, OUTSIDE, VOID, Grid, open_grid
+from shelfmap.settings import VOID_LAND_M, GridSettings
 
 longitudes = st.floats(-720, 720)
 latitudes = st.floats(-90, 90)
@@ -108,7 +108,7 @@ def test_missing_cells_are_nan_and_land_only_on_request(tmp_path, dtype, nodata)
     missing[1, 1] = True
     assert_array_equal(np.isnan(whole(opened(path)).depth_m), missing)
     filled = whole(opened(path, void_is_land=True, level_shift_m=5.0)).depth_m
-    assert filled[1, 1] == -VOID_LAND_ELEVATION_M
+    assert filled[1, 1] == -VOID_LAND_M
     assert_array_equal(filled[~missing], 5.0 - values[~missing].astype(np.float32))
 
 

@@ -8,7 +8,7 @@ from utils_pipeline import SHELF, settings_for, small_coast
 
 from shelfmap.demo import write_demo
 from shelfmap.errors import CoastError, LayerError, SettingsError, ShelfmapWarning, TransectError
-from shelfmap.layers import read_table
+from shelfmap.layers import read_table, read_vector
 from shelfmap.pipeline import screen, write_coast, write_transects
 from shelfmap.settings import Settings
 
@@ -294,3 +294,28 @@ def test_breaks_must_be_points_with_an_identity(picked):
 def test_layer_must_be_named_where_the_file_holds_several(demo, tmp_path):
     with pytest.raises(LayerError, match=r"demo\.gpkg holds several layers; name one of"):
         again(demo, tmp_path, transects={"file": str(demo / "demo.gpkg")})
+
+
+def test_line_in_several_parts_drawn_from_the_sea_is_one_transect(tmp_path, write_grid):
+    """Reversing a multi-part line part by part would start the transect in the middle of it."""
+    straight = settings_for(write_grid(small_coast()), tmp_path)
+    screen(straight)
+    drawn = read_vector(straight.output.path, "transects")
+    line = shapely.get_coordinates(drawn.geometry[7])
+    half = len(line) // 2
+    for number, name, parts in (
+        (0, "one.gpkg", [line]),
+        (1, "two.gpkg", [line[half:][::-1], line[: half + 1][::-1]]),
+    ):
+        shape = shapely.multilinestrings([shapely.linestrings(part) for part in parts])
+        geopandas.GeoDataFrame({"transect_id": [8]}, geometry=[shape], crs="EPSG:4326").to_file(tmp_path / name)
+        settings = straight.model_copy(
+            update={
+                "transects": straight.transects.model_copy(update={"file": tmp_path / name}),
+                "output": straight.output.model_copy(update={"path": tmp_path / f"out{number}.gpkg"}),
+            }
+        )
+        screen(settings)
+    one, two = (read_table(tmp_path / f"out{number}.gpkg", "transects") for number in (0, 1))
+    for name in ("lon_deg", "lat_deg", "length_km", "shelf_width_km", "gain_m2"):
+        np.testing.assert_allclose(one[name], two[name], rtol=1e-6, err_msg=name)

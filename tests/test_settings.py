@@ -8,8 +8,6 @@ from hypothesis import given
 from hypothesis import settings as hypothesis_settings
 from hypothesis import strategies as st
 
-from shelfmap import grid
-from shelfmap import settings as module
 from shelfmap.errors import SettingsError
 from shelfmap.settings import Settings, markdown_settings
 
@@ -144,7 +142,6 @@ def test_settings_that_do_not_go_together_are_refused_with_the_cure(tables, mess
 
 
 def test_missing_cells_are_land_up_to_the_height_the_grid_gives_them():
-    assert module.VOID_LAND_M == grid.VOID_LAND_ELEVATION_M
     assert read(grid={"void_is_land": True}, coast={"level_m": 9.9}).grid.void_is_land
     assert read(grid={"void_is_land": False}, coast={"level_m": 50}).coast.level_m == 50
 
