@@ -3,7 +3,9 @@
 import functools
 import json
 import logging
+import signal
 import sys
+import threading
 import traceback
 import warnings
 from collections.abc import Callable, Iterator
@@ -43,7 +45,7 @@ def _spoken(command: _F) -> _F:
     @functools.wraps(command)
     def spoken(*args: Any, verbose: int, quiet: int, **kwargs: Any) -> None:
         level = max(logging.DEBUG, logging.WARNING - 10 * (verbose - quiet))
-        with _messages(level):
+        with _messages(level), _tidy_end():
             try:
                 command(*args, **kwargs)
             except ShelfmapError as error:
@@ -54,6 +56,23 @@ def _spoken(command: _F) -> _F:
                 raise click.exceptions.Exit(EXIT_USAGE if taken else EXIT_FAILED) from None
 
     return spoken  # type: ignore[return-value]
+
+
+@contextmanager
+def _tidy_end() -> Iterator[None]:
+    """Let a request to terminate end the run as Ctrl-C does: workers stopped, nothing half-written left."""
+
+    def end(number: int, _frame: object) -> None:
+        raise SystemExit(128 + number)
+
+    if threading.current_thread() is not threading.main_thread():  # only there may signals be handled
+        yield
+        return
+    before = signal.signal(signal.SIGTERM, end)
+    try:
+        yield
+    finally:
+        signal.signal(signal.SIGTERM, before)
 
 
 @contextmanager

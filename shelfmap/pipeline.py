@@ -2,7 +2,9 @@
 
 import logging
 import multiprocessing
+import os
 import signal
+import threading
 import warnings
 from collections.abc import Callable, Iterator, Sequence
 from concurrent.futures import BrokenExecutor, Executor, ProcessPoolExecutor
@@ -295,8 +297,7 @@ def _mapping(workers: int, executor: Executor | None) -> Iterator[Callable[..., 
             with ProcessPoolExecutor(
                 workers,
                 mp_context=multiprocessing.get_context("spawn"),
-                initializer=signal.signal,
-                initargs=(signal.SIGINT, signal.SIG_IGN),
+                initializer=_obey_parent,
             ) as pool:
                 yield pool.map
     except BrokenExecutor as error:
@@ -304,6 +305,19 @@ def _mapping(workers: int, executor: Executor | None) -> Iterator[Callable[..., 
             f"a worker process died ({error}), most often for want of memory; run again with fewer workers or a larger "
             'transects.step_km, and in a script call screen under if __name__ == "__main__"'
         ) from error
+
+
+def _obey_parent() -> None:
+    """In a worker: leave Ctrl-C to the parent, and end when it has ended, however that came about."""
+    signal.signal(signal.SIGINT, signal.SIG_IGN)
+    parent = multiprocessing.parent_process()
+
+    def follow() -> None:
+        if parent is not None:
+            parent.join()
+            os._exit(1)
+
+    threading.Thread(target=follow, daemon=True).start()
 
 
 def _warn_of_coarse_cells(source: GridSource, settings: Settings) -> None:

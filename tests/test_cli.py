@@ -4,9 +4,11 @@ import json
 import os
 import pty
 import shutil
+import signal
 import sqlite3
 import subprocess
 import sys
+import time
 from contextlib import closing
 from pathlib import Path
 
@@ -18,6 +20,7 @@ from utils_pipeline import small_coast
 
 from shelfmap import __version__, pipeline
 from shelfmap.cli import main
+from shelfmap.demo import write_demo
 from shelfmap.layers import read_table
 
 SETTINGS = """\
@@ -411,3 +414,45 @@ def test_progress_is_drawn_on_a_terminal_and_overwritten(coast_toml):
     os.close(ours)
     assert drawn == "sections 1/1\r15 transects: 15 ok\r\n"
     assert done.stdout == f"{coast_toml.parent / 'out.gpkg'}\n"
+
+
+def children_of(pid):
+    """Processes a process has started, as Linux tells; empty once it has ended."""
+    try:
+        return {int(child) for child in Path(f"/proc/{pid}/task/{pid}/children").read_text(encoding="ascii").split()}
+    except OSError:
+        return set()
+
+
+def runs(pid):
+    """Whether a process runs; one that has ended and waits to be counted does not."""
+    try:
+        return Path(f"/proc/{pid}/stat").read_text(encoding="ascii").rpartition(")")[2].split()[0] != "Z"
+    except OSError:
+        return False
+
+
+@pytest.mark.skipif(not Path("/proc/self/task").exists(), reason="asks Linux for the processes")
+@pytest.mark.parametrize(("number", "code"), [(signal.SIGTERM, 143), (signal.SIGKILL, -9)])
+def test_ended_run_leaves_no_worker_and_no_file(tmp_path, number, code):
+    """However the parent ends, its workers end too."""
+    write_demo(tmp_path)
+    toml = (tmp_path / "demo.toml").read_text(encoding="utf-8").replace("spacing_km = 20.0", "spacing_km = 1.0")
+    (tmp_path / "many.toml").write_text(toml, encoding="utf-8")
+    command = Path(sys.executable).with_name("shelfmap")
+    process = subprocess.Popen(
+        [command, "screen", str(tmp_path / "many.toml"), "--workers", "2"], stderr=subprocess.PIPE
+    )
+    started, deadline = set(), time.monotonic() + 30
+    while len(started) < 3 and time.monotonic() < deadline and process.poll() is None:  # two workers and their tracker
+        time.sleep(0.02)
+        started |= children_of(process.pid)
+    process.send_signal(number)
+    process.communicate(timeout=30)
+    assert len(started) >= 3
+    assert process.returncode == code
+    deadline = time.monotonic() + 10
+    while any(map(runs, started)) and time.monotonic() < deadline:
+        time.sleep(0.05)
+    assert not [pid for pid in started if runs(pid)]
+    assert not list(tmp_path.glob("demo.gpkg*"))
