@@ -222,38 +222,6 @@ class GridSource:
         y = self.y0 + np.asarray(row, dtype=float) * self.dy
         return self.projection.to_lonlat(x, y)
 
-    def window_around(self, lon_deg: ArrayLike, lat_deg: ArrayLike, margin_cells: int) -> Indices:
-        """Smallest window that holds the cells around all points and a margin: row0, row1, col0, col1, half-open.
-
-        Points off the grid are left out of account. Where the grid goes round the globe the window may run over
-        its seam: col1 is then above the number of columns.
-
-        Raises
-        ------
-        GridError
-            If no point lies on the grid.
-        """
-        col, row = self.index_of(lon_deg, lat_deg)
-        on_grid = (row >= -0.5) & (row <= self.n_rows - 0.5)
-        if not self.wraps:
-            on_grid &= (col >= -0.5) & (col <= self.n_cols - 0.5)
-        if not on_grid.any():
-            raise GridError(f"{self.path}: none of the points lies on the grid; compare its box with theirs")
-        col, row = col[on_grid], row[on_grid]
-        row0 = max(int(np.floor(row.min())) - margin_cells, 0)
-        row1 = min(int(np.floor(row.max())) + 2 + margin_cells, self.n_rows)
-        if not self.wraps:
-            col0 = max(int(np.floor(col.min())) - margin_cells, 0)
-            return row0, row1, col0, min(int(np.floor(col.max())) + 2 + margin_cells, self.n_cols)
-        cells = np.unique(np.floor(col).astype(int) % self.n_cols)
-        gaps = np.diff(cells, append=cells[0] + self.n_cols)
-        widest = int(gaps.argmax())
-        width = self.n_cols - int(gaps[widest]) + 2 + 2 * margin_cells
-        if width >= self.n_cols:
-            return row0, row1, 0, self.n_cols
-        col0 = int(cells[(widest + 1) % cells.size] - margin_cells) % self.n_cols
-        return row0, row1, col0, col0 + width
-
     def read(self, row0: int, row1: int, col0: int, col1: int) -> Grid:
         """Depths of a half-open window, clipped to the grid; columns are taken round the globe where it wraps.
 
