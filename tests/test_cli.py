@@ -432,7 +432,7 @@ def runs(pid):
         return False
 
 
-@pytest.mark.skipif(not Path("/proc/self/task").exists(), reason="asks Linux for the processes")
+@pytest.mark.skipif(not Path(f"/proc/self/task/{os.getpid()}/children").exists(), reason="asks Linux for the processes")
 @pytest.mark.parametrize(("number", "code"), [(signal.SIGTERM, 143), (signal.SIGKILL, -9)])
 def test_ended_run_leaves_no_worker_and_no_file(tmp_path, number, code):
     """However the parent ends, its workers end too."""
