@@ -1,7 +1,9 @@
 """A file written beside its target and put in its place only when whole."""
 
 import os
+import shutil
 import sqlite3
+import tempfile
 from collections.abc import Iterator
 from contextlib import closing, contextmanager
 from pathlib import Path
@@ -50,31 +52,40 @@ def check_target(path: str | Path, *, overwrite: bool) -> None:
 def replacing(path: str | Path) -> Iterator[Path]:
     """Name to write to beside `path`, moved onto it at the end if nothing went wrong.
 
-    On any failure the part is removed and the old file stays as it was. The old file is replaced only while no other
-    program holds it: replacing a SQLite file that is open elsewhere in write-ahead mode can destroy it.
+    The part stands in a folder of its own, made afresh, so that no other file is touched and two runs that write the
+    same output do not meet: the last to end wins. On any failure it is removed and the old file stays as it was. The
+    old file is replaced only while no other program holds it: replacing a SQLite file that is open elsewhere in
+    write-ahead mode can destroy it.
 
     Raises
     ------
     LayerError
-        If the old file is in use, or the new one cannot be moved into its place.
+        If the old file is in use, the new one cannot be moved into its place, or files of SQLite's stand beside a
+        target that is not there.
     """
     target = Path(path).resolve()  # through links, so that a link stays one
-    part = target.with_name(f"{target.name}.part.gpkg")
-    _remove(part)
+    folder = Path(tempfile.mkdtemp(prefix=f".{target.name}.", suffix=".part", dir=target.parent))
+    part = folder / target.name
     try:
         yield part
-        if target.exists():
-            _refuse_if_held(target)
-        for suffix in _COMPANIONS:  # a journal left by a crash would be played back into the new file
-            target.with_name(target.name + suffix).unlink(missing_ok=True)
+        _clear_companions(target)
         _move(part, target)
     finally:
-        _remove(part)
+        shutil.rmtree(folder, ignore_errors=True)
 
 
-def _remove(part: Path) -> None:
-    for suffix in ("", *_COMPANIONS):
-        part.with_name(part.name + suffix).unlink(missing_ok=True)
+def _clear_companions(target: Path) -> None:
+    """Remove what a crash left beside the old file: a journal would be played back into the new one."""
+    companions = [path for suffix in _COMPANIONS if (path := target.with_name(target.name + suffix)).exists()]
+    if target.exists():
+        _refuse_if_held(target)
+        for path in companions:
+            path.unlink(missing_ok=True)
+    elif companions:
+        names = ", ".join(path.name for path in companions)
+        raise LayerError(
+            f"output {target}: {names} beside it would be taken as part of it; move them or use another name"
+        )
 
 
 def _move(part: Path, target: Path) -> None:

@@ -35,7 +35,7 @@ def test_the_new_file_appears_only_at_the_end(tmp_path):
     with replacing(target) as part:
         part.write_text("new")
         assert not target.exists()
-        assert part.parent == tmp_path
+        assert part.parent.parent == tmp_path  # the same file system: moving is one step
         assert part.suffix == ".gpkg"
     assert target.read_text() == "new"
     assert names(tmp_path) == ["a.gpkg"]
@@ -56,13 +56,24 @@ def test_a_failure_leaves_the_old_file_bit_for_bit_and_no_part(tmp_path):
     assert names(tmp_path) == ["a.gpkg"]
 
 
-def test_a_part_left_by_a_killed_run_is_no_obstacle(tmp_path):
-    (tmp_path / "a.gpkg.part.gpkg").write_text("left over")
-    (tmp_path / "a.gpkg.part.gpkg-journal").write_text("left over")
-    with replacing(tmp_path / "a.gpkg") as part:
-        assert names(tmp_path) == []
-        part.write_text("new")
+def test_two_runs_that_write_the_same_file_do_not_meet(tmp_path):
+    """With one part name for both, each removed the other's part and both failed."""
+    target = tmp_path / "a.gpkg"
+    with replacing(target) as first:
+        first.write_text("first")
+        with replacing(target) as second:
+            second.write_text("second")
+        assert target.read_text() == "second"
+        assert first.read_text() == "first"
+    assert target.read_text() == "first"
     assert names(tmp_path) == ["a.gpkg"]
+
+
+@pytest.mark.parametrize("name", ["a.gpkg.part.gpkg", "a.gpkg.part", "a.gpkg.part.gpkg-journal", "a.gpkg.bak"])
+def test_no_other_file_of_the_user_is_touched(tmp_path, name):
+    (tmp_path / name).write_text("precious")
+    replace(tmp_path / "a.gpkg")
+    assert (tmp_path / name).read_text() == "precious"
 
 
 @pytest.mark.parametrize("mode", ["DELETE", "WAL"])
@@ -92,11 +103,19 @@ def test_a_file_that_another_program_holds_is_not_replaced(tmp_path, mode, readi
 
 
 def test_a_journal_left_by_a_crash_is_not_played_back_into_the_new_file(tmp_path):
+    (tmp_path / "a.gpkg").write_text("no database " * 100)
     (tmp_path / "a.gpkg-journal").write_bytes(b"\0" * 512)
     (tmp_path / "a.gpkg-wal").write_bytes(b"\0" * 512)
-    with replacing(tmp_path / "a.gpkg") as part:
-        part.write_text("new")
+    replace(tmp_path / "a.gpkg")
     assert names(tmp_path) == ["a.gpkg"]
+
+
+def test_a_journal_beside_no_file_is_left_alone_and_named(tmp_path):
+    (tmp_path / "a.gpkg-wal").write_text("precious")
+    with pytest.raises(LayerError, match=r"a\.gpkg-wal beside it would be taken as part of it; move them"):
+        replace(tmp_path / "a.gpkg")
+    assert names(tmp_path) == ["a.gpkg-wal"]
+    assert (tmp_path / "a.gpkg-wal").read_text() == "precious"
 
 
 def test_an_old_file_that_is_no_database_is_replaced(tmp_path):
