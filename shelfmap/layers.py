@@ -148,9 +148,15 @@ def _output_projection(crs: str) -> Projection:
     if authority.upper() != "EPSG" or not code.isdecimal():
         raise LayerError(f"output crs {crs!r} is not of the form EPSG:n; GIS programs need a code, such as EPSG:4326")
     try:
-        return Projection(crs)
+        projection = Projection(crs)
     except GridError as error:
         raise LayerError(f"output {error}") from error
+    if not (projection.crs.is_geographic or projection.crs.is_projected):
+        raise LayerError(
+            f"output crs {crs!r} ({projection.crs.name}) is neither geographic nor projected; "
+            "give one that maps are drawn in, such as EPSG:4326"
+        )
+    return projection
 
 
 @contextmanager

@@ -1,6 +1,6 @@
 """Elevations as a GeoTIFF on disk: whole or not at all."""
 
-import contextlib
+import tempfile
 from collections.abc import Mapping
 from pathlib import Path
 from typing import Any
@@ -159,15 +159,13 @@ def replace_file(path: Path, content: bytes | memoryview) -> None:
     '80 m'
     """
     target = path.resolve()  # through links, so that a link stays one
-    part = target.with_name(f"{target.name}.part")
     try:
-        part.write_bytes(content)
-        part.replace(target)
+        with tempfile.TemporaryDirectory(prefix=f".{target.name}.", suffix=".part", dir=target.parent) as folder:
+            part = Path(folder, target.name)  # a folder of its own: no other file is touched
+            part.write_bytes(content)
+            part.replace(target)
     except OSError as error:
         raise GridError(
             f"{path} cannot be written: {error.strerror}; free space, close the program that holds it "
             "or choose a folder you may write to"
         ) from error
-    finally:
-        with contextlib.suppress(OSError):
-            part.unlink()

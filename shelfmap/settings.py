@@ -59,6 +59,8 @@ def _deep(value: object) -> object:
 def _as_path(value: object) -> object:
     if value == "":
         raise ValueError("path is empty")
+    if isinstance(value, str) and "\0" in value:
+        raise ValueError("path holds a null character; leave it out")
     return value
 
 
@@ -322,6 +324,8 @@ class Settings(_Stage):
             raise SettingsError(f"settings file {path} is no text in UTF-8; save it as UTF-8") from error
         except tomllib.TOMLDecodeError as error:
             raise SettingsError(f"settings file {path} is no valid TOML: {error}") from error
+        except RecursionError as error:
+            raise SettingsError(f"settings file {path} nests its values too deeply; two levels will do") from error
         return cls.from_dict(content, folder=path.resolve().parent, where=str(path))
 
     @classmethod

@@ -206,6 +206,8 @@ def test_another_coordinate_system_is_written_by_its_code_and_reads_back_in_degr
     [
         ("WGS 84", "output crs 'WGS 84' is not of the form EPSG:n"),
         ("+proj=laea", "not of the form EPSG:n"),
+        ("EPSG:5773", "neither geographic nor projected"),  # a vertical system: axes would come out swapped
+        ("EPSG:4978", "neither geographic nor projected"),
         ("EPSG:99999", "output coordinate system 'EPSG:99999' is unknown"),
     ],
 )

@@ -241,3 +241,11 @@ def test_any_content_is_either_taken_or_refused_as_settings(content):
     else:
         again = Settings.from_dict(json.loads(found.model_dump_json()))
         assert again == found
+
+
+def test_null_characters_and_endless_nesting_are_one_sentence(tmp_path):
+    with pytest.raises(SettingsError, match="holds a null character"):
+        read(output={"path": "a\0b.gpkg"})
+    (tmp_path / "deep.toml").write_text("a=" + "[" * 5000, encoding="utf-8")
+    with pytest.raises(SettingsError, match="nests its values too deeply"):
+        Settings.from_toml(tmp_path / "deep.toml")
