@@ -201,9 +201,7 @@ def write_transects(settings: Settings, path: Path, *, overwrite: bool = False) 
     source = open_grid(settings.grid)
     coast = make_coast(source, settings)
     transects = make_transects(source, coast, settings)
-    no_picks = np.full(len(transects), None, dtype=object)
-    sections = _sections(source, coast, transects, settings, no_picks)
-    profiles = stack([sample_section(section) for section in sections])
+    profiles = stack([sample_section(section) for section in _sections(source, coast, transects, settings)])
     layer = Layer(
         name="transect_lines",
         columns=transect_columns(transects, profiles),
@@ -234,9 +232,15 @@ def _length_km(coast: Coast) -> float:
 
 
 def _sections(
-    source: GridSource, coast: Coast, transects: Transects, settings: Settings, picks: NDArray[np.object_]
+    source: GridSource,
+    coast: Coast,
+    transects: Transects,
+    settings: Settings,
+    picks: NDArray[np.object_] | None = None,
 ) -> list[Section]:
-    """Cut the transects into sections of neighbouring stations."""
+    """Cut the transects, and the breaks picked on them, into sections of neighbouring stations."""
+    if picks is None:
+        picks = np.full(len(transects), None, dtype=object)
     step_m = step_of(source, settings.transects)
     if settings.transects.step_km is not None and step_m > settings.transects.step_km * 1e3:
         _LOG.warning(

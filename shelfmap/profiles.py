@@ -177,16 +177,30 @@ def place_on(transects: Transects, at_m: FloatArray) -> tuple[FloatArray, FloatA
 
 
 def distance_along(transects: Transects, row: int, lon_deg: float, lat_deg: float) -> float:
-    """Distance from the station to where a point near a transect projects on it, metres; past its ends, the end."""
+    """Distance from the station to where a point near a transect projects on it.
+
+    Parameters
+    ----------
+    transects : Transects
+        The lines.
+    row : int
+        Which of them.
+    lon_deg, lat_deg : float
+        The point.
+
+    Returns
+    -------
+    float
+        Metres; for a point past an end of the transect, that end. Legs of 10 km count as plane triangles.
+    """
     known = np.isfinite(transects.node_m[row])
     node_m = transects.node_m[row, known]
     node_lon, node_lat = transects.node_lon_deg[row, known], transects.node_lat_deg[row, known]
     away_m, _ = distance_bearing(node_lon, node_lat, lon_deg, lat_deg)
     leg_m = np.diff(node_m)
-    share = np.clip((away_m[:-1] ** 2 - away_m[1:] ** 2 + leg_m**2) / (2 * leg_m**2), 0.0, 1.0)
-    off_m2 = away_m[:-1] ** 2 - 2 * share * leg_m * 0.5 * (away_m[:-1] ** 2 - away_m[1:] ** 2 + leg_m**2) / leg_m
-    off_m2 += (share * leg_m) ** 2
-    nearest = int(np.argmin(off_m2))
+    ahead = away_m[:-1] ** 2 - away_m[1:] ** 2 + leg_m**2  # law of cosines in the triangle of point and leg
+    share = np.clip(ahead / (2 * leg_m**2), 0.0, 1.0)
+    nearest = int(np.argmin(away_m[:-1] ** 2 - share * ahead + (share * leg_m) ** 2))
     return float(node_m[nearest] + share[nearest] * leg_m[nearest])
 
 

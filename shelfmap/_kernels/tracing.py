@@ -1,5 +1,7 @@
 """Compiled loops of the profiles: find the shore on a transect, sample seaward, mend spikes and short gaps."""
 
+from typing import NamedTuple
+
 import numpy as np
 from numba import njit
 from numpy.typing import NDArray
@@ -20,11 +22,29 @@ AT_SHORE, IN_WATER, NO_WATER, START_OUTSIDE, START_VOID = 0, 1, 2, 3, 4
 _OUTSIDE = -1.0e30
 
 
+class Track(NamedTuple):
+    """A transect on a window of the grid."""
+
+    depth_m: F32
+    """(rows, cols) window, NaN void."""
+    row0: int
+    """Row of the grid that the window begins with."""
+    col0: int
+    """Column of the grid that the window begins with."""
+    wrap_cols: int
+    """Columns round the globe; 0 where the grid does not close."""
+    node_m: F64
+    """(k,) distance of each node from the station, metres, rising."""
+    node_row: F64
+    """(k,) grid index of each node."""
+    node_col: F64
+    """(k,) grid index of each node."""
+
+
 @njit(cache=True)
-def _depth_at(
-    depth: F32, row0: int, col0: int, wrap_cols: int, node_m: F64, node_row: F64, node_col: F64, at_m: float
-) -> float:
+def _depth_at(track: Track, at_m: float) -> float:
     """Depth on a transect at a distance from its station; NaN in a void, `_OUTSIDE` beyond grid or transect."""
+    depth, node_m = track.depth_m, track.node_m
     n = node_m.shape[0]
     if at_m < node_m[0] or at_m > node_m[n - 1]:
         return _OUTSIDE
@@ -37,8 +57,10 @@ def _depth_at(
             high = middle
     part = (at_m - node_m[low]) / (node_m[high] - node_m[low])
     n_rows, n_cols = depth.shape
-    i, up = locate(node_row[low] + part * (node_row[high] - node_row[low]), row0, n_rows, 0)
-    j, right = locate(node_col[low] + part * (node_col[high] - node_col[low]), col0, n_cols, wrap_cols)
+    i, up = locate(track.node_row[low] + part * (track.node_row[high] - track.node_row[low]), track.row0, n_rows, 0)
+    j, right = locate(
+        track.node_col[low] + part * (track.node_col[high] - track.node_col[low]), track.col0, n_cols, track.wrap_cols
+    )
     if i < 0 or j < 0:
         return _OUTSIDE
     next_col = j + 1 if j + 1 < n_cols else 0  # on the last column it weighs nothing, or the grid closes
@@ -46,22 +68,11 @@ def _depth_at(
 
 
 @njit(cache=True)
-def _bisect(
-    depth: F32,
-    row0: int,
-    col0: int,
-    wrap_cols: int,
-    node_m: F64,
-    node_row: F64,
-    node_col: F64,
-    dry_m: float,
-    wet_m: float,
-    hair_m: float,
-) -> float:
+def _bisect(track: Track, dry_m: float, wet_m: float, hair_m: float) -> float:
     """Where the water begins between a dry and a wet place, to a hundredth of a millimetre."""
     for _ in range(60):
         middle = 0.5 * (dry_m + wet_m)
-        d = _depth_at(depth, row0, col0, wrap_cols, node_m, node_row, node_col, middle)
+        d = _depth_at(track, middle)
         if d > hair_m:
             wet_m = middle
         else:
@@ -72,46 +83,22 @@ def _bisect(
 
 
 @njit(cache=True)
-def seek_landward(
-    depth: F32,
-    row0: int,
-    col0: int,
-    wrap_cols: int,
-    node_m: F64,
-    node_row: F64,
-    node_col: F64,
-    look_m: float,
-    hair_m: float,
-) -> tuple[float, int]:
+def seek_landward(track: Track, look_m: float, hair_m: float) -> tuple[float, int]:
     """Where the shore lies behind a station in the water; the station itself where the transect meets none."""
-    look_m = min(look_m, -0.25 * node_m[0])  # looks, however coarse the grid; none where the transect starts here
+    look_m = min(look_m, -0.25 * track.node_m[0])  # looks, however coarse the grid; none where the transect starts here
     at_m = -look_m
-    while look_m > 0.0 and at_m >= node_m[0]:
-        d = _depth_at(depth, row0, col0, wrap_cols, node_m, node_row, node_col, at_m)
+    while look_m > 0.0 and at_m >= track.node_m[0]:
+        d = _depth_at(track, at_m)
         if d == _OUTSIDE or np.isnan(d):
             break
         if d <= hair_m:
-            return _bisect(
-                depth, row0, col0, wrap_cols, node_m, node_row, node_col, at_m, at_m + look_m, hair_m
-            ), AT_SHORE
+            return _bisect(track, at_m, at_m + look_m, hair_m), AT_SHORE
         at_m -= look_m
     return 0.0, IN_WATER
 
 
 @njit(cache=True)
-def seek_seaward(
-    depth: F32,
-    row0: int,
-    col0: int,
-    wrap_cols: int,
-    node_m: F64,
-    node_row: F64,
-    node_col: F64,
-    seek_m: float,
-    look_m: float,
-    short: int,
-    hair_m: float,
-) -> tuple[float, int]:
+def seek_seaward(track: Track, seek_m: float, look_m: float, short: int, hair_m: float) -> tuple[float, int]:
     """Where the water begins before a station on land, within `seek_m`.
 
     A pool of fewer than four looks of `look_m` does not count where more water follows. Where depth is missing between
@@ -122,7 +109,7 @@ def seek_seaward(
     found_m, shore_dry_m, dry_m, wet_run, reason = 0.0, 0.0, 0.0, 0, NO_WATER
     at_m = look_m
     while at_m <= seek_m and wet_run < 4:
-        d = _depth_at(depth, row0, col0, wrap_cols, node_m, node_row, node_col, at_m)
+        d = _depth_at(track, at_m)
         if d == _OUTSIDE:
             reason = AT_SHORE if reason == AT_SHORE else START_OUTSIDE
             break
@@ -141,59 +128,35 @@ def seek_seaward(
         return 0.0, reason
     missing_m = found_m - shore_dry_m - look_m
     if missing_m < 0.5 * look_m:
-        return _bisect(depth, row0, col0, wrap_cols, node_m, node_row, node_col, shore_dry_m, found_m, hair_m), AT_SHORE
+        return _bisect(track, shore_dry_m, found_m, hair_m), AT_SHORE
     if missing_m < (2 * short + 0.5) * look_m:
         return shore_dry_m, AT_SHORE
     return 0.0, START_VOID
 
 
 @njit(cache=True)
-def find_shore(
-    depth: F32,
-    row0: int,
-    col0: int,
-    wrap_cols: int,
-    node_m: F64,
-    node_row: F64,
-    node_col: F64,
-    seek_m: float,
-    look_m: float,
-    short: int,
-    hair_m: float,
-) -> tuple[float, int]:
+def find_shore(track: Track, seek_m: float, look_m: float, short: int, hair_m: float) -> tuple[float, int]:
     """Where on a transect its water begins (distance from the station), and how it starts."""
-    here = _depth_at(depth, row0, col0, wrap_cols, node_m, node_row, node_col, 0.0)
+    here = _depth_at(track, 0.0)
     if here == _OUTSIDE:
         return 0.0, START_OUTSIDE
     if np.isnan(here):
         return 0.0, START_VOID
     if here > hair_m:
-        return seek_landward(depth, row0, col0, wrap_cols, node_m, node_row, node_col, look_m, hair_m)
-    return seek_seaward(depth, row0, col0, wrap_cols, node_m, node_row, node_col, seek_m, look_m, short, hair_m)
+        return seek_landward(track, look_m, hair_m)
+    return seek_seaward(track, seek_m, look_m, short, hair_m)
 
 
 @njit(cache=True)
-def sample_seaward(
-    depth: F32,
-    row0: int,
-    col0: int,
-    wrap_cols: int,
-    node_m: F64,
-    node_row: F64,
-    node_col: F64,
-    shore_m: float,
-    at_shore: bool,
-    step_m: float,
-    out: F64,
-) -> tuple[int, int]:
+def sample_seaward(track: Track, shore_m: float, at_shore: bool, step_m: float, out: F64) -> tuple[int, int]:
     """Depths every `step_m` from the shore; how many lie on the transect and in the grid, and why they stop."""
-    last_m = node_m[node_m.shape[0] - 1]
+    last_m = track.node_m[track.node_m.shape[0] - 1]
     last_m = min(last_m, shore_m + last_m)  # a shore landward of the station makes no transect longer
     for j in range(out.shape[0]):
         at_m = shore_m + j * step_m
         if at_m > last_m:
             return j, LENGTH
-        d = _depth_at(depth, row0, col0, wrap_cols, node_m, node_row, node_col, at_m)
+        d = _depth_at(track, at_m)
         if d == _OUTSIDE:
             return j, GRID_EDGE
         out[j] = d
@@ -316,13 +279,14 @@ def trace_rows(
     """
     work = np.empty(out_depth_m.shape[1])
     for k in range(node_m.shape[0]):
-        nm, nr, nc = node_m[k, : n_nodes[k]], node_row[k, : n_nodes[k]], node_col[k, : n_nodes[k]]
-        shore_m, start = find_shore(depth, row0, col0, wrap_cols, nm, nr, nc, seek_m[k], 0.5 * step_m, short, hair_m)
+        nodes = slice(n_nodes[k])
+        track = Track(depth, row0, col0, wrap_cols, node_m[k, nodes], node_row[k, nodes], node_col[k, nodes])
+        shore_m, start = find_shore(track, seek_m[k], 0.5 * step_m, short, hair_m)
         out_shore_m[k], out_start[k] = shore_m, start
         if start > IN_WATER:
             continue
         row = out_depth_m[k]
-        n, end = sample_seaward(depth, row0, col0, wrap_cols, nm, nr, nc, shore_m, start == AT_SHORE, step_m, row)
+        n, end = sample_seaward(track, shore_m, start == AT_SHORE, step_m, row)
         n_kept, reason, land_m, bridged, voids = mend_gaps(row, n, step_m, short, share, hair_m, out_filled[k])
         if reason >= 0:
             end = reason

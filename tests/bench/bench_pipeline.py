@@ -72,10 +72,12 @@ def test_stages(settings, capsys, tmp_path):
 
 def test_two_processes_against_one(settings, capsys):
     """Processes cost their start (imports, some 1.5 s each) and win only on long coasts."""
-    took = []
+    took, gains = [], []
     for workers in (1, 2):
         start = time.perf_counter()
-        screen(settings, overwrite=True, workers=workers)
+        run = screen(settings, overwrite=True, workers=workers)
         took.append(time.perf_counter() - start)
+        gains.append(run.screened.waves.damped_gain)
+    np.testing.assert_array_equal(*gains)
     with capsys.disabled():
         print(f"\n{time.strftime('%F')} 1 worker {took[0]:.1f} s, 2 workers {took[1]:.1f} s: {took[0] / took[1]:.2f}x")  # noqa: T201
