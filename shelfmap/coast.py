@@ -18,7 +18,7 @@ from scipy import ndimage
 from shelfmap.basins import SHORE_HAIR_M, Basins, Tile, Tiling, label_basins
 from shelfmap.chains import join_ends
 from shelfmap.errors import CoastError
-from shelfmap.geodesy import area_m2, distance_bearing, geodesic_nodes, local_projection
+from shelfmap.geodesy import area_m2, distance_bearing, geodesic_nodes, local_projection, unwrap_along
 from shelfmap.grid import INSIDE, GridSource
 from shelfmap.settings import CoastSettings
 
@@ -29,6 +29,8 @@ Geometries = NDArray[np.object_]
 
 #: Round joins of the closing use this many segments a quarter circle: chords stay within 0.5 % of the radius.
 QUARTER_SEGMENTS = 8
+#: Edges of land polygons are cut at this many cells: longer ones, straight in the grid, bow off in the local plane.
+LONGEST_EDGE_CELLS = 4.0
 #: Seams between tiles lie off the cells by this much of one: a coast along the cells would lie on both sides of them.
 SEAM_CELLS = 0.3719
 
@@ -127,8 +129,8 @@ def trace_coast(source: GridSource, settings: CoastSettings, land: Geometries | 
     lines, dropped = _sort_out(source, chains, settings)
     if not lines:
         raise CoastError(
-            f"{source.path}: no shoreline at level {settings.level_m:g} m in this region: all of it is water, or its "
-            f"islands are below coast.smallest_island_km2 = {settings.smallest_island_km2:g}; "
+            f"{source.path}: no shoreline at level {settings.level_m:g} m here: all of it is water (or land of "
+            f"coast.file), or its islands are below coast.smallest_island_km2 = {settings.smallest_island_km2:g}; "
             "where missing cells are the land, set grid.void_is_land = true"
         )
     return Coast(
@@ -262,7 +264,8 @@ class _Tracer:
             frame = (window.col0, window.row0, window.col1 - 1, window.row1 - 1)
             cut = shapely.clip_by_rect(self.land, *frame)
             parts = shapely.get_parts(cut[~shapely.is_empty(cut)])
-            return np.asarray(parts[shapely.get_dimensions(parts) == 2])
+            polygons = parts[shapely.get_dimensions(parts) == 2]
+            return np.asarray(shapely.segmentize(polygons, max_segment_length=LONGEST_EDGE_CELLS))
         grid = self.source.read(window.row0, window.row1, window.col0, window.col1)
         depth_m = grid.depth_m.astype(np.float64) + self.settings.level_m
         with np.errstate(invalid="ignore"):
@@ -319,7 +322,8 @@ def _sort_out(
     for chain in chains:
         if source.wraps:
             chain[:, 0] -= source.n_cols * np.round((chain[:, 0].mean() - (source.n_cols - 1) / 2) / source.n_cols)
-        line = CoastLine.through(*source.lonlat_of(chain[:, 0], chain[:, 1]))
+        lon_deg, lat_deg = source.lonlat_of(chain[:, 0], chain[:, 1])
+        line = CoastLine.through(unwrap_along(lon_deg), lat_deg)
         if len(line.lon_deg) < 2 or line.length_m <= 0:
             continue
         signed = 0.5 * float(np.sum(chain[:-1, 0] * chain[1:, 1] - chain[1:, 0] * chain[:-1, 1]))
@@ -364,8 +368,7 @@ def coast_from_lines(source: GridSource, lines: Geometries, name: str) -> Coast:
     coast: list[CoastLine] = []
     for part in parts:
         lonlat = shapely.get_coordinates(part)
-        lonlat[:, 0] = np.unwrap(lonlat[:, 0], period=360.0)
-        line = CoastLine.through(lonlat[:, 0], lonlat[:, 1])
+        line = CoastLine.through(unwrap_along(lonlat[:, 0]), lonlat[:, 1])
         if len(line.lon_deg) < 2:
             continue
         right, left = (_wet_share(source, line, side) for side in (90.0, -90.0))

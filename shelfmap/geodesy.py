@@ -17,6 +17,7 @@ __all__ = [
     "distance_bearing",
     "geodesic_nodes",
     "local_projection",
+    "unwrap_along",
     "unwrap_lon_deg",
 ]
 
@@ -70,7 +71,7 @@ def geodesic_nodes(
     Returns
     -------
     lon_deg, lat_deg : (n, m) array of float
-        Degrees; longitudes unwrapped round each start.
+        Degrees; longitudes without jumps along each geodesic, the first within half a turn of its start.
 
     Examples
     --------
@@ -86,7 +87,8 @@ def geodesic_nodes(
         np.array(a) for a in np.broadcast_arrays(lon, lat, bearing, distance)
     )
     end_lon, end_lat, _ = _GEOD.fwd(lon_full, lat_full, bearing_full, distance_full)
-    return unwrap_lon_deg(end_lon, lon), np.asarray(end_lat)
+    end_lon = unwrap_along(end_lon)
+    return end_lon - 360.0 * np.round((end_lon[:, :1] - lon) / 360.0), np.asarray(end_lat)
 
 
 def unwrap_lon_deg(lon_deg: ArrayLike, middle_deg: ArrayLike) -> FloatArray:
@@ -102,6 +104,30 @@ def unwrap_lon_deg(lon_deg: ArrayLike, middle_deg: ArrayLike) -> FloatArray:
     # whole turns only, so that a longitude that needs none comes back bit for bit
     turns = np.floor((lon - middle + 180.0) / 360.0)
     return np.asarray(lon - 360.0 * turns)
+
+
+def unwrap_along(lon_deg: ArrayLike) -> FloatArray:
+    """Longitudes along lines, moved by whole turns so that no two neighbours differ by more than half a turn.
+
+    Parameters
+    ----------
+    lon_deg : (..., m) array_like of float
+        Degrees; neighbours along the last axis. NaN is left out of account.
+
+    Returns
+    -------
+    (..., m) array of float
+        Degrees; the first of each line stays. Whole turns only, so that one that needs none comes back bit for bit.
+
+    Examples
+    --------
+    >>> unwrap_along([178.0, -178.0, -175.0])
+    array([178., 182., 185.])
+    """
+    lon = np.array(lon_deg, dtype=float)
+    turns = np.nan_to_num(np.round(np.diff(lon, axis=-1) / 360.0))
+    lon[..., 1:] -= 360.0 * np.cumsum(turns, axis=-1)
+    return lon
 
 
 def area_m2(lon_deg: ArrayLike, lat_deg: ArrayLike) -> float:

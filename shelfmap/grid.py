@@ -29,6 +29,8 @@ StateArray = NDArray[np.uint8]
 
 #: No sea or mountain is farther from the zero than this, metres: such a value means "missing".
 FARTHEST_VALUE_M: Final = 12_000.0
+#: A value within that range that writers of grids use for "missing".
+FILL_VALUE: Final = -9999.0
 
 # A sample of a large grid: this many windows a side, of this many cells a side.
 _SAMPLE_WINDOWS: Final = 8
@@ -308,6 +310,8 @@ def open_grid(settings: GridSettings) -> GridSource:
     check_unit(header.vertical.get("units", ""), name)
     as_stored = _source_of(header)
     lowest, highest = _sampled_range(as_stored)
+    if FILL_VALUE in (lowest, highest):
+        _LOG.warning("%s holds %g, which mostly means missing: then set grid.nodata = %g", name, FILL_VALUE, FILL_VALUE)
     positive, why = settings.positive, "set by grid.positive"
     if positive == "auto":
         positive, why = decide_positive(header.vertical, lowest, highest, name)

@@ -31,7 +31,7 @@ def check_target(path: str | Path, *, overwrite: bool) -> None:
         If the name does not end in .gpkg, names a folder, or the file or its folder cannot be written to.
     """
     path = Path(path)
-    folder = path.resolve().parent
+    folder = _real(path).parent
     if path.suffix.lower() != ".gpkg":
         raise LayerError(
             f"output {path} does not end in .gpkg; layers are written as GeoPackage: name it {path.stem}.gpkg"
@@ -63,7 +63,7 @@ def replacing(path: str | Path) -> Iterator[Path]:
         If the old file is in use, the new one cannot be moved into its place, or files of SQLite's stand beside a
         target that is not there.
     """
-    target = Path(path).resolve()  # through links, so that a link stays one
+    target = _real(Path(path))
     folder = Path(tempfile.mkdtemp(prefix=f".{target.name}.", suffix=".part", dir=target.parent))
     part = folder / target.name
     try:
@@ -72,6 +72,14 @@ def replacing(path: str | Path) -> Iterator[Path]:
         _move(part, target)
     finally:
         shutil.rmtree(folder, ignore_errors=True)
+
+
+def _real(path: Path) -> Path:
+    """Follow links, so that a link stays one when its target is replaced."""
+    try:
+        return path.resolve()
+    except (OSError, RuntimeError) as error:  # Python 3.11 and 3.12 raise RuntimeError for links in a circle
+        raise LayerError(f"output {path} is a link that leads nowhere; remove it or give another name") from error
 
 
 def _clear_companions(target: Path) -> None:

@@ -37,6 +37,9 @@ CURVE_PERIODS_H: Final = np.geomspace(0.5, 48.0, 64)
 #: A curve shows periods from this share of the travel time on: below, its peaks lie closer than its points.
 CURVE_LEAST_SHARE: Final = 0.25
 
+#: Water is sought at least this many cells before a station on land, however little the coast is generalised.
+LEAST_SEEK_CELLS: Final = 2.0
+
 _T = TypeVar("_T")
 #: Distances of the samples, depths, breaks, depth of the deep sea, Coriolis parameter: what the physics is given.
 _Rows = tuple[FloatArray, FloatArray, FloatArray, FloatArray, FloatArray]
@@ -63,7 +66,7 @@ def sample_section(section: Section) -> Profiles:
         section.source,
         section.transects,
         section.step_m,
-        seek_m=section.settings.coast.generalise_m / 2,
+        seek_m=max(section.settings.coast.generalise_m / 2, LEAST_SEEK_CELLS * section.source.step_m),
         islets=section.islets,
     )
 

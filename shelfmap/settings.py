@@ -177,7 +177,9 @@ class ShelfBreakSettings(_Stage):
     slope: float = Field(
         0.01, gt=0, lt=1, description="Gradient at which the continental slope begins (rise over run)."
     )
-    confirm_slope: float = Field(0.025, gt=0, lt=1, description="Gradient it must reach further on to count.")
+    confirm_slope: float = Field(
+        0.025, gt=0, lt=1, description="Gradient it must reach further on to count; at least `slope`."
+    )
     smoothing_km: float = Field(5.0, gt=0, le=200, description="Length over which gradients are taken, km.")
     sustain_km: float = Field(
         5.0, gt=0, le=200, description="Length over which the gradient must stay above `slope`, km."
@@ -218,7 +220,7 @@ class ResponseSettings(_Stage):
         ("M2", "S2", "N2", "K1", "O1"), description="Tidal constituents, by their usual names."
     )
     periods_h: tuple[Annotated[float, Field(ge=0.02, le=1000)], ...] = Field(
-        (), description="Further periods, h: seiches, meteotsunamis and tsunamis are just periods."
+        (), max_length=200, description="Further periods, h: seiches, meteotsunamis and tsunamis are just periods."
     )
     rotation: bool = Field(True, description="Whether the Earth turns.")
     friction_m_s: float = Field(1.0e-3, ge=0, le=0.1, description="Linear bottom friction, m/s.")
@@ -317,7 +319,7 @@ class Settings(_Stage):
         """
         path = Path(path)
         try:
-            content = tomllib.loads(path.read_text(encoding="utf-8"))
+            content = tomllib.loads(path.read_text(encoding="utf-8-sig"))
         except OSError as error:
             raise SettingsError(f"settings file {path} cannot be read: {error.strerror}") from error
         except UnicodeDecodeError as error:

@@ -271,18 +271,14 @@ def _remark_columns(
             remarks[row].append(text[row])
         n_doubts += holds
     computed = np.isfinite(screened.outer_depth_m)
-    slow = screened.waves.below_inertial & computed[:, None]
     for missed, reason in _why_not(screened):
         remarks[missed].append(reason)
-    for row in np.flatnonzero(slow.any(axis=1)):
-        names = [wave.name or f"{wave.period_h:g} h" for wave, is_slow in zip(waves, slow[row], strict=True) if is_slow]
-        remarks[row].append(f"below_inertial (slower than the inertial period): {', '.join(names)}")
-    uncomputed = np.isnan(screened.waves.damped_gain) & computed[:, None] & ~slow
-    for row in np.flatnonzero(uncomputed.any(axis=1)):
-        names = [
-            wave.name or f"{wave.period_h:g} h" for wave, is_not in zip(waves, uncomputed[row], strict=True) if is_not
-        ]
-        remarks[row].append(f"not computed (wave too short for this transect, or drag unsettled): {', '.join(names)}")
+    for reason, of_waves in _wave_remarks(screened, computed, holds_index):
+        for row in np.flatnonzero(of_waves.any(axis=1)):
+            names = [
+                wave.name or f"{wave.period_h:g} h" for wave, holds in zip(waves, of_waves[row], strict=True) if holds
+            ]
+            remarks[row].append(f"{reason}: {', '.join(names)}")
     for row in np.flatnonzero(holds_index & np.isnan(modes.pole_rad_s.real).all(axis=1)):
         remarks[row].append("no mode found")
     for row in np.flatnonzero(holds_index & (modes.q[:, 0] < 0.5)):
@@ -294,6 +290,18 @@ def _remark_columns(
         )
     notes = np.array(["; ".join(parts) or None for parts in remarks], dtype=object)
     return {"note": notes, "confidence": confidences(has_index, n_doubts)}
+
+
+def _wave_remarks(
+    screened: Screened, computed: NDArray[np.bool_], has_break: NDArray[np.bool_]
+) -> Iterator[tuple[str, NDArray[np.bool_]]]:
+    """Reasons for empty values at single waves, each with the transects and waves it holds for."""
+    response = screened.waves
+    slow = response.below_inertial & computed[:, None]
+    yield "below_inertial (slower than the inertial period)", slow
+    uncomputed = np.isnan(response.damped_gain) & computed[:, None] & ~slow
+    yield "not computed (wave too short for this transect, or drag unsettled)", uncomputed
+    yield "break near a node, no edge_ratio", np.isnan(response.edge_ratio) & has_break[:, None] & ~uncomputed
 
 
 def _why_not(screened: Screened) -> Iterator[tuple[int, str]]:

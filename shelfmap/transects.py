@@ -1,5 +1,6 @@
 """From a coast to transects: stations along it, seaward bearings, and the geodesics to sample."""
 
+import logging
 from dataclasses import dataclass
 from typing import Final
 
@@ -9,7 +10,7 @@ from numpy.typing import NDArray
 
 from shelfmap.coast import Coast, CoastLine
 from shelfmap.errors import TransectError
-from shelfmap.geodesy import distance_bearing, geodesic_nodes, unwrap_lon_deg
+from shelfmap.geodesy import distance_bearing, geodesic_nodes, unwrap_along, unwrap_lon_deg
 from shelfmap.settings import CoastSettings, TransectSettings
 
 __all__ = ["Transects", "coast_piece", "crossing_transects", "lay_transects", "transects_from_lines"]
@@ -17,6 +18,8 @@ __all__ = ["Transects", "coast_piece", "crossing_transects", "lay_transects", "t
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
 BoolArray = NDArray[np.bool_]
+
+_LOG = logging.getLogger(__name__)
 
 #: Straight lines of this length in longitude and latitude leave a geodesic by at most 2.3 m at latitude 45, 8 at 75
 #: and 13 at 80 (measured): far below a cell.
@@ -293,7 +296,7 @@ def _halfway(part: IntArray, coast_m: FloatArray, spacing_m: float) -> tuple[Flo
 
 def _nodes_of(lonlat: FloatArray) -> FloatArray:
     """Nodes (distance, longitude, latitude) along a drawn line, at most `NODE_M` apart on geodesics."""
-    lon_deg, lat_deg = np.unwrap(lonlat[:, 0], period=360.0), lonlat[:, 1]
+    lon_deg, lat_deg = unwrap_along(lonlat[:, 0]), lonlat[:, 1]
     leg_m, bearing_deg = distance_bearing(lon_deg[:-1], lat_deg[:-1], lon_deg[1:], lat_deg[1:])
     out = [np.array([[0.0], [lon_deg[0]], [lat_deg[0]]])]
     start_m = 0.0
@@ -318,6 +321,8 @@ def _identities(given: IntArray | None, n: int) -> IntArray:
     keep[first] = True
     keep &= given > 0
     out = given.astype(np.int64)
+    if not keep.all():
+        _LOG.warning("%d transects without a transect_id of their own were numbered anew", (~keep).sum())
     out[~keep] = max(0, int(given.max(initial=0))) + np.arange(1, (~keep).sum() + 1)
     return out
 

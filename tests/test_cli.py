@@ -456,3 +456,8 @@ def test_ended_run_leaves_no_worker_and_no_file(tmp_path, number, code):
         time.sleep(0.05)
     assert not [pid for pid in started if runs(pid)]
     assert not list(tmp_path.glob("demo.gpkg*"))
+
+
+def test_module_is_the_command():
+    done = subprocess.run([sys.executable, "-m", "shelfmap", "--version"], capture_output=True, text=True, check=True)
+    assert done.stdout == f"shelfmap, version {__version__}\n"

@@ -12,9 +12,13 @@ from shelfmap.basins import Tiling
 from shelfmap.chains import join_ends
 from shelfmap.coast import CoastLine, coast_from_lines, trace_coast
 from shelfmap.errors import CoastError
-from shelfmap.geodesy import distance_bearing
+from shelfmap.geodesy import distance_bearing, unwrap_lon_deg
+from shelfmap.grid import open_grid
+from shelfmap.layers import read_vector
+from shelfmap.pipeline import screen
 from shelfmap.profiles import place_on
-from shelfmap.settings import CoastSettings, ShelfBreakSettings
+from shelfmap.rasters import write_geotiff
+from shelfmap.settings import CoastSettings, GridSettings, Settings, ShelfBreakSettings
 from shelfmap.shelfbreak import find_shelf_breaks
 from shelfmap.synthetic import SyntheticGrid, round_coast, shelf_profile, straight_coast
 from shelfmap.transects import crossing_transects
@@ -450,3 +454,45 @@ def test_line_through_repeated_points_drops_them():
     line = CoastLine.through(np.array([0.0, 0.0, 1.0, 1.0]), np.array([0.0, 0.0, 0.0, 0.0]))
     assert line.lon_deg.tolist() == [0.0, 1.0]
     assert line.length_m == pytest.approx(111319.49, abs=0.01)
+
+
+# ---- over the pole
+
+
+@pytest.mark.parametrize("crs", ["EPSG:3413", "EPSG:3031"])
+@pytest.mark.parametrize("is_island", [True, False])
+def test_coast_round_a_pole_is_closed_and_faces_its_sea(tmp_path, crs, is_island):
+    """Longitudes run on round the pole, along coasts and transects, and the file is written."""
+    y, x = np.mgrid[0:100, 0:100] - 49.5
+    r = np.hypot(x, y)
+    shelf = np.where(r < 25, -100.0, -4000.0) if is_island else np.where(r > 22, -100.0, -4000.0)
+    elevation_m = np.where(r < 10 if is_island else r > 30, 200.0, shelf).astype(np.float32)
+    path = write_geotiff(
+        tmp_path / "g.tif", elevation_m, x0=-495e3, y0=-495e3, dx=1e4, dy=1e4, crs=crs, description="elevation"
+    )
+    settings = Settings.from_dict(
+        {
+            "grid": {"path": str(path)},
+            "coast": {"generalise_km": 50.0, "smallest_enclosed_sea_km2": 100.0},
+            "transects": {"spacing_km": 30.0, "length_km": 300.0},
+            "output": {"path": str(tmp_path / "out.gpkg")},
+        }
+    )
+    run = screen(settings)
+    (line,) = run.coast.lines
+    assert line.is_closed
+    assert abs(line.lon_deg[-1] - line.lon_deg[0]) == pytest.approx(360)
+    assert set(run.screened.status) == {"ok"}
+    away = 180.0 if (crs == "EPSG:3413") == is_island else 0.0  # from the north pole, and to the south pole, is south
+    off_deg = unwrap_lon_deg(run.screened.transects.bearing_deg - away, 0.0)
+    assert np.abs(off_deg).max() < 4  # cells of 10 km on a circle of 100 km
+    west, _, east, _ = shapely.bounds(shapely.get_parts(read_vector(run.path, "transects").geometry)).T
+    assert west.min() >= -180
+    assert east.max() <= 180
+
+
+def test_land_polygon_over_the_whole_grid_leaves_no_coast(write_grid):
+    """Its edges, straight in degrees, once bowed into the grid and carried stations."""
+    world = np.array([shapely.box(-180, -90, 180, 90)], dtype=object)
+    with pytest.raises(CoastError, match=r"water \(or land of coast\.file\)"):
+        trace_coast(open_grid(GridSettings(path=write_grid(scene(beach)))), CoastSettings(), land=world)

@@ -675,3 +675,15 @@ def test_missing_value_beyond_the_range_of_the_type(tmp_path):
     for dtype, nodata in ((np.float32, -1.7976931348623157e308), (np.int16, -99999)):
         source = opened(write_tif(tmp_path / f"{np.dtype(dtype)}.tif", ELEVATION.astype(dtype)), nodata=nodata)
         assert_array_equal(whole(source).depth_m, -ELEVATION)
+
+
+def test_undeclared_fill_is_warned_of_and_declared_fill_is_missing(tmp_path, caplog):
+    """-9999 lies within the depths of the sea, so it cannot be refused like larger ones."""
+    elevation = np.full((4, 4), -50, dtype=np.int16)
+    elevation[0, 0], elevation[1, 1] = -9999, 20
+    path = write_tif(tmp_path / "g.tif", elevation)
+    assert np.nanmax(whole(open_grid(GridSettings(path=path, positive="up"))).depth_m) == 9999
+    assert "holds -9999, which mostly means missing: then set grid.nodata = -9999" in caplog.text
+    caplog.clear()
+    assert np.nanmax(whole(open_grid(GridSettings(path=path, positive="up", nodata=-9999))).depth_m) == 50
+    assert caplog.text == ""

@@ -191,3 +191,10 @@ def test_a_read_only_folder_or_file_is_refused(tmp_path, monkeypatch, closed, me
     monkeypatch.setattr(os, "access", lambda path, mode: Path(path) != (tmp_path / closed))
     with pytest.raises(LayerError, match=message):
         check_target(target, overwrite=True)
+
+
+def test_links_in_a_circle_are_one_sentence(tmp_path):
+    loop = tmp_path / "loop.gpkg"
+    loop.symlink_to(loop)
+    with pytest.raises(LayerError, match=r"loop\.gpkg is a link that leads nowhere; remove it"):
+        check_target(loop, overwrite=True)

@@ -249,3 +249,13 @@ def test_null_characters_and_endless_nesting_are_one_sentence(tmp_path):
     (tmp_path / "deep.toml").write_text("a=" + "[" * 5000, encoding="utf-8")
     with pytest.raises(SettingsError, match="nests its values too deeply"):
         Settings.from_toml(tmp_path / "deep.toml")
+
+
+def test_byte_order_mark_is_no_fault(tmp_path):
+    (tmp_path / "a.toml").write_text('[grid]\npath = "dem.tif"\n', encoding="utf-8-sig")
+    assert Settings.from_toml(tmp_path / "a.toml").grid.path == tmp_path / "dem.tif"
+
+
+def test_more_periods_than_columns_are_refused_before_any_work():
+    with pytest.raises(SettingsError, match="at most 200 items"):
+        read(response={"periods_h": [float(n) for n in range(1, 202)]})

@@ -19,7 +19,7 @@ ORDER = [
     "errors", "constants", "words", "settings", "geodesy", "_kernels", "vertical", "rasterfile", "grid", "inspection",
     "rasters", "synthetic", "demo", "basins", "chains", "coast", "transects", "profiles", "shelfbreak", "deepsea",
     "modes", "response", "index", "assess", "columns", "antimeridian", "replacement", "vectors", "layers", "tables",
-    "inputs", "provenance", "sections", "pipeline", "cli",
+    "inputs", "provenance", "sections", "pipeline", "cli", "__main__",
 ]  # fmt: skip
 
 #: Libraries that only these modules import.

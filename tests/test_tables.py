@@ -141,7 +141,7 @@ def test_confidence_counts_the_doubts_named_in_the_note(layers):
     table = layers["transects"]
     good = table[table["confidence"] == "good"]
     told = good["note"].dropna().str.split("; ").explode()
-    assert told.str.contains("below_inertial|profile ends|overdamped").all()  # remarks that are no doubts
+    assert told.str.contains("below_inertial|near a node|profile ends|overdamped").all()  # remarks that are no doubts
     assert table.loc[table["confidence"] == "poor", "note"].str.contains("; ").all()
 
 
