@@ -4,6 +4,7 @@ Together with `rasters`, which writes, the only place that knows the raster libr
 from south to north, columns from west to east, scaled, and NaN where missing.
 """
 
+import math
 import re
 import warnings
 from collections.abc import Iterator, Mapping
@@ -22,6 +23,7 @@ from rasterio.windows import Window
 
 from shelfmap.errors import GridError
 from shelfmap.geodesy import WGS84, Projection
+from shelfmap.localfiles import CLOSED, archive_of, local_file, why_refused
 from shelfmap.settings import GridSettings
 
 __all__ = ["Indices", "RasterFile", "RasterHeader", "disk_file", "projection_of", "read_header"]
@@ -32,9 +34,10 @@ Indices = tuple[int, int, int, int]
 # Blocks the library keeps: enough for one row of tiles round the globe at 15 arc-seconds.
 _CACHE_MB: Final = 256
 
-_LOCAL_ARCHIVE: Final = re.compile(r"/vsi(zip|tar|gzip)/+(.+?\.(?:zip|tgz|tar\.gz|tar|gz))((?:/.*)?)", re.IGNORECASE)
-_NETWORK_PATH: Final = re.compile(r"/vsi|\b[a-z][a-z0-9+.-]+:/|^\w{2,}:|<", re.IGNORECASE)
-_NETWORK_FILE: Final = re.compile(rb"<(GDAL_WMS|GDAL_WMTS|WCS_GDAL|WMS_|WMT_|WMTS|Capabilities)")
+#: A compressed block is unpacked whole, however little of it is asked for: none may be larger, bytes.
+_MOST_BLOCK_BYTES: Final = 2**30
+#: A larger grid than this is a mistake or a trap: seven times all of the globe at 15 arc-seconds, cells.
+_MOST_CELLS: Final = 25_000_000_000
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -187,7 +190,7 @@ def projection_of(crs: str) -> Projection:
 def _opened(name: str) -> Iterator[tuple[Any, bool]]:
     """Open a raster without a network; also tell whether the file places its cells at all."""
     try:
-        with rasterio.Env(CPL_VSIL_CURL_ALLOWED_FILENAME="none", GDAL_CACHEMAX=_CACHE_MB):
+        with rasterio.Env(**CLOSED, GDAL_CACHEMAX=_CACHE_MB):
             with warnings.catch_warnings(record=True) as caught:
                 warnings.simplefilter("always")
                 dataset = rasterio.open(name)
@@ -212,35 +215,25 @@ def disk_file(path: Path) -> Path:
     """
     if path.is_dir():
         raise GridError(f"{path}: is a folder; name the raster file in it")
-    if path.is_file():
-        return path
-    text = path.as_posix()
-    if archive := _LOCAL_ARCHIVE.fullmatch(text):
-        # a Path folds the double slash of /vsizip//tmp/a.zip, so the archive may be absolute all the same
-        for candidate in (Path("/" + archive[2]), Path(archive[2])):
-            if candidate.is_file():
-                return candidate
-    elif _NETWORK_PATH.search(text):
-        raise GridError(
-            f"{text}: network paths are not opened in this version; download the grid and name the local file"
-        )
-    raise GridError(f"{text}: no such file; check grid.path, which is relative to the settings file")
+    file, why = local_file(path, "grid.path")
+    if file is None:
+        raise GridError(f"{path.as_posix()}: {why}")
+    return file
 
 
 def _local_name(path: Path) -> str:
     """Name GDAL opens for a local file."""
     file = disk_file(path)
-    if file != path:
-        kind, _, inner = _LOCAL_ARCHIVE.fullmatch(path.as_posix()).groups()  # type: ignore[union-attr]
-        return f"/vsi{kind.lower()}/{file.as_posix()}{inner}"
     try:
-        with file.open("rb") as stream:
-            start = stream.read(4096)
+        why = why_refused(file)
     except OSError as error:
         raise GridError(f"{path}: cannot be opened ({error.strerror}); make it readable") from error
-    if _NETWORK_FILE.search(start):
-        raise GridError(f"{path}: describes a network service, which is not opened in this version; download the grid")
-    return str(path)
+    if why is not None:
+        raise GridError(f"{path}: {why}")
+    archive = archive_of(path) if file != path else None
+    if archive is not None:
+        return f"/vsi{archive[0]}/{file.as_posix()}{archive[2]}"
+    return str(path.absolute()) if ":" in str(path) else str(path)  # GDAL takes what stands before a colon for a driver
 
 
 def _with_variable(name: str, variable: str | None) -> str:
@@ -265,6 +258,12 @@ def _check_layout(dataset: Any, band: int, is_georeferenced: bool, name: str) ->
         raise GridError(f"{name}: has {dataset.count} band(s), no band {band}; set grid.band to one it has")
     if "complex" in str(dataset.dtypes[band - 1]):
         raise GridError(f"{name}: holds complex numbers; give a grid of real elevations or depths")
+    block_bytes = math.prod(dataset.block_shapes[band - 1]) * np.dtype(dataset.dtypes[band - 1]).itemsize
+    if dataset.width * dataset.height > _MOST_CELLS or block_bytes > _MOST_BLOCK_BYTES:
+        raise GridError(
+            f"{name}: says it has {dataset.height} by {dataset.width} cells in blocks of {block_bytes / 1e6:.0f} MB; "
+            f"cut it to the region, of {_MOST_CELLS:.0e} cells at most, and write it in blocks of less than 1 GB"
+        )
     if dataset.width < 2 or dataset.height < 2:
         raise GridError(
             f"{name}: has {dataset.height} row(s) and {dataset.width} column(s); a grid needs two of each at least"

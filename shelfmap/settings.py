@@ -33,6 +33,9 @@ __all__ = [
 #: Missing cells taken as land (`GridSettings.void_is_land`) stand this high above the water, metres: the shoreline of a
 #: grid that holds depths only falls between its last wet cell and the next.
 VOID_LAND_M: Final = 10.0
+#: Longest name of a file, and longest path, that systems take, less room for the folder of the settings.
+_NAME_BYTES: Final = 255
+_PATH_BYTES: Final = 3000
 #: Depths a deep sea may have, metres.
 DEEP_M: Final = (500.0, 11_000.0)
 
@@ -75,7 +78,9 @@ def _constituent_name(value: object) -> object:
 def _deep(value: object) -> object:
     """Refuse what is no depth in one sentence, not one for each kind of value allowed."""
     if value != "deepest" and not (isinstance(value, int | float) and DEEP_M[0] <= value <= DEEP_M[1]):
-        raise ValueError(f'{_shown(value)} is no depth of a deep sea: give {DEEP_M[0]:g} to {DEEP_M[1]:g} m, or "deepest"')
+        raise ValueError(
+            f'{_shown(value)} is no depth of a deep sea: give {DEEP_M[0]:g} to {DEEP_M[1]:g} m, or "deepest"'
+        )
     return value
 
 
@@ -84,6 +89,14 @@ def _as_path(value: object) -> object:
         raise ValueError("path is empty")
     if isinstance(value, str) and "\0" in value:
         raise ValueError("path holds a null character; leave it out")
+    if isinstance(value, str) and (
+        len(value.encode("utf-8", "surrogatepass")) > _PATH_BYTES
+        or any(len(part.encode("utf-8", "surrogatepass")) > _NAME_BYTES for part in Path(value).parts)
+    ):
+        raise ValueError(
+            f"path {_shown(value)} has a name of more than {_NAME_BYTES} bytes, or more than {_PATH_BYTES} "
+            "in all, which no disk takes; shorten it"
+        )
     return value
 
 
@@ -298,7 +311,9 @@ class DepthErrorSettings(_Stage):
         5.0, ge=0, le=1000, description="Part of the depth error that is the same at all depths, one sd, m."
     )
     per_depth: float = Field(0.12, ge=0, le=1, description="Part that grows with depth, one sd as a share of it.")
-    correlation_km: float = Field(20.0, ge=0.001, le=2000, description="Distance over which depth errors go together, km.")
+    correlation_km: float = Field(
+        20.0, ge=0.001, le=2000, description="Distance over which depth errors go together, km."
+    )
 
 
 class OutputSettings(_Stage):

@@ -109,7 +109,7 @@ def test_all_faults_are_named_at_once_each_on_its_line():
     assert str(caught.value).splitlines() == [
         "my.toml: 4 setting(s) to mend",
         "  grid: must be given",
-        "  transects.spacing_km = -1: input should be greater than 0",
+        "  transects.spacing_km = -1: input should be greater than or equal to 0.001",
         "  transects.lenght_km: no such setting; did you mean 'length_km'?",
         '  response.deep_m: "x" is no depth of a deep sea: give 500 to 11000 m, or "deepest"',
     ]

@@ -111,7 +111,7 @@ def test_coordinates_that_cannot_be_in_their_system_are_refused(tmp_path):
 @pytest.mark.parametrize(
     ("content", "message"),
     [
-        (None, "correct the path"),
+        (None, "no such file; check"),
         (b"", "give a vector file that GDAL reads"),
         (b"SQLite format 3\0rest", "give a vector"),
     ],

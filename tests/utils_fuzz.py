@@ -19,13 +19,11 @@ from shelfmap.words import STATUSES
 #: No run here may take longer, seconds: a hundred times what they take.
 PATIENCE_S = 60.0
 
-NASTY_TEXT = st.one_of(
-    st.text(max_size=12),
-    st.sampled_from(
-        ["", " ", "\n", "\x1b[2J", "\x7f", "'; DROP TABLE transects; --", '"', "<b>&amp;</b>", "%s{0}", "x" * 5000]
-        + ["../" * 40, "nan", "EPSG:4326", "EPSG:0", "EPSG:32629", "+proj=pipeline +step +proj=merc", "\u202e", "é" * 300]
-    ),
-)
+NASTY = (
+    "", " ", "\n", "\x1b[2J", "\x7f", "'; DROP TABLE transects; --", '"', "<b>&amp;</b>", "%s{0}", "x" * 5000,
+    "../" * 40, "nan", "EPSG:4326", "EPSG:0", "EPSG:32629", "+proj=pipeline +step +proj=merc", "\u202e", "é" * 300,
+)  # fmt: skip
+NASTY_TEXT = st.one_of(st.text(max_size=12), st.sampled_from(NASTY))
 EDGES = [0.0, -0.0, 5e-324, 1e-300, 1e-9, 1e-3, 0.5, 1.0, -1.0, 360.0, 1e9, 1e300, -1e300]
 ANYTHING = st.recursive(
     st.one_of(
@@ -42,7 +40,8 @@ def numbers(node):
     """Numbers within the bounds of a schema, its ends and what is close to them the more often."""
     above = node.get("minimum", node.get("exclusiveMinimum", -1e308))
     below = node.get("maximum", node.get("exclusiveMaximum", 1e308))
-    ends = [value for value in (above, below, *EDGES, *(above + share * (below - above) for share in (1e-6, 0.01, 0.3)))]
+    shares = (0.0, 1e-6, 0.01, 0.3, 1.0)
+    ends = EDGES + [above + share * (below - above) for share in shares]
 
     def fits(value):
         return (above < value if "exclusiveMinimum" in node else above <= value) and (
@@ -52,7 +51,7 @@ def numbers(node):
     return st.one_of(st.sampled_from([v for v in ends if fits(v)]), st.floats(above, below).filter(fits))
 
 
-def from_schema(node, definitions):
+def from_schema(node, definitions):  # noqa: PLR0911
     """Values that a JSON schema of pydantic's allows; tables hold any few of their keys."""
     if "$ref" in node:
         node = definitions[node["$ref"].rsplit("/", 1)[1]]
@@ -72,7 +71,9 @@ def from_schema(node, definitions):
         if "prefixItems" in node:
             return st.tuples(*(from_schema(part, definitions) for part in node["prefixItems"])).map(list)
         inner = from_schema(node["items"], definitions)
-        inner = st.sampled_from(["M2", "s2", "N2", "K1", "Mf", "M4", "Q9"]) if node["items"]["type"] == "string" else inner
+        inner = (
+            st.sampled_from(["M2", "s2", "N2", "K1", "Mf", "M4", "Q9"]) if node["items"]["type"] == "string" else inner
+        )
         return st.lists(inner, max_size=4)
     plain = {"string": NASTY_TEXT, "boolean": st.booleans(), "integer": st.integers(1, 3)}
     return plain[kind] if kind in plain else numbers(node)
@@ -135,13 +136,23 @@ def invoke(*args, codes=(0, 1, 2, 3)):
 
 def assert_plain(text):
     """Text for people: no traceback, no library's own words, no control characters that a terminal obeys."""
-    for word in ("Traceback", "pydantic", "<class", "object at 0x", "Path(", "ValueError", "type=", "errno", "datetime."):
+    for word in (
+        "Traceback",
+        "pydantic",
+        "<class",
+        "object at 0x",
+        "Path(",
+        "ValueError",
+        "type=",
+        "errno",
+        "datetime.",
+    ):
         assert word not in text, text
     assert not [c for c in text if c not in "\n\r" and (ord(c) < 32 or 0x7F <= ord(c) < 0xA0)], repr(text)
 
 
 def assert_sound(path):
-    """An output that opens, with known statuses, finite numbers, positive gains and periods, an index within 0 and 1."""
+    """An output opens and has known statuses, finite numbers, gains and periods above 0, indices from 0 to 1."""
     with closing(sqlite3.connect(path)) as database:
         assert database.execute("PRAGMA integrity_check").fetchall() == [("ok",)]
         layers = [name for (name,) in database.execute("SELECT table_name FROM gpkg_contents")]
