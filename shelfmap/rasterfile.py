@@ -36,6 +36,8 @@ _CACHE_MB: Final = 256
 
 #: A compressed block is unpacked whole, however little of it is asked for: none may be larger, bytes.
 _MOST_BLOCK_BYTES: Final = 2**30
+#: Cells have no smaller sides, degrees or units of the system: they would be one place in double precision.
+_LEAST_STEP: Final = 1e-7
 #: A larger grid than this is a mistake or a trap: seven times all of the globe at 15 arc-seconds, cells.
 _MOST_CELLS: Final = 25_000_000_000
 
@@ -274,6 +276,15 @@ def _check_layout(dataset: Any, band: int, is_georeferenced: bool, name: str) ->
             "missing coordinates); warp it to a regular north-up grid"
         )
     transform = dataset.transform
+    steps = abs(transform.a), abs(transform.e)
+    if not (np.isfinite(transform[:6]).all() and min(steps) >= _LEAST_STEP):
+        raise GridError(
+            f"{name}: cells have sides of {transform.a:g} and {transform.e:g} from {transform.c:g}, {transform.f:g}; "
+            f"give a grid of steps of {_LEAST_STEP:g} at least, at finite places"
+        )
+    scale, offset = dataset.scales[band - 1], dataset.offsets[band - 1]
+    if not (np.isfinite([scale, offset]).all() and scale != 0):
+        raise GridError(f"{name}: values are scaled by {scale:g} and moved by {offset:g}; set a finite scale, not 0")
     if max(abs(transform.b), abs(transform.d)) > 1e-9 * max(abs(transform.a), abs(transform.e)):
         raise GridError(f"{name}: is rotated or sheared; warp it to a north-up grid")
 

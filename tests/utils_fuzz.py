@@ -13,7 +13,7 @@ from click.testing import CliRunner
 from hypothesis import strategies as st
 
 from shelfmap.cli import main
-from shelfmap.layers import read_table
+from shelfmap.vectors import read_table
 from shelfmap.words import STATUSES
 
 #: No run here may take longer, seconds: a hundred times what they take.
