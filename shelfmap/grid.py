@@ -8,6 +8,7 @@ Inside, rows run from south to north and columns from west to east, `depth_m` is
 import logging
 from collections.abc import Iterable, Iterator, Mapping
 from dataclasses import dataclass, replace
+from pathlib import Path
 from typing import Any, Final
 
 import numpy as np
@@ -16,7 +17,7 @@ from numpy.typing import ArrayLike, NDArray
 from shelfmap._kernels.sampling import INSIDE, OUTSIDE, VOID, sample_points
 from shelfmap.errors import GridError
 from shelfmap.geodesy import Projection, distance_bearing, unwrap_lon_deg
-from shelfmap.rasterfile import Indices, RasterFile, RasterHeader, projection_of, read_header
+from shelfmap.rasterfile import Indices, RasterFile, RasterHeader, files_behind, projection_of, read_header
 from shelfmap.settings import VOID_LAND_M, GridSettings
 from shelfmap.vertical import Positive, check_unit, datum_words, decide_positive
 
@@ -151,6 +152,16 @@ class GridSource:
     def path(self) -> str:
         """Name of the raster."""
         return self.file.path
+
+    def files(self) -> tuple[Path, ...]:
+        """Every local file the depths are read from, sorted.
+
+        Raises
+        ------
+        GridError
+            If the raster cannot be opened any more.
+        """
+        return files_behind(self.path)
 
     @property
     def is_geographic(self) -> bool:

@@ -11,9 +11,9 @@ from shelfmap.coast import Coast, coast_from_lines, trace_coast
 from shelfmap.errors import CoastError, SettingsError, TransectError
 from shelfmap.geodesy import unwrap_lon_deg
 from shelfmap.grid import GridSource
-from shelfmap.layers import VectorData, read_vector
 from shelfmap.settings import Settings
 from shelfmap.transects import Transects, lay_transects, transects_from_lines
+from shelfmap.vectors import VectorData, read_vector
 
 __all__ = ["make_coast", "make_transects", "picked_breaks"]
 
@@ -30,7 +30,7 @@ _ID_NAMES: Final = ("transect_id", "transect_i")
 BACKWARD_FALL_M: Final = 20.0
 
 
-def make_coast(source: GridSource, settings: Settings) -> Coast:
+def make_coast(source: GridSource, settings: Settings, *, mapped: object = map) -> Coast:
     """Coast of a run: from the grid, or from the vector file of the settings (polygons are land, lines the coast).
 
     Parameters

@@ -24,7 +24,7 @@ from shelfmap.errors import GridError
 from shelfmap.geodesy import WGS84, Projection
 from shelfmap.settings import GridSettings
 
-__all__ = ["Indices", "RasterFile", "RasterHeader", "disk_file", "projection_of", "read_header"]
+__all__ = ["Indices", "RasterFile", "RasterHeader", "disk_file", "files_behind", "projection_of", "read_header"]
 
 #: Half-open window: row0, row1, col0, col1.
 Indices = tuple[int, int, int, int]
@@ -215,16 +215,36 @@ def disk_file(path: Path) -> Path:
     if path.is_file():
         return path
     text = path.as_posix()
-    if archive := _LOCAL_ARCHIVE.fullmatch(text):
-        # a Path folds the double slash of /vsizip//tmp/a.zip, so the archive may be absolute all the same
-        for candidate in (Path("/" + archive[2]), Path(archive[2])):
-            if candidate.is_file():
-                return candidate
-    elif _NETWORK_PATH.search(text):
+    if archive := _archive(text):
+        return archive
+    if not _LOCAL_ARCHIVE.fullmatch(text) and _NETWORK_PATH.search(text):
         raise GridError(
             f"{text}: network paths are not opened in this version; download the grid and name the local file"
         )
     raise GridError(f"{text}: no such file; check grid.path, which is relative to the settings file")
+
+
+def files_behind(name: str) -> tuple[Path, ...]:
+    """Every local file that a raster is read from: itself, those it refers to, or the archive that holds it.
+
+    Raises
+    ------
+    GridError
+        If it cannot be opened.
+    """
+    with _opened(name) as (dataset, _):
+        names = dataset.files or [name]
+    found = (_archive(file) or Path(file) for file in names)
+    return tuple(sorted({path for path in found if path.is_file()}))
+
+
+def _archive(name: str) -> Path | None:
+    """Archive that holds a file of GDAL's; None for one that stands by itself."""
+    archive = _LOCAL_ARCHIVE.fullmatch(name)
+    if archive is None:
+        return None
+    # a Path folds the double slash of /vsizip//tmp/a.zip, so the archive may be absolute all the same
+    return next((path for path in (Path("/" + archive[2]), Path(archive[2])) if path.is_file()), None)
 
 
 def _local_name(path: Path) -> str:

@@ -18,8 +18,8 @@ PACKAGE = Path(shelfmap.__file__).parent
 ORDER = [
     "errors", "constants", "words", "settings", "geodesy", "_kernels", "vertical", "rasterfile", "grid", "inspection",
     "rasters", "synthetic", "demo", "basins", "chains", "coast", "transects", "profiles", "shelfbreak", "deepsea",
-    "modes", "response", "index", "assess", "columns", "antimeridian", "replacement", "vectors", "layers", "tables",
-    "inputs", "provenance", "sections", "pipeline", "cli", "__main__",
+    "modes", "response", "index", "assess", "columns", "antimeridian", "replacement", "checkpoint", "vectors", "layers",
+    "geopackage", "tables", "stations", "inputs", "provenance", "sections", "workers", "pipeline", "cli", "__main__",
 ]  # fmt: skip
 
 #: Libraries that only these modules import.
@@ -28,15 +28,16 @@ ONLY_HERE = {
     "numba": {"_kernels"},
     "rasterio": {"rasterfile", "rasters"},
     "contourpy": {"coast", "chains"},
-    "geopandas": {"layers", "vectors"},
-    "pyogrio": {"layers", "vectors"},
-    "pyarrow": {"layers", "vectors"},
-    "sqlite3": {"layers", "replacement", "vectors"},
+    "geopandas": {"vectors"},
+    "pyogrio": {"geopackage", "vectors"},
+    "pyarrow": {"layers", "geopackage"},
+    "sqlite3": {"geopackage", "replacement"},
     "pydantic": {"settings"},
     "tomllib": {"settings"},
     "click": {"cli"},
-    "concurrent": {"pipeline"},
-    "multiprocessing": {"pipeline"},
+    "concurrent": {"workers", "pipeline"},
+    "multiprocessing": {"workers"},
+    "distributed": {"workers"},
 }
 
 TOP_LEVEL = {"README.md", "DEVELOPERS.md", "CHANGELOG.md", "LICENSE", "pyproject.toml", "shelfmap", "tests"} | {
