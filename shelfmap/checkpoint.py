@@ -17,6 +17,7 @@ import shapely
 from numpy.typing import NDArray
 
 from shelfmap import __version__
+from shelfmap.errors import LayerError
 from shelfmap.replacement import unfinished
 
 __all__ = ["Checkpoint", "digest", "files_digest"]
@@ -76,11 +77,23 @@ class Checkpoint:
         return data if hashlib.sha256(data).digest() == checksum else None
 
     def save(self, key: str, data: bytes) -> None:
-        """Keep a piece of work: whole or not at all, whatever happens meanwhile."""
-        self._used.add(key)
+        """Keep a piece of work: whole or not at all, whatever happens meanwhile.
+
+        Raises
+        ------
+        LayerError
+            If there is no room for it.
+        """
         part = self._file(key).with_suffix(".part")
-        part.write_bytes(hashlib.sha256(data).digest() + data)
-        part.replace(self._file(key))
+        try:
+            part.write_bytes(hashlib.sha256(data).digest() + data)
+            part.replace(self._file(key))
+        except OSError as error:
+            raise LayerError(
+                f"{self.folder}: finished work cannot be kept ({error.strerror}); make room on the disk or write to "
+                "another folder"
+            ) from error
+        self._used.add(key)
 
     def clear(self) -> None:
         """Remove all that is kept."""

@@ -78,6 +78,11 @@ class Coast:
     source: str
     """Where it comes from, one clause for people."""
 
+    @property
+    def length_km(self) -> float:
+        """Length of all pieces, km."""
+        return sum(line.length_m for line in self.lines) / 1e3
+
 
 def trace_coast(source: GridSource, settings: CoastSettings, land: Geometries | None = None) -> Coast:
     """Trace the generalised coast of a grid, or of land polygons on it.

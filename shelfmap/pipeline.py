@@ -1,11 +1,9 @@
 """The only module that knows the order of the stages; coast sections run over one executor."""
 
 import logging
-import time
 import warnings
 from collections.abc import Callable, Iterator, Sequence
 from concurrent.futures import Executor
-from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, Final
@@ -16,13 +14,13 @@ from numpy.typing import NDArray
 
 from shelfmap.checkpoint import Checkpoint, digest, files_digest
 from shelfmap.coast import Coast
-from shelfmap.errors import GridError, LayerError, ShelfmapWarning
+from shelfmap.errors import LayerError, ShelfmapWarning
 from shelfmap.geodesy import distance_bearing
 from shelfmap.geopackage import GeoPackage, write_layers
 from shelfmap.grid import GridSource, open_grid
-from shelfmap.inputs import make_coast, make_transects, picked_breaks
+from shelfmap.inputs import make_coast, picked_breaks
 from shelfmap.layers import Layer, to_columns, unpack
-from shelfmap.profiles import step_of
+from shelfmap.laying import Laid, lay, timed
 from shelfmap.provenance import run_layer, status_counts
 from shelfmap.replacement import check_target, placing
 from shelfmap.sections import Section, pack_drawn_section, pack_section
@@ -41,9 +39,6 @@ Progress = Callable[[str, int, int], None]
 SECTION_STATIONS: Final = 64
 #: Whole turns by which longitudes of the same place may differ.
 TURNS_DEG: Final = np.array([-360.0, 0.0, 360.0])
-#: A grid with fewer cells than this in `generalise_km` gives bearings that follow the steps of its shoreline.
-FEWEST_COAST_CELLS: Final = 4.0
-
 _LOG = logging.getLogger(__name__)
 
 
@@ -69,7 +64,7 @@ class Run:
             "transects": len(self.status),
             "status": status_counts(self.status),
             "coast_parts": len(self.coast.lines),
-            "coast_km": round(_length_km(self.coast), 1),
+            "coast_km": round(self.coast.length_km, 1),
             "step_km": round(self.step_m / 1e3, 3),
             "positive": f"{self.source.positive} ({self.source.positive_why})",
         }
@@ -128,18 +123,17 @@ def screen(
     path = settings.output.path
     _check_output(settings, path, overwrite=overwrite)
     with mapping(workers, executor, scheduler) as mapped, Checkpoint.beside(path, anew=anew) as kept:
-        laid = _lay(settings, mapped)
-        _warn_of_coarse_cells(laid.source, settings)
+        laid = lay(settings, mapped, kept)
         picks = picked_breaks(settings, laid.transects.transect_id)
         with placing(kept.folder, path) as part:
             file = GeoPackage(part, settings.output.crs, path)
-            with _timed("sections"):
+            with timed("sections"):
                 packed = _packed_sections(laid, settings, picks, mapped, kept)
                 columns = _collect(packed, _n_sections(laid.transects), file, progress)
             _warn_of_picks(picks, columns, laid.step_m)
-            with _timed("last layers"):
+            with timed("last layers"):
                 _finish(file, columns, laid, settings)
-            _check_unchanged(laid)
+            laid.check_unchanged()
     return Run(path=path, source=laid.source, coast=laid.coast, status=columns["status"], step_m=laid.step_m)
 
 
@@ -200,7 +194,7 @@ def write_transects(settings: Settings, path: Path, *, overwrite: bool = False, 
     """
     _check_output(settings, path, overwrite=overwrite)
     with mapping(workers) as mapped:
-        laid = _lay(settings, mapped)
+        laid = lay(settings, mapped)
         packed = mapped(pack_drawn_section, _sections(laid, settings))
         columns = to_columns(*(unpack(data)["stations"] for data in packed))
     layer = Layer(name="transect_lines", geometry=shapely.from_wkb(columns.pop("line")), columns=columns)
@@ -224,71 +218,6 @@ def _check_output(settings: Settings, path: Path, *, overwrite: bool) -> None:
     check_target(path, overwrite=overwrite)
 
 
-# ---- what is screened
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class _Laid:
-    """A run before its sections: the grid, the coast, the transects on it."""
-
-    source: GridSource
-    stamps: tuple[tuple[int, int], ...]
-    """Size and time of change of each of the grid's files."""
-    coast: Coast
-    transects: Transects
-    step_m: float
-
-
-def _lay(settings: Settings, mapped: Mapping) -> _Laid:
-    """Open the grid, make the coast and lay the transects."""
-    source = open_grid(settings.grid)
-    stamps = _stamps(source)
-    _LOG.info("values of %s taken as %s: %s", source.path, source.positive, source.positive_why)
-    with _timed("coast"):
-        coast = make_coast(source, settings, mapped=mapped)
-    _LOG.info("coast: %d stretches, %.0f km, %s", len(coast.lines), _length_km(coast), coast.source)
-    with _timed("transects"):
-        transects = make_transects(source, coast, settings)
-    step_m = step_of(source, settings.transects)
-    if settings.transects.step_km is not None and step_m > settings.transects.step_km * 1e3:
-        _LOG.warning(
-            "transects.step_km = %g would take too many samples over %g km; %.3f km is used",
-            settings.transects.step_km,
-            settings.transects.length_km,
-            step_m / 1e3,
-        )
-    return _Laid(source=source, stamps=stamps, coast=coast, transects=transects, step_m=step_m)
-
-
-def _length_km(coast: Coast) -> float:
-    return sum(line.length_m for line in coast.lines) / 1e3
-
-
-def _stamps(source: GridSource) -> tuple[tuple[int, int], ...]:
-    try:
-        return tuple((stat.st_size, stat.st_mtime_ns) for stat in (file.stat() for file in source.files()))
-    except OSError as error:
-        raise GridError(f"{source.path}: has vanished ({error.strerror}); put it back and run again") from error
-
-
-def _check_unchanged(laid: _Laid) -> None:
-    """Refuse results of a grid that was written to while it was read."""
-    if _stamps(laid.source) != laid.stamps:
-        raise GridError(f"{laid.source.path}: has changed while it was read; run again once nothing writes to it")
-
-
-def _warn_of_coarse_cells(source: GridSource, settings: Settings) -> None:
-    """Say where the grid is too coarse for the scale of the coast asked for."""
-    cells = settings.coast.generalise_m / source.step_m
-    if settings.transects.file is None and cells < FEWEST_COAST_CELLS:
-        _LOG.warning(
-            "coast.generalise_km = %g is %.1f cells of this grid: bearings follow its steps, less so from %.0f on",
-            settings.coast.generalise_km,
-            cells,
-            np.ceil(FEWEST_COAST_CELLS * source.step_m / 1e3),
-        )
-
-
 # ---- sections
 
 
@@ -296,7 +225,7 @@ def _n_sections(transects: Transects) -> int:
     return -(-len(transects) // SECTION_STATIONS)
 
 
-def _sections(laid: _Laid, settings: Settings, picks: NDArray[np.object_] | None = None) -> Iterator[Section]:
+def _sections(laid: Laid, settings: Settings, picks: NDArray[np.object_] | None = None) -> Iterator[Section]:
     """Cut the transects, and the breaks picked on them, into sections of neighbouring stations."""
     islets = _Islets(laid.coast)
     for start in range(0, len(laid.transects), SECTION_STATIONS):
@@ -329,7 +258,7 @@ class _Islets:
 
 
 def _packed_sections(
-    laid: _Laid, settings: Settings, picks: NDArray[np.object_], mapped: Mapping, kept: Checkpoint
+    laid: Laid, settings: Settings, picks: NDArray[np.object_], mapped: Mapping, kept: Checkpoint
 ) -> Iterator[bytes]:
     """Give the packed rows of every section in order: kept ones as they are, the others screened and kept."""
     run_key = _run_key(laid, settings)
@@ -349,7 +278,7 @@ def _packed_sections(
         yield data
 
 
-def _run_key(laid: _Laid, settings: Settings) -> str:
+def _run_key(laid: Laid, settings: Settings) -> str:
     """Hash of all that every section depends on: code, depths, settings."""
     used = settings.model_dump_json(exclude={"title": True, "output": {"path": True, "crs": True}})
     return digest(files_digest(laid.source.files()), laid.source, used)
@@ -375,7 +304,7 @@ def _collect(packed: Iterator[bytes], n_sections: int, file: GeoPackage, progres
     return to_columns(*stations)
 
 
-def _finish(file: GeoPackage, columns: Columns, laid: _Laid, settings: Settings) -> None:
+def _finish(file: GeoPackage, columns: Columns, laid: Laid, settings: Settings) -> None:
     """Write the layers that need all stations, and what the file is."""
     for layer in station_layers(columns, laid.transects, laid.coast, settings):
         file.add_layer(layer)
@@ -417,10 +346,3 @@ def _warn_of_picks(picks: NDArray[np.object_], columns: Columns, step_m: float) 
 
 def _some(ids: Sequence[Any] | NDArray[np.int64]) -> str:
     return ", ".join(map(str, ids[:10])) + ", ..." * (len(ids) > 10)
-
-
-@contextmanager
-def _timed(stage: str) -> Iterator[None]:
-    start = time.perf_counter()
-    yield
-    _LOG.info("%s: %.1f s", stage, time.perf_counter() - start)

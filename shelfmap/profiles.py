@@ -226,12 +226,18 @@ def _windows(
     first, box = 0, boxes[0]
     for k in range(1, len(boxes)):
         wider = _joined(box, boxes[k])
-        if (wider[1] - wider[0]) * (wider[3] - wider[2]) > MOST_CELLS:
+        # far apart, as on two islands, they are cheaper to read one by one
+        if _cells(wider) > min(MOST_CELLS, _cells(box) + _cells(boxes[k])):
             yield first, k, _window(source, box)
             first, box = k, boxes[k]
         else:
             box = wider
     yield first, len(boxes), _window(source, box)
+
+
+def _cells(box: FloatArray) -> float:
+    """Cells of a box of indices, with the margin of a window."""
+    return float((box[1] - box[0] + 4) * (box[3] - box[2] + 4))
 
 
 def _joined(box: FloatArray, other: FloatArray) -> FloatArray:

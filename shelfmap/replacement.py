@@ -67,6 +67,8 @@ def unfinished(path: str | Path) -> Iterator[Path]:
     folder = target.with_name(f".{target.name}.unfinished")
     try:
         lock = _lock(folder, target)
+    except LayerError:
+        raise
     except OSError as error:
         raise LayerError(
             f"output {target}: {folder.name} cannot be made beside it ({error.strerror}); make room, or write to "

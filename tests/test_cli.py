@@ -18,7 +18,7 @@ from click.testing import CliRunner
 from utils_grid import write_tif
 from utils_pipeline import small_coast
 
-from shelfmap import __version__, pipeline
+from shelfmap import __version__
 from shelfmap.cli import main
 from shelfmap.demo import write_demo
 from shelfmap.vectors import read_table
@@ -294,12 +294,12 @@ def stop(*_, **__):
     raise KeyboardInterrupt
 
 
-@pytest.mark.parametrize("stage", ["make_coast", "pack_section"])
+@pytest.mark.parametrize("stage", ["laying.open_grid", "laying.make_coast"])
 def test_run_interrupted_early_leaves_the_older_output_and_nothing_else(coast_toml, monkeypatch, stage):
     run("screen", coast_toml)
     out = coast_toml.parent / "out.gpkg"
     before = out.read_bytes()
-    monkeypatch.setattr(pipeline, stage, stop)
+    monkeypatch.setattr(f"shelfmap.{stage}", stop)
     result = run("screen", coast_toml, "--overwrite", code=1)
     assert result.stderr.strip() == "Aborted!"
     assert out.read_bytes() == before
@@ -317,7 +317,8 @@ def test_run_interrupted_late_keeps_its_sections_and_goes_on_from_them(coast_tom
     assert f"is kept in {folder / '.out.gpkg.unfinished'}: the same run goes on from it" in told
     assert out.read_bytes() == before
     assert files(folder) == [".out.gpkg.unfinished", "coast.toml", "grid0.tif", "out.gpkg"]
-    assert [Path(file).suffix for file in files(folder / ".out.gpkg.unfinished")] == [".done"]
+    kept = files(folder / ".out.gpkg.unfinished")
+    assert [Path(file).suffix for file in kept] == [".done", ".done"]  # the coast, and its one section
     told = run("screen", coast_toml, "--overwrite").stderr
     assert "1 of 1 sections were finished by an earlier run and are used" in told
     assert files(folder) == ["coast.toml", "grid0.tif", "out.gpkg"]

@@ -19,7 +19,8 @@ ORDER = [
     "errors", "constants", "words", "settings", "geodesy", "_kernels", "vertical", "rasterfile", "grid", "inspection",
     "rasters", "synthetic", "demo", "basins", "chains", "coast", "transects", "profiles", "shelfbreak", "deepsea",
     "modes", "response", "index", "assess", "columns", "antimeridian", "replacement", "checkpoint", "vectors", "layers",
-    "geopackage", "tables", "stations", "inputs", "provenance", "sections", "workers", "pipeline", "cli", "__main__",
+    "geopackage", "tables", "stations", "inputs", "provenance", "sections", "workers", "laying", "pipeline",
+    "cli", "__main__",
 ]  # fmt: skip
 
 #: Libraries that only these modules import.

@@ -3,7 +3,7 @@
 import numpy as np
 import pandas as pd
 
-from shelfmap import pipeline
+from shelfmap.laying import lay
 from shelfmap.sections import Section, screen_section
 from shelfmap.settings import Settings
 from shelfmap.stations import station_layers
@@ -36,7 +36,7 @@ def settings_for(grid, folder, **tables):
 
 def screened_of(settings):
     """Coast and, in SI units, results of every stage of a run, all its stations in one section."""
-    laid = pipeline._lay(settings, map)
+    laid = lay(settings, map)
     section = Section(
         source=laid.source,
         settings=settings,
