@@ -36,6 +36,8 @@ class Laid:
     source: GridSource
     stamps: tuple[tuple[int, int], ...]
     """Size and time of change of each of the grid's files when they were opened first."""
+    content: str
+    """Hash of this package's code and of what the grid holds; empty where nothing is kept."""
     coast: Coast
     transects: Transects
     step_m: float
@@ -73,8 +75,9 @@ def lay(settings: Settings, mapped: Mapping, kept: Checkpoint | None = None) -> 
     source = open_grid(settings.grid)
     stamps = _stamps(source)
     _LOG.info("values of %s taken as %s: %s", source.path, source.positive, source.positive_why)
+    content = "" if kept is None else digest(files_digest(source.files()), source)
     with timed("coast"):
-        coast = _coast(source, settings, mapped, kept)
+        coast = _coast(source, settings, mapped, kept, content)
     _LOG.info("coast: %d stretches, %.0f km, %s", len(coast.lines), coast.length_km, coast.source)
     _warn_of_coarse_cells(source, settings)
     with timed("transects"):
@@ -87,7 +90,7 @@ def lay(settings: Settings, mapped: Mapping, kept: Checkpoint | None = None) -> 
             settings.transects.length_km,
             step_m / 1e3,
         )
-    return Laid(source=source, stamps=stamps, coast=coast, transects=transects, step_m=step_m)
+    return Laid(source=source, stamps=stamps, content=content, coast=coast, transects=transects, step_m=step_m)
 
 
 @contextmanager
@@ -117,11 +120,11 @@ def _warn_of_coarse_cells(source: GridSource, settings: Settings) -> None:
         )
 
 
-def _coast(source: GridSource, settings: Settings, mapped: Mapping, kept: Checkpoint | None) -> Coast:
+def _coast(source: GridSource, settings: Settings, mapped: Mapping, kept: Checkpoint | None, content: str) -> Coast:
     """Coast kept by a stopped run, else made, and kept where it took reading the whole grid."""
     if kept is None or settings.coast.file is not None:
         return make_coast(source, settings, mapped=mapped)
-    key = digest("coast", files_digest(source.files()), source, settings.coast.model_dump_json())
+    key = digest("coast", content, settings.coast.model_dump_json())
     data = kept.load(key)
     if data is not None:
         return _unpack_coast(data)

@@ -12,7 +12,7 @@ import numpy as np
 import shapely
 from numpy.typing import NDArray
 
-from shelfmap.checkpoint import Checkpoint, digest, files_digest
+from shelfmap.checkpoint import Checkpoint, digest
 from shelfmap.coast import Coast
 from shelfmap.errors import LayerError, ShelfmapWarning
 from shelfmap.geodesy import distance_bearing
@@ -281,7 +281,7 @@ def _packed_sections(
 def _run_key(laid: Laid, settings: Settings) -> str:
     """Hash of all that every section depends on: code, depths, settings."""
     used = settings.model_dump_json(exclude={"title": True, "output": {"path": True, "crs": True}})
-    return digest(files_digest(laid.source.files()), laid.source, used)
+    return digest(laid.content, used)
 
 
 def _section_key(run_key: str, section: Section) -> str:

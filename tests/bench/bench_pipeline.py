@@ -59,7 +59,14 @@ def test_stages(settings, capsys, tmp_path):
     source = timed("grid", open_grid, settings.grid)
     coast = timed("coast", make_coast, source, settings)
     transects = timed("transects", make_transects, source, coast, settings)
-    laid = Laid(source=source, stamps=(), coast=coast, transects=transects, step_m=step_of(source, settings.transects))
+    laid = Laid(
+        source=source,
+        stamps=(),
+        content="",
+        coast=coast,
+        transects=transects,
+        step_m=step_of(source, settings.transects),
+    )
     sections = list(pipeline._sections(laid, settings))
     timed("profiles", lambda: [sample_section(section) for section in sections])
     packed = timed("profiles to rows", lambda: [pack_section(section) for section in sections])
