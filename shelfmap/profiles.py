@@ -15,9 +15,18 @@ from shelfmap.basins import SHORE_HAIR_M
 from shelfmap.geodesy import distance_bearing
 from shelfmap.grid import GridSource
 from shelfmap.settings import TransectSettings
-from shelfmap.transects import Transects
+from shelfmap.transects import NODE_M, Transects
 
-__all__ = ["END_REASONS", "START_REASONS", "Profiles", "distance_along", "place_on", "sample_profiles", "step_of"]
+__all__ = [
+    "END_REASONS",
+    "START_REASONS",
+    "Profiles",
+    "distance_along",
+    "lines_along",
+    "place_on",
+    "sample_profiles",
+    "step_of",
+]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -174,6 +183,35 @@ def place_on(transects: Transects, at_m: FloatArray) -> tuple[FloatArray, FloatA
         lon_deg[k] = np.interp(at_m[k], node_m, transects.node_lon_deg[k, known])
         lat_deg[k] = np.interp(at_m[k], node_m, transects.node_lat_deg[k, known])
     return lon_deg, lat_deg
+
+
+def lines_along(transects: Transects, start_m: FloatArray, stop_m: FloatArray) -> NDArray[np.object_]:
+    """Lines on transects between two distances from their stations, with nodes `NODE_M` apart at most.
+
+    Parameters
+    ----------
+    transects : Transects
+        The lines, n of them.
+    start_m, stop_m : (n,) array of float
+        Distances from the station, metres.
+
+    Returns
+    -------
+    (n,) array of shapely lines
+        Longitude and latitude, degrees, longitudes without jumps.
+    """
+    n_nodes = np.maximum(np.ceil((stop_m - start_m) / NODE_M).astype(int), 1) + 1
+    lon_deg, lat_deg = [], []
+    for k in range(len(transects)):
+        known = np.isfinite(transects.node_m[k])
+        node_m = transects.node_m[k, known]
+        at_m = np.linspace(start_m[k], stop_m[k], n_nodes[k])
+        lon_deg.append(np.interp(at_m, node_m, transects.node_lon_deg[k, known]))
+        lat_deg.append(np.interp(at_m, node_m, transects.node_lat_deg[k, known]))
+    lines: NDArray[np.object_] = shapely.linestrings(
+        np.concatenate(lon_deg), np.concatenate(lat_deg), indices=np.repeat(np.arange(len(transects)), n_nodes)
+    )
+    return lines
 
 
 def distance_along(transects: Transects, row: int, lon_deg: float, lat_deg: float) -> float:

@@ -11,7 +11,7 @@ from shelfmap.assess import statuses, usable
 from shelfmap.grid import GridSource
 from shelfmap.index import ResonanceIndex, resonance_index
 from shelfmap.layers import encode, pack, to_table
-from shelfmap.profiles import END_REASONS, START_REASONS, Profiles, distance_along, place_on, sample_profiles
+from shelfmap.profiles import END_REASONS, START_REASONS, Profiles, distance_along, lines_along, sample_profiles
 from shelfmap.response import (
     DepthError,
     Friction,
@@ -25,7 +25,7 @@ from shelfmap.response import (
 from shelfmap.settings import Settings
 from shelfmap.shelfbreak import ShelfBreaks, find_shelf_breaks, measure_picked_breaks
 from shelfmap.tables import Screened, profile_layer, response_layer, station_columns, transect_columns, waves_of
-from shelfmap.transects import NODE_M, Transects
+from shelfmap.transects import Transects
 
 __all__ = [
     "CURVE_PERIODS_H",
@@ -209,9 +209,4 @@ def _lines_to_edit(transects: Transects, profiles: Profiles) -> NDArray[np.objec
     stop_m = np.nan_to_num(profiles.shore_m) + (profiles.n_samples + past) * profiles.step_m
     start_m = np.maximum(start_m, np.nanmin(transects.node_m, axis=1))
     stop_m = np.minimum(stop_m, np.nanmax(transects.node_m, axis=1))
-    lines = []
-    for row, (start, stop) in enumerate(zip(start_m, stop_m, strict=True)):
-        at_m = np.linspace(start, stop, int(np.ceil((stop - start) / NODE_M)) + 1)
-        lon_deg, lat_deg = place_on(transects.rows(row, row + 1), at_m[None, :])
-        lines.append(shapely.linestrings(lon_deg[0], lat_deg[0]))
-    return np.array(lines, dtype=object)
+    return lines_along(transects, start_m, stop_m)

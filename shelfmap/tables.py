@@ -13,11 +13,11 @@ from shelfmap.constants import CONSTITUENTS
 from shelfmap.geodesy import unwrap_lon_deg
 from shelfmap.index import ResonanceIndex, index_class
 from shelfmap.layers import Layer
-from shelfmap.profiles import END_REASONS, Profiles, place_on
+from shelfmap.profiles import END_REASONS, Profiles, lines_along, place_on
 from shelfmap.response import ShelfModes, WaveResponse
 from shelfmap.settings import Settings
 from shelfmap.shelfbreak import ShelfBreaks
-from shelfmap.transects import NODE_M, Transects
+from shelfmap.transects import Transects
 from shelfmap.words import wave_label
 
 __all__ = [
@@ -29,7 +29,6 @@ __all__ = [
     "response_layer",
     "station_columns",
     "transect_columns",
-    "transect_geometry",
     "waves_of",
 ]
 
@@ -80,18 +79,6 @@ class Screened:
     """(m,) periods of the curve, hours."""
 
 
-def transect_geometry(transects: Transects, profiles: Profiles) -> NDArray[np.object_]:
-    """Line of each transect from its shore to its last sample; a stub of one step where there is no profile."""
-    lines = []
-    for row in range(len(transects)):
-        start_m = np.nan_to_num(profiles.shore_m[row])
-        length_m = max(profiles.length_m[row], profiles.step_m)
-        at_m = start_m + np.linspace(0.0, length_m, int(np.ceil(length_m / NODE_M)) + 1)
-        lon_deg, lat_deg = place_on(transects.rows(row, row + 1), at_m[None, :])
-        lines.append(shapely.linestrings(lon_deg[0], lat_deg[0]))
-    return np.array(lines, dtype=object)
-
-
 def station_columns(screened: Screened, settings: Settings) -> Columns:
     """Columns of the layers with one row a transect, and what `shelfmap.stations` needs to finish them.
 
@@ -109,16 +96,20 @@ def station_columns(screened: Screened, settings: Settings) -> Columns:
         line of each transect as well-known binary, remarks and the number of doubts among them.
     """
     waves = waves_of(settings)
-    break_lon, break_lat = place_on(screened.transects, screened.profiles.shore_m + screened.breaks.break_m)
+    transects, profiles = screened.transects, screened.profiles
+    break_lon, break_lat = place_on(transects, profiles.shore_m + screened.breaks.break_m)
+    shore_m = np.nan_to_num(profiles.shore_m)
+    # from its shore to its last sample; a stub of one step where there is no profile
+    lines = lines_along(transects, shore_m, shore_m + np.maximum(profiles.length_m, profiles.step_m))
     return {
-        **transect_columns(screened.transects, screened.profiles),
+        **transect_columns(transects, profiles),
         **_profile_columns(screened, settings),
         **_break_columns(screened, break_lon, break_lat),
         **_mode_columns(screened),
         **_wave_columns(screened, waves),
         **_remark_columns(screened, waves),
-        "line": shapely.to_wkb(transect_geometry(screened.transects, screened.profiles)),
-        "shore_lon": screened.profiles.shore_lon_deg,
+        "line": shapely.to_wkb(lines),
+        "shore_lon": profiles.shore_lon_deg,
         "break_lon": break_lon,
     }
 

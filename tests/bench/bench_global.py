@@ -67,11 +67,9 @@ def write_once(path: Path, copy: Path) -> float:
     took = 0.0
     for name, kind in pyogrio.list_layers(path):
         meta, table = pyogrio.read_arrow(path, layer=name)
-        drawn = (
-            {} if kind is None else {"geometry_name": meta["geometry_name"], "geometry_type": kind, "crs": meta["crs"]}
-        )
+        drawn = {} if kind is None else {"geometry_name": meta["geometry_name"], "geometry_type": kind}
         start = time.perf_counter()
-        pyogrio.write_arrow(table, copy, layer=name, driver="GPKG", **({} if kind is None else shape))
+        pyogrio.write_arrow(table, copy, layer=name, driver="GPKG", crs=meta["crs"], **drawn)
         took += time.perf_counter() - start
     return took
 
