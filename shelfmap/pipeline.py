@@ -215,13 +215,13 @@ def write_transects(settings: Settings, path: Path, *, overwrite: bool = False) 
 
 def _check_output(settings: Settings, path: Path, *, overwrite: bool) -> None:
     """Refuse an output that cannot be written, or that would replace what it is made from."""
-    inputs = {
-        "grid.path": settings.grid.path,
-        "coast.file": settings.coast.file,
-        "transects.file": settings.transects.file,
-        "shelf_break.file": settings.shelf_break.file,
-    }
-    for name, given in inputs.items():
+    inputs = [
+        *(("grid.path", file) for file in settings.grid.paths),
+        ("coast.file", settings.coast.file),
+        ("transects.file", settings.transects.file),
+        ("shelf_break.file", settings.shelf_break.file),
+    ]
+    for name, given in inputs:
         if given is not None and given.resolve() == path.resolve():
             raise LayerError(f"output {path} is {name} too and would be lost; write to another file")
     check_target(path, overwrite=overwrite)

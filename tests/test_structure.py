@@ -16,10 +16,10 @@ PACKAGE = Path(shelfmap.__file__).parent
 
 #: Modules from the ground up; a module may import those before it. `_kernels` stands for all compiled loops.
 ORDER = [
-    "errors", "constants", "words", "settings", "geodesy", "_kernels", "vertical", "rasterfile", "grid", "inspection",
-    "rasters", "synthetic", "demo", "basins", "chains", "coast", "transects", "profiles", "shelfbreak", "deepsea",
-    "modes", "response", "index", "assess", "columns", "antimeridian", "replacement", "vectors", "layers", "tables",
-    "inputs", "provenance", "sections", "pipeline", "cli", "__main__",
+    "errors", "constants", "words", "settings", "geodesy", "_kernels", "vertical", "rasterfile", "lattice", "sheets",
+    "grid", "inspection", "rasters", "synthetic", "demo", "basins", "chains", "coast", "transects", "profiles",
+    "shelfbreak", "deepsea", "modes", "response", "index", "assess", "columns", "antimeridian", "replacement",
+    "vectors", "layers", "tables", "inputs", "provenance", "sections", "pipeline", "cli", "__main__",
 ]  # fmt: skip
 
 #: Libraries that only these modules import.
