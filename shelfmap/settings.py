@@ -385,11 +385,10 @@ def markdown_settings() -> str:
 
     Examples
     --------
-    >>> print("\n".join(markdown_settings().splitlines()[:4]))
+    >>> print("\n".join(markdown_settings().splitlines()[:3]))
     | setting | default | meaning |
     |---|---|---|
     | `title` | `""` | A name for the run. |
-    | `grid.path` | must be given | Bathymetry raster, anything GDAL reads; relative to the settings file. |
     """
     return "\n".join(["| setting | default | meaning |", "|---|---|---|", *_setting_rows(Settings, "")])
 
