@@ -351,7 +351,7 @@ def test_a_transect_on_the_far_side_of_the_earth_meets_no_tile(tmp_path):
 
 
 def test_the_frame_is_the_last_lattice_large_enough_for_all(stack):
-    """Coarse cells of 0.25 by 0.125 degrees from 3, 50 on; the middle sheet begins at 2.495, the fine ends at 51.285."""
+    """Coarse cells of 0.25 by 0.125 degrees from 3, 50; the middle sheet begins at 2.495, the fine ends at 51.285."""
     source, _ = stack
     assert (source.x0, source.y0, source.dx, source.dy) == (2.5, 50.0, 0.25, 0.125)
     assert (source.n_rows, source.n_cols) == (11, 10)
