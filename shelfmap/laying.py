@@ -75,7 +75,7 @@ def lay(settings: Settings, mapped: Mapping, kept: Checkpoint | None = None) -> 
     source = open_grid(settings.grid)
     stamps = _stamps(source)
     _LOG.info("values of %s taken as %s: %s", source.path, source.positive, source.positive_why)
-    content = "" if kept is None else digest(files_digest(source.files()), source)
+    content = "" if kept is None else digest(files_digest(source.disk_files()), source)
     with timed("coast"):
         coast = _coast(source, settings, mapped, kept, content)
     _LOG.info("coast: %d stretches, %.0f km, %s", len(coast.lines), coast.length_km, coast.source)
@@ -103,7 +103,7 @@ def timed(stage: str) -> Iterator[None]:
 
 def _stamps(source: GridSource) -> tuple[tuple[int, int], ...]:
     try:
-        return tuple((stat.st_size, stat.st_mtime_ns) for stat in (file.stat() for file in source.files()))
+        return tuple((stat.st_size, stat.st_mtime_ns) for stat in (file.stat() for file in source.disk_files()))
     except OSError as error:
         raise GridError(f"{source.path}: has vanished ({error.strerror}); put it back and run again") from error
 

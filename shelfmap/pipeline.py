@@ -1,5 +1,6 @@
 """The only module that knows the order of the stages; coast sections run over one executor."""
 
+import itertools
 import logging
 import warnings
 from collections.abc import Callable, Iterator, Sequence
@@ -206,13 +207,13 @@ def write_transects(settings: Settings, path: Path, *, overwrite: bool = False, 
 
 def _check_output(settings: Settings, path: Path, *, overwrite: bool) -> None:
     """Refuse an output that cannot be written, or that would replace what it is made from."""
-    inputs = {
-        "grid.path": settings.grid.path,
-        "coast.file": settings.coast.file,
-        "transects.file": settings.transects.file,
-        "shelf_break.file": settings.shelf_break.file,
-    }
-    for name, given in inputs.items():
+    inputs = [
+        *(("grid.path", file) for file in settings.grid.paths),
+        ("coast.file", settings.coast.file),
+        ("transects.file", settings.transects.file),
+        ("shelf_break.file", settings.shelf_break.file),
+    ]
+    for name, given in inputs:
         if given is not None and given.resolve() == path.resolve():
             raise LayerError(f"output {path} is {name} too and would be lost; write to another file")
     check_target(path, overwrite=overwrite)
@@ -268,7 +269,8 @@ def _packed_sections(
     if len(missing) < len(sections):
         n_kept = len(sections) - len(missing)
         _LOG.warning("%d of %d sections were finished by an earlier run and are used", n_kept, len(sections))
-    fresh = mapped(pack_section, missing)
+    # the first one here: on a first run it compiles the loops, which processes must not do all at once
+    fresh = itertools.chain(map(pack_section, missing[:1]), mapped(pack_section, missing[1:]))
     for section, key in zip(sections, keys, strict=True):
         if kept.has(key):
             data = kept.load(key) or pack_section(section)  # a kept one may be damaged

@@ -15,6 +15,7 @@ from shelfmap.basins import SHORE_HAIR_M
 from shelfmap.geodesy import distance_bearing
 from shelfmap.grid import GridSource
 from shelfmap.settings import TransectSettings
+from shelfmap.sheets import Sheet, boxes_meet
 from shelfmap.transects import NODE_M, Transects
 
 __all__ = [
@@ -44,7 +45,10 @@ SHORT_GAP_SHARE: Final = 0.02
 LEAST_SPIKE_M: Final = 10.0
 #: A profile has at most this many samples; a finer grid is sampled more coarsely, and the step says so.
 MOST_SAMPLES: Final = 6000
-#: Windows of the grid have at most this many cells, unless one transect alone needs more: 160 MB of depths.
+#: Sheets finer than this share of the frame's cells, one part in so many, do not make samples closer.
+FINEST_SHARE: Final = 4.0
+#: Windows of all sheets of the grid together have at most this many cells, unless one transect alone needs more:
+#: 160 MB of depths.
 MOST_CELLS: Final = 40_000_000
 
 
@@ -91,8 +95,13 @@ class Profiles:
 
 
 def step_of(source: GridSource, settings: TransectSettings) -> float:
-    """Sample spacing of a run, metres: as set, else the grid's own step, and never over `MOST_SAMPLES` samples."""
-    wanted_m = source.step_m if settings.step_km is None else settings.step_km * 1e3
+    """Sample spacing of a run, metres: as set, else the grid's own step, and never over `MOST_SAMPLES` samples.
+
+    Of several sheets the finest counts, but down to a quarter of the frame's step only: one spacing serves the whole
+    run, and a survey of one harbour may cost a run round a continent four times the samples, not a hundred times.
+    """
+    finest_m = min(sheet.step_m for sheet in source.sheets)
+    wanted_m = settings.step_km * 1e3 if settings.step_km else max(finest_m, source.step_m / FINEST_SHARE)
     return max(wanted_m, settings.length_m / MOST_SAMPLES)
 
 
@@ -126,16 +135,18 @@ def sample_profiles(
     seek_row_m = np.where(transects.is_drawn, np.nanmax(transects.node_m, axis=1) / 2, seek_m)
     n_nodes = np.isfinite(transects.node_m).sum(axis=1)
     col, row = _node_index(source, transects)
+    boxes = _boxes(source, col, row)
     depth_m, filled = np.full((n, m), np.nan), np.zeros((n, m), dtype=np.uint8)
     shore_m, land_m = np.full(n, np.nan), np.full(n, np.nan)
     start, end = np.zeros(n, dtype=np.int64), np.full(n, -1, dtype=np.int64)
     n_samples, counts = np.zeros(n, dtype=np.int64), np.zeros((n, 3), dtype=np.int64)
-    for first, stop, window in _windows(source, col, row):
-        grid = source.read(*window)
+    for first, stop, box in _groups(source, boxes):
         rows = slice(first, stop)
+        met, depth, layout = _read_stack(source, box)
+        node = np.stack([index[rows, number] for number in met for index in (row, col)], axis=1)
         tracing.trace_rows(
-            grid.depth_m, grid.row0, grid.col0, grid.wrap_cols,
-            transects.node_m[rows], row[rows], col[rows], n_nodes[rows], step_m, seek_row_m[rows],
+            depth, layout,
+            np.concatenate([transects.node_m[rows, None], node], axis=1), n_nodes[rows], step_m, seek_row_m[rows],
             SHORT_GAP_SAMPLES, SHORT_GAP_SHARE, LEAST_SPIKE_M, SHORE_HAIR_M,
             depth_m[rows], filled[rows], shore_m[rows], start[rows], n_samples[rows], end[rows], land_m[rows],
             counts[rows],
@@ -243,53 +254,94 @@ def distance_along(transects: Transects, row: int, lon_deg: float, lat_deg: floa
 
 
 def _node_index(source: GridSource, transects: Transects) -> tuple[FloatArray, FloatArray]:
-    """Grid index of every node, columns without jumps along a transect where the grid goes round the globe."""
-    col, row = source.index_of(transects.node_lon_deg, transects.node_lat_deg)
-    if source.wraps:
-        col = col[:, :1] + (transects.node_lon_deg - transects.node_lon_deg[:, :1]) / source.dx
+    """(n, s, k) index of every node on every sheet, without jumps along a transect; NaN on sheets it does not meet."""
+    n, k = transects.node_m.shape
+    col, row = np.full((2, n, len(source.sheets), k), np.nan)
+    for number, sheet in enumerate(source.sheets):
+        near = np.ones(n, dtype=bool) if sheet is source.sheets[-1] else _near(sheet, transects)
+        if not near.any():
+            continue
+        lon_deg, lat_deg = transects.node_lon_deg[near], transects.node_lat_deg[near]
+        col[near, number], row[near, number] = sheet.index_of(lon_deg, lat_deg)
+        if sheet.wraps:
+            col[near, number] = col[near, number, :1] + (lon_deg - lon_deg[:, :1]) / sheet.dx
+        elif sheet.is_geographic:
+            turns = np.nan_to_num(np.round(np.diff(col[near, number]) * (sheet.dx / 360.0)))
+            col[near, number, 1:] -= np.cumsum(turns, axis=1) * (360.0 / sheet.dx)
     # far from where a projection holds it gives no finite place
     off_map = ~(np.isfinite(col) & np.isfinite(row))
     return np.where(off_map, np.nan, col), np.where(off_map, np.nan, row)
 
 
-def _windows(
-    source: GridSource, col: FloatArray, row: FloatArray
-) -> Iterator[tuple[int, int, tuple[int, int, int, int]]]:
-    """Cut transects into runs of rows whose windows of the grid (row0, row1, col0, col1) are small enough to read."""
+def _near(sheet: Sheet, transects: Transects) -> BoolArray:
+    """Which transects have a box that meets a sheet's."""
+    lon_deg, lat_deg = transects.node_lon_deg, transects.node_lat_deg
+    boxes = np.stack(
+        [np.nanmin(lon_deg, axis=1), np.nanmin(lat_deg, axis=1), np.nanmax(lon_deg, axis=1), np.nanmax(lat_deg, axis=1)]
+    )
+    sheet_box = sheet.box_deg
+    return np.array([boxes_meet((west, south, east, north), sheet_box) for west, south, east, north in boxes.T])
+
+
+def _boxes(source: GridSource, col: FloatArray, row: FloatArray) -> FloatArray:
+    """(n, s, 4) first and last row, first and last column that each transect needs of each sheet; NaN for none.
+
+    With a cell to spare, and clipped to the sheet; a sheet that a transect passes by is not needed.
+    """
     with warnings.catch_warnings():
         warnings.simplefilter("ignore", RuntimeWarning)  # a transect off the map has no least and no greatest index
-        boxes = np.stack(
-            [np.nanmin(row, axis=1), np.nanmax(row, axis=1), np.nanmin(col, axis=1), np.nanmax(col, axis=1)], axis=1
-        )
+        ends = [np.nanmin(row, axis=2), np.nanmax(row, axis=2), np.nanmin(col, axis=2), np.nanmax(col, axis=2)]
+    box = np.floor(np.stack(ends, axis=2)) + np.array([-1, 3, -1, 3])
+    for number, sheet in enumerate(source.sheets):
+        of_sheet = box[:, number]
+        beside = (of_sheet[:, 0] >= sheet.n_rows) | (of_sheet[:, 1] <= 0)
+        if not sheet.wraps:
+            beside |= (of_sheet[:, 2] >= sheet.n_cols) | (of_sheet[:, 3] <= 0)
+            of_sheet[:, 2:] = np.clip(of_sheet[:, 2:], 0, sheet.n_cols)
+        of_sheet[:, :2] = np.clip(of_sheet[:, :2], 0, sheet.n_rows)
+        of_sheet[beside] = np.nan
+    return np.asarray(box)
+
+
+def _groups(source: GridSource, boxes: FloatArray) -> Iterator[tuple[int, int, FloatArray]]:
+    """Cut transects into runs of rows whose windows of all sheets are small enough to read; the box of each run."""
+    widest = np.array([sheet.n_cols for sheet in source.sheets])
     first, box = 0, boxes[0]
     for k in range(1, len(boxes)):
         wider = _joined(box, boxes[k])
         # far apart, as on two islands, they are cheaper to read one by one
-        if _cells(wider) > min(MOST_CELLS, _cells(box) + _cells(boxes[k])):
-            yield first, k, _window(source, box)
+        if _cells(wider, widest) > min(MOST_CELLS, _cells(box, widest) + _cells(boxes[k], widest)):
+            yield first, k, box
             first, box = k, boxes[k]
         else:
             box = wider
-    yield first, len(boxes), _window(source, box)
+    yield first, len(boxes), box
 
 
-def _cells(box: FloatArray) -> float:
-    """Cells of a box of indices, with the margin of a window."""
-    return float((box[1] - box[0] + 4) * (box[3] - box[2] + 4))
+def _cells(box: FloatArray, widest: IntArray) -> float:
+    """Cells of a box of indices on each sheet, all together."""
+    return float(np.nansum((box[:, 1] - box[:, 0]) * np.minimum(box[:, 3] - box[:, 2], widest)))
 
 
 def _joined(box: FloatArray, other: FloatArray) -> FloatArray:
-    """Least and greatest row, least and greatest column of two boxes of indices."""
-    least, greatest = np.fmin(box, other), np.fmax(box, other)
-    return np.array([least[0], greatest[1], least[2], greatest[3]])
+    """Least and greatest row, least and greatest column of two boxes of indices on each sheet."""
+    return np.where([True, False, True, False], np.fmin(box, other), np.fmax(box, other))
 
 
-def _window(source: GridSource, box: FloatArray) -> tuple[int, int, int, int]:
-    """Window of the grid that holds a box of indices, with a cell to spare, and two rows and columns at least."""
-    row0, row1, col0, col1 = np.clip(np.nan_to_num(box), -1e9, 1e9).astype(int) + np.array([-1, 3, -1, 3])
-    if not source.wraps:
-        col0, col1 = min(max(col0, 0), source.n_cols - 2), max(min(col1, source.n_cols), 2)
-    return min(max(row0, 0), source.n_rows - 2), max(min(row1, source.n_rows), 2), col0, col1
+def _read_stack(source: GridSource, box: FloatArray) -> tuple[IntArray, NDArray[np.float32], IntArray]:
+    """Which sheets a group of transects needs, and their windows as the compiled loops take them, see `Track`."""
+    met = np.flatnonzero(np.isfinite(box).all(axis=1))
+    if not len(met):  # all transects off the grid: any window tells
+        met, box = np.array([len(box) - 1]), np.where(np.isnan(box), np.array([0, 2, 0, 2]), box)
+    grids = [source.sheets[number].read(*box[number].astype(int).tolist()) for number in met]
+    sizes = np.array([grid.depth_m.size for grid in grids])
+    layout = [
+        (begin, *grid.depth_m.shape, grid.row0, grid.col0, grid.wrap_cols)
+        for begin, grid in zip(np.cumsum(sizes) - sizes, grids, strict=True)
+    ]
+    depth = grids[0].depth_m.ravel() if len(grids) == 1 else np.concatenate([grid.depth_m.ravel() for grid in grids])
+    depth.setflags(write=False)  # one type for the loops, so that they are compiled once
+    return met, depth, np.array(layout, dtype=np.int64)
 
 
 def _ends_at_islet(transects: Transects, end: IntArray, land_m: FloatArray, islets: NDArray[np.object_]) -> BoolArray:

@@ -85,11 +85,21 @@ class RasterFile:
             yield dataset
 
     def values(self, dataset: Any, window: Indices) -> NDArray[np.float64]:
-        """Values of a window that lies in the file, given in rows from the south and columns from the west."""
+        """Values of a window that lies in the file, given in rows from the south and columns from the west.
+
+        Raises
+        ------
+        GridError
+            If the file is damaged or shorter than its header says.
+        """
         row0, row1, col0, col1 = window
         row_off = self.n_rows - row1 if self.flip_rows else row0
         col_off = self.n_cols - col1 if self.flip_cols else col0
         stored_window = Window(col_off, row_off, col1 - col0, row1 - row0)
+        with _named(self.path):
+            return self._values(dataset, stored_window)
+
+    def _values(self, dataset: Any, stored_window: Window) -> NDArray[np.float64]:
         stored = dataset.read(self.band, window=stored_window)
         missing = ~np.isfinite(stored)
         if self.nodata is not None:
@@ -135,8 +145,8 @@ class RasterHeader:
     vertical: Mapping[str, str]
 
 
-def read_header(settings: GridSettings) -> RasterHeader:
-    """Read and check the header of a raster.
+def read_header(path: Path, settings: GridSettings) -> RasterHeader:
+    """Read and check the header of one raster; its path in the settings is not used.
 
     Raises
     ------
@@ -144,7 +154,7 @@ def read_header(settings: GridSettings) -> RasterHeader:
         If the file is missing, damaged or on a network, has not the band or variable asked for, is no regular
         north-up grid of real numbers, or has no usable coordinate system.
     """
-    name = _with_variable(_local_name(Path(settings.path)), settings.variable)
+    name = _with_variable(_local_name(path), settings.variable)
     band = settings.band
     with _opened(name) as (dataset, is_georeferenced):
         _check_layout(dataset, band, is_georeferenced, name)
@@ -186,14 +196,20 @@ def projection_of(crs: str) -> Projection:
 @contextmanager
 def _opened(name: str) -> Iterator[tuple[Any, bool]]:
     """Open a raster without a network; also tell whether the file places its cells at all."""
+    with _named(name), rasterio.Env(CPL_VSIL_CURL_ALLOWED_FILENAME="none", GDAL_CACHEMAX=_CACHE_MB):
+        with warnings.catch_warnings(record=True) as caught:
+            warnings.simplefilter("always")
+            dataset = rasterio.open(name)
+        with dataset:
+            misplaced = any(issubclass(warning.category, NotGeoreferencedWarning) for warning in caught)
+            yield dataset, not (misplaced or dataset.gcps[0] or dataset.rpcs)
+
+
+@contextmanager
+def _named(name: str) -> Iterator[None]:
+    """Turn an error of the library into ours, with the name of the file: several may be open."""
     try:
-        with rasterio.Env(CPL_VSIL_CURL_ALLOWED_FILENAME="none", GDAL_CACHEMAX=_CACHE_MB):
-            with warnings.catch_warnings(record=True) as caught:
-                warnings.simplefilter("always")
-                dataset = rasterio.open(name)
-            with dataset:
-                misplaced = any(issubclass(warning.category, NotGeoreferencedWarning) for warning in caught)
-                yield dataset, not (misplaced or dataset.gcps[0] or dataset.rpcs)
+        yield
     except RasterioError as error:
         reason = str(error.__cause__ or error).splitlines()[0][:160]
         raise GridError(

@@ -118,7 +118,11 @@ def test_all_faults_are_named_at_once_each_on_its_line():
 @pytest.mark.parametrize(
     ("tables", "message"),
     [
-        ({"grid": {"path": ["a.tif", "b.tif"]}}, "grid.path = .*: must be the name of a file, in quotes"),
+        ({"grid": {"path": 3}}, "grid.path: path = 3: must be the name of a file, in quotes, or a list of such names"),
+        ({"grid": {"path": ["a.tif", 3]}}, r"path = \['a.tif', 3\]: must be the name of a file, in quotes, or a list"),
+        ({"grid": {"path": []}}, r"path = \[\]: the list is empty; name at least one file"),
+        ({"grid": {"path": ["a.tif", ""]}}, "grid.path: path is empty"),
+        ({"grid": {"path": ["a.tif", "b.tif", "a.tif"]}}, "path names 'a.tif' twice; name each file once"),
         (
             {"grid": {"void_is_land": True}, "coast": {"level_m": 10}},
             "mend\n  grid.void_is_land with coast.level_m = 10",

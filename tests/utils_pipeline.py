@@ -20,7 +20,7 @@ def small_coast(**more):
     return straight_coast(270.0, 40.0, SHELF, **{"cell": 0.05, "shape": (55, 95), **more})
 
 
-def settings_for(grid, folder, **tables):
+def settings_for(grid, folder, /, **tables):
     """Settings of a quick run of a grid into a folder; tables as in TOML, merged into these."""
     content = {
         "title": "test",
