@@ -1,5 +1,6 @@
 """Whole runs: every layer filled, known answers, the same numbers however the work is shared out, honest failures."""
 
+import multiprocessing
 import os
 from concurrent.futures import BrokenExecutor, Executor, ThreadPoolExecutor
 
@@ -248,9 +249,11 @@ def test_progress_is_told_of_every_section(three_sections):
 # ---- failures
 
 
-def die(_section):
-    """Stands in for a section whose process is killed."""
-    os._exit(9)
+def die(section):
+    """Stands in for a section whose process is killed; the first one is done by this process."""
+    if multiprocessing.parent_process() is not None:
+        os._exit(9)
+    return sections.pack_section(section)
 
 
 def test_dead_worker_ends_in_one_sentence_with_the_cure(three_sections, monkeypatch):
