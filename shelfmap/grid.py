@@ -303,6 +303,7 @@ def _as_stored(header: RasterHeader) -> Sheet:
         row0=0,
         col0=0,
         n_cols=n_cols,
+        y_begin=header.y_begin,
         crs_why=header.crs_why,
         positive="up",
         positive_why="",

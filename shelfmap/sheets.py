@@ -110,6 +110,8 @@ class PlacedFile:
         Index of its south-west cell in the sheet.
     n_cols : int
         Columns of it that are used: all but one that repeats the first 360 degrees further on.
+    y_begin : float
+        Outer edge of the row that the file begins with, grid units.
     crs_why : str
         Where its coordinate system comes from.
     positive, positive_why : str
@@ -122,6 +124,7 @@ class PlacedFile:
     row0: int
     col0: int
     n_cols: int
+    y_begin: float
     crs_why: str
     positive: Positive
     positive_why: str
@@ -327,15 +330,19 @@ def _joined(group: Sequence[Sheet]) -> Sheet:
     period = cells_round(first.dx, is_geographic=first.is_geographic)
     if period:
         cols = _round_the_globe(cols, widths, period)
+    tops = rows + np.array([part.n_rows for part in group])
     row0, col0 = int(rows.min()), int(cols.min())
-    n_cols = int((cols + widths).max()) - col0
+    n_rows, n_cols = int(tops.max()) - row0, int((cols + widths).max()) - col0
     wraps = period is not None and n_cols >= period
+    y0 = group[int(rows.argmin())].y0
+    if first.files[0].file.flip_rows:  # counted from the north as for the whole grid: the same to the last bit
+        y0 = group[int(tops.argmax())].files[0].y_begin - first.dy * (n_rows - 0.5)
     return replace(
         first,
         x0=group[int(cols.argmin())].x0,
-        y0=group[int(rows.argmin())].y0,
+        y0=y0,
         dx=360.0 / period if wraps and period else first.dx,
-        n_rows=int(max(row + part.n_rows for row, part in zip(rows, group, strict=True))) - row0,
+        n_rows=n_rows,
         n_cols=period if wraps and period else n_cols,
         wraps=wraps,
         files=tuple(
