@@ -14,7 +14,7 @@ from hypothesis import assume, given
 from hypothesis import settings as hypothesis_settings
 from hypothesis import strategies as st
 from numpy.testing import assert_allclose, assert_array_equal
-from rasterio.transform import from_origin
+from rasterio.transform import Affine
 from rasterio.windows import Window
 from utils_geometry import EMPTY
 from utils_grid import DATA, masked_bilinear, write_nc, write_tif
@@ -521,7 +521,7 @@ def test_a_real_grid_cut_by_its_windows_gives_the_same_tables(tmp_path):
             tiles.append(tmp_path / f"{row}-{col}.tif")
             profile = {"driver": "GTiff", "count": 1, "dtype": grid.dtypes[0], "crs": grid.crs, "nodata": grid.nodata}
             x, y = grid.transform.c + col * grid.transform.a, grid.transform.f + row * grid.transform.e
-            size = {"width": window.width, "height": window.height, "transform": from_origin(x, y, 0.1, 0.1)}
+            size = {"width": window.width, "height": window.height, "transform": Affine(0.1, 0, x, 0, -0.1, y)}
             with rasterio.open(tiles[-1], "w", **profile, **size) as out:
                 out.write(grid.read(window=window))
     assert len(tiles) == 32
