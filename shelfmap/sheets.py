@@ -19,7 +19,7 @@ from shelfmap.rasterfile import Indices, RasterFile
 from shelfmap.settings import VOID_LAND_M
 from shelfmap.vertical import Positive
 
-__all__ = ["Grid", "PlacedFile", "Sheet", "boxes_meet", "join_files"]
+__all__ = ["Grid", "PlacedFile", "Sheet", "boxes_meet", "join_files", "name_of"]
 
 FloatArray = NDArray[np.float64]
 DepthArray = NDArray[np.float32]
@@ -152,8 +152,7 @@ class Sheet(Lattice):
     @property
     def path(self) -> str:
         """Name of the file, or of the first of them and how many more there are."""
-        more = len(self.files) - 1
-        return self.files[0].file.path + (f" and {more} more file{'s'[: more > 1]}" if more else "")
+        return name_of(self.files)
 
     def read(self, row0: int, row1: int, col0: int, col1: int) -> Grid:
         """Depths of a half-open window, clipped to the sheet; columns are taken round the globe where it wraps.
@@ -261,6 +260,12 @@ class Sheet(Lattice):
             wraps=wraps,
             files=tuple(replace(file, row0=file.row0 - row0, col0=file.col0 - col0) for file in self.files),
         )
+
+
+def name_of(files: Sequence[PlacedFile]) -> str:
+    """Name of a file, or of the first of several and how many more there are."""
+    more = len(files) - 1
+    return files[0].file.path + (f" and {more} more file{'s'[: more > 1]}" if more else "")
 
 
 def boxes_meet(one: Box, other: Box) -> bool:

@@ -379,6 +379,25 @@ def test_cells_of_the_frame_take_means_of_the_finest_sheet(stack):
     assert_array_equal(part.depth_m, whole(source).depth_m[2:7, 3:9])
 
 
+def test_windows_over_the_seam_hold_the_same_bits(tmp_path):
+    """Whatever window a cell of the frame is read in, and on whichever turn."""
+    rng = np.random.default_rng(7)
+    coarse = write_tif(tmp_path / "w.tif", WORLD, x0=-180.0, **POLE_TO_POLE)
+    fine_m = rng.uniform(-5000, -10, (70, 90)).astype(np.float32)
+    fine = write_tif(tmp_path / "f.tif", fine_m, x0=160.3, y0=-30.2, dx=0.7, dy=0.9)
+    source = opened(fine, coarse)
+    everything = whole(source).depth_m
+    covered = np.abs(everything + WORLD) > 1e-3
+    assert covered[:, :4].any()
+    assert covered[:, -2:].any()
+    for _ in range(30):
+        row0, col0 = rng.integers(0, 15), rng.integers(-40, 40)
+        window = source.read(row0, row0 + rng.integers(1, 9), col0, col0 + rng.integers(1, 30))
+        rows = window.row0 + np.arange(window.depth_m.shape[0])
+        cols = (window.col0 + np.arange(window.depth_m.shape[1])) % 36
+        assert_array_equal(window.depth_m, everything[np.ix_(rows, cols)])
+
+
 def test_missing_cells_of_upper_sheets_are_no_land(tmp_path):
     """Land is what all files miss."""
     values = np.full((8, 8), -50, np.float32)
@@ -707,6 +726,13 @@ def test_int16_tiles_with_scale_and_a_variable_among_several(tmp_path):
     assert len(source.sheets) == 1
     assert source.dtype == "int16"
     assert_array_equal(whole(source).depth_m, np.where(values == -20, 9.0, -(0.5 * values - 2)))
+
+
+def test_no_points_at_all_and_points_that_the_first_sheet_has(stack):
+    source, _ = stack
+    assert source.sample([], [])[0].shape == (0,)
+    depth_m, state = source.sample(3.3, 50.4 + 0.03 * np.arange(3))
+    assert depth_m.shape == state.shape == (3,)
 
 
 def test_nothing_is_said_while_several_files_are_read(cuts):
