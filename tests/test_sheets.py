@@ -108,6 +108,23 @@ def test_windows_and_samples_of_tiles_are_those_of_the_grid(cuts, row0, n_rows, 
         assert_array_equal(found, state)
 
 
+@pytest.mark.parametrize(
+    "stored", [{"south_up": True}, {"east_first": True}, {"tags": {"AREA_OR_POINT": "Point"}}, {"crs": "OGC:CRS84"}]
+)
+def test_tiles_may_be_stored_otherwise_than_each_other(tmp_path, stored):
+    """South-up, east to west, cells said to be points, longitude named before latitude: all on one lattice."""
+    values = rough((12, 20))
+    paths = [
+        write_tif(tmp_path / "a.tif", values[:, :8], **PLAIN),
+        write_tif(tmp_path / "b.tif", values[:7, 8:], **{**PLAIN, "x0": 5.0}, **stored),
+        write_tif(tmp_path / "c.tif", values[7:, 8:], **{**PLAIN, "x0": 5.0, "y0": 50.875}, **stored),
+    ]
+    for order in (paths, paths[::-1]):
+        source = opened(*order)
+        assert (len(source.sheets), source.x0, source.y0) == (1, 3.0, 50.0)
+        assert_array_equal(whole(source).depth_m, -values)
+
+
 def test_the_first_file_gives_a_cell_and_the_next_fills_what_it_misses(tmp_path):
     upper, lower = np.full((4, 4), -10, np.float32), np.full((4, 6), -20, np.float32)
     upper[1, 2] = np.nan
