@@ -16,10 +16,10 @@ from numpy.typing import ArrayLike, NDArray
 
 from shelfmap._kernels.sampling import INSIDE, OUTSIDE, VOID
 from shelfmap.errors import GridError
-from shelfmap.lattice import Lattice
+from shelfmap.lattice import Lattice, cells_round
 from shelfmap.rasterfile import Indices, RasterHeader, files_behind, projection_of, read_header
 from shelfmap.settings import GridSettings
-from shelfmap.sheets import Grid, PlacedFile, Sheet, join_files
+from shelfmap.sheets import Grid, PlacedFile, Sheet, join_files, name_of
 from shelfmap.vertical import Positive, check_unit, datum_words, decide_positive
 
 __all__ = ["FARTHEST_VALUE_M", "INSIDE", "OUTSIDE", "VOID", "Grid", "GridSource", "open_grid"]
@@ -68,8 +68,7 @@ class GridSource(Lattice):
     @property
     def path(self) -> str:
         """Name of the raster, or of the first and how many more there are."""
-        more = len(self.files) - 1
-        return self.files[0].file.path + (f" and {more} more file{'s'[: more > 1]}" if more else "")
+        return name_of(self.files)
 
     def disk_files(self) -> tuple[Path, ...]:
         """Every local file the depths are read from, those that others refer to among them, in order.
@@ -157,14 +156,17 @@ class GridSource(Lattice):
         row0, row1, col0, col1 = window
         n = min(max(round(self.step_m / sheet.step_m), 1), _MOST_DEPTHS)
         off = (np.arange(n) + 0.5) / n - 0.5
-        col = (np.arange(col0, col1)[:, None] + off).ravel()
+        cols = np.arange(col0, col1) % self.n_cols  # a cell beyond the seam is the same to the last bit
+        col = (cols[:, None] + off).ravel()
         strips = []
         rows = max(1, _DEPTHS_AT_A_TIME // (n * col.size))
         for first, stop in pairwise([*range(row0, row1, rows), row1]):
             row = (np.arange(first, stop)[:, None] + off).ravel()
             depth_m, state = sheet.sample(*self.lonlat_of(*np.meshgrid(col, row)))
             known = (state == INSIDE).reshape(stop - first, n, col1 - col0, n)
-            total_m = np.where(known, depth_m.reshape(known.shape), 0.0).sum(axis=(1, 3))
+            known_m = np.where(known, depth_m.reshape(known.shape), 0.0)
+            # added up in one order, whatever the window
+            total_m = np.asarray(sum(known_m[:, i, :, j] for i in range(n) for j in range(n)))
             n_known = known.sum(axis=(1, 3))
             strips.append(np.where(2 * n_known >= n * n, total_m / np.maximum(n_known, 1), np.nan))
         return np.concatenate(strips)
@@ -302,18 +304,16 @@ def _objection(positive: Positive, texts: Mapping[str, str], lowest: float, high
 
 def _as_stored(header: RasterHeader) -> Sheet:
     """Sheet of one file, values taken as stored and as elevations until the sign is known."""
-    is_geographic = projection_of(header.crs_wkt).is_geographic
-    n_cols = header.file.n_cols
-    cells_round = 360.0 / header.dx
-    # a last column one turn from the first repeats it; a tenth of a cell allows for steps stored in short decimals
-    repeats = is_geographic and abs(n_cols - 1 - cells_round) < 0.1
-    wraps = repeats or (is_geographic and abs(n_cols - cells_round) < 0.1)
-    n_cols -= repeats
+    period = cells_round(header.dx, is_geographic=projection_of(header.crs_wkt).is_geographic)
+    # a last column one turn from the first repeats it
+    n_cols = header.file.n_cols - (header.file.n_cols - 1 == period)
+    wraps = n_cols == period
     placed = PlacedFile(
         file=header.file,
         row0=0,
         col0=0,
         n_cols=n_cols,
+        y_begin=header.y_begin,
         crs_why=header.crs_why,
         positive="up",
         positive_why="",

@@ -128,6 +128,8 @@ class RasterHeader:
         Centre of the south-west cell, grid units.
     dx, dy : float
         Cell sides, grid units, > 0.
+    y_begin : float
+        Outer edge of the row that the file begins with, grid units.
     tags : mapping of str
         Every text of the metadata, by label.
     vertical : mapping of str
@@ -141,6 +143,7 @@ class RasterHeader:
     y0: float
     dx: float
     dy: float
+    y_begin: float
     tags: Mapping[str, str]
     vertical: Mapping[str, str]
 
@@ -182,6 +185,7 @@ def read_header(path: Path, settings: GridSettings) -> RasterHeader:
         y0=transform.f + transform.e * (0.5 if transform.e > 0 else height - 0.5),
         dx=abs(transform.a),
         dy=abs(transform.e),
+        y_begin=transform.f,
         tags=tags | vertical,
         vertical=vertical,
     )

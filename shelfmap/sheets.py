@@ -19,7 +19,7 @@ from shelfmap.rasterfile import Indices, RasterFile
 from shelfmap.settings import VOID_LAND_M
 from shelfmap.vertical import Positive
 
-__all__ = ["Grid", "PlacedFile", "Sheet", "boxes_meet", "join_files"]
+__all__ = ["Grid", "PlacedFile", "Sheet", "boxes_meet", "join_files", "name_of"]
 
 FloatArray = NDArray[np.float64]
 DepthArray = NDArray[np.float32]
@@ -110,6 +110,8 @@ class PlacedFile:
         Index of its south-west cell in the sheet.
     n_cols : int
         Columns of it that are used: all but one that repeats the first 360 degrees further on.
+    y_begin : float
+        Outer edge of the row that the file begins with, grid units.
     crs_why : str
         Where its coordinate system comes from.
     positive, positive_why : str
@@ -122,6 +124,7 @@ class PlacedFile:
     row0: int
     col0: int
     n_cols: int
+    y_begin: float
     crs_why: str
     positive: Positive
     positive_why: str
@@ -149,8 +152,7 @@ class Sheet(Lattice):
     @property
     def path(self) -> str:
         """Name of the file, or of the first of them and how many more there are."""
-        more = len(self.files) - 1
-        return self.files[0].file.path + (f" and {more} more file{'s'[: more > 1]}" if more else "")
+        return name_of(self.files)
 
     def read(self, row0: int, row1: int, col0: int, col1: int) -> Grid:
         """Depths of a half-open window, clipped to the sheet; columns are taken round the globe where it wraps.
@@ -260,6 +262,12 @@ class Sheet(Lattice):
         )
 
 
+def name_of(files: Sequence[PlacedFile]) -> str:
+    """Name of a file, or of the first of several and how many more there are."""
+    more = len(files) - 1
+    return files[0].file.path + (f" and {more} more file{'s'[: more > 1]}" if more else "")
+
+
 def boxes_meet(one: Box, other: Box) -> bool:
     """Whether two boxes (west, south, east, north, degrees) have a point in common, whatever turn they are given in.
 
@@ -327,15 +335,19 @@ def _joined(group: Sequence[Sheet]) -> Sheet:
     period = cells_round(first.dx, is_geographic=first.is_geographic)
     if period:
         cols = _round_the_globe(cols, widths, period)
+    tops = rows + np.array([part.n_rows for part in group])
     row0, col0 = int(rows.min()), int(cols.min())
-    n_cols = int((cols + widths).max()) - col0
+    n_rows, n_cols = int(tops.max()) - row0, int((cols + widths).max()) - col0
     wraps = period is not None and n_cols >= period
+    y0 = group[int(rows.argmin())].y0
+    if first.files[0].file.flip_rows:  # counted from the north as for the whole grid: the same to the last bit
+        y0 = group[int(tops.argmax())].files[0].y_begin - first.dy * (n_rows - 0.5)
     return replace(
         first,
         x0=group[int(cols.argmin())].x0,
-        y0=group[int(rows.argmin())].y0,
+        y0=y0,
         dx=360.0 / period if wraps and period else first.dx,
-        n_rows=int(max(row + part.n_rows for row, part in zip(rows, group, strict=True))) - row0,
+        n_rows=n_rows,
         n_cols=period if wraps and period else n_cols,
         wraps=wraps,
         files=tuple(

@@ -247,6 +247,16 @@ def test_any_content_is_either_taken_or_refused_as_settings(content):
         assert again == found
 
 
+def test_several_grids_keep_their_order_and_stand_in_the_folder(tmp_path):
+    """From TOML and back from JSON; one file or many, `paths` has them all."""
+    (tmp_path / "a.toml").write_text('[grid]\npath = ["z.tif", "/abs/a.nc", "b/c.tif"]\n', encoding="utf-8")
+    found = Settings.from_toml(tmp_path / "a.toml")
+    names = [path.as_posix() for path in found.grid.paths]
+    assert names == [f"{tmp_path.as_posix()}/z.tif", "/abs/a.nc", f"{tmp_path.as_posix()}/b/c.tif"]
+    assert Settings.from_dict(json.loads(found.model_dump_json())) == found
+    assert read(grid={"path": "one.tif"}).grid.paths == (read(grid={"path": "one.tif"}).grid.path,)
+
+
 def test_null_characters_and_endless_nesting_are_one_sentence(tmp_path):
     with pytest.raises(SettingsError, match="holds a null character"):
         read(output={"path": "a\0b.gpkg"})

@@ -3,7 +3,7 @@
 import pickle
 import warnings
 from dataclasses import replace
-from itertools import pairwise
+from itertools import pairwise, product
 from pathlib import Path
 
 import numpy as np
@@ -14,8 +14,10 @@ from hypothesis import assume, given
 from hypothesis import settings as hypothesis_settings
 from hypothesis import strategies as st
 from numpy.testing import assert_allclose, assert_array_equal
+from rasterio.transform import Affine
+from rasterio.windows import Window
 from utils_geometry import EMPTY
-from utils_grid import masked_bilinear, write_nc, write_tif
+from utils_grid import DATA, masked_bilinear, write_nc, write_tif
 from utils_pipeline import assert_same_results, settings_for, small_coast
 
 from shelfmap import profiles as profiles_module
@@ -104,6 +106,23 @@ def test_windows_and_samples_of_tiles_are_those_of_the_grid(cuts, row0, n_rows, 
         found_m, found = other.sample(lon, lat)
         assert_array_equal(found_m, depth_m)
         assert_array_equal(found, state)
+
+
+@pytest.mark.parametrize(
+    "stored", [{"south_up": True}, {"east_first": True}, {"tags": {"AREA_OR_POINT": "Point"}}, {"crs": "OGC:CRS84"}]
+)
+def test_tiles_may_be_stored_otherwise_than_each_other(tmp_path, stored):
+    """South-up, east to west, cells said to be points, longitude named before latitude: all on one lattice."""
+    values = rough((12, 20))
+    paths = [
+        write_tif(tmp_path / "a.tif", values[:, :8], **PLAIN),
+        write_tif(tmp_path / "b.tif", values[:7, 8:], **{**PLAIN, "x0": 5.0}, **stored),
+        write_tif(tmp_path / "c.tif", values[7:, 8:], **{**PLAIN, "x0": 5.0, "y0": 50.875}, **stored),
+    ]
+    for order in (paths, paths[::-1]):
+        source = opened(*order)
+        assert (len(source.sheets), source.x0, source.y0) == (1, 3.0, 50.0)
+        assert_array_equal(whole(source).depth_m, -values)
 
 
 def test_the_first_file_gives_a_cell_and_the_next_fills_what_it_misses(tmp_path):
@@ -377,6 +396,25 @@ def test_cells_of_the_frame_take_means_of_the_finest_sheet(stack):
     assert_array_equal(part.depth_m, whole(source).depth_m[2:7, 3:9])
 
 
+def test_windows_over_the_seam_hold_the_same_bits(tmp_path):
+    """Whatever window a cell of the frame is read in, and on whichever turn."""
+    rng = np.random.default_rng(7)
+    coarse = write_tif(tmp_path / "w.tif", WORLD, x0=-180.0, **POLE_TO_POLE)
+    fine_m = rng.uniform(-5000, -10, (70, 90)).astype(np.float32)
+    fine = write_tif(tmp_path / "f.tif", fine_m, x0=160.3, y0=-30.2, dx=0.7, dy=0.9)
+    source = opened(fine, coarse)
+    everything = whole(source).depth_m
+    covered = np.abs(everything + WORLD) > 1e-3
+    assert covered[:, :4].any()
+    assert covered[:, -2:].any()
+    for _ in range(30):
+        row0, col0 = rng.integers(0, 15), rng.integers(-40, 40)
+        window = source.read(row0, row0 + rng.integers(1, 9), col0, col0 + rng.integers(1, 30))
+        rows = window.row0 + np.arange(window.depth_m.shape[0])
+        cols = (window.col0 + np.arange(window.depth_m.shape[1])) % 36
+        assert_array_equal(window.depth_m, everything[np.ix_(rows, cols)])
+
+
 def test_missing_cells_of_upper_sheets_are_no_land(tmp_path):
     """Land is what all files miss."""
     values = np.full((8, 8), -50, np.float32)
@@ -425,6 +463,46 @@ def test_fine_sheets_of_any_system_lie_over_a_globe(tmp_path, crs, x0, y0, lon, 
     assert_allclose(profiles.depth_m, 30.0)
 
 
+@pytest.mark.parametrize(("dx", "n_cols", "wraps"), [(1.0, 360, True), (0.7, 514, False)])
+def test_a_frame_grows_round_the_globe_and_no_further(tmp_path, dx, n_cols, wraps):
+    """A cap over the pole above a grid from 10 to 50 E and 60 to 84 N; cells of 0.7 degrees do not close the globe."""
+    coarse = write_tif(
+        tmp_path / "c.tif", np.full((24, round(40 / dx)), -900, np.int16), x0=10 + dx / 2, y0=60.5, dx=dx, dy=1.0
+    )
+    cap = write_tif(
+        tmp_path / "p.tif", np.full((80, 80), -70, np.int16), x0=-39e4, y0=-39e4, dx=1e4, dy=1e4, crs="EPSG:3995"
+    )
+    source = opened(cap, coarse)
+    assert (source.n_rows, source.n_cols, source.wraps) == (30, n_cols, wraps)
+    assert source.box_deg[3] == 90.0
+    depth_m, state = source.sample([30.0, 30.0, -120.0, 100.0], [88.0, 70.0, 87.5, 70.0])
+    assert_allclose(depth_m, [70.0, 900.0, 70.0, np.nan])
+    assert_array_equal(state, [INSIDE, INSIDE, INSIDE, VOID])
+    cells = whole(source).depth_m
+    assert_allclose(cells[-1], 70.0)
+    col, row = np.round(source.index_of([30.2, 100.2], [70.5, 70.5])).astype(int)
+    assert_array_equal(cells[row, col], [900.0, np.nan])
+
+
+def test_a_projected_frame_grows_to_hold_what_lies_over_it(tmp_path):
+    """A geographic sheet over the corner of a UTM grid; frames of a projected system have no globe to end at."""
+    coarse = write_tif(
+        tmp_path / "c.tif", np.full((20, 20), -900, np.int16), x0=5e5, y0=5e6, dx=5e3, dy=5e3, crs="EPSG:32631"
+    )
+    fine = write_tif(tmp_path / "f.tif", np.full((80, 80), -70, np.int16), x0=2.6, y0=44.9, dx=0.01, dy=0.01)
+    source = opened(fine, coarse)
+    x, y = Projection("EPSG:32631").from_lonlat(np.array([2.6, 2.6, 3.4]), np.array([44.9, 45.7, 45.7]))
+    assert -1e3 < source.x0 - x.min() < 5e3  # half a cell of the fine sheet lies beyond these corners
+    assert -1e3 < source.y0 - y.min() < 5e3
+    assert source.n_rows > 20
+    assert source.n_cols > 20
+    assert (source.x0 - 5e5) % 5e3 == (source.y0 - 5e6) % 5e3 == 0.0
+    depth_m, _ = source.sample([2.7, 3.9, 4.9], [45.0, 45.5, 45.2])
+    assert_allclose(depth_m, [70.0, 900.0, np.nan])
+    col, row = np.round(source.index_of([2.7, 3.9], [45.0, 45.5])).astype(int)
+    assert_allclose(whole(source).depth_m[row, col], [70.0, 900.0])
+
+
 def test_a_sheet_beyond_the_map_of_the_last_is_refused(tmp_path):
     world = write_tif(tmp_path / "w.tif", WORLD, **POLE_TO_POLE)
     utm = write_tif(tmp_path / "u.tif", rough((6, 6)), x0=5e5, y0=5e6, dx=1e3, dy=1e3, crs="EPSG:32631")
@@ -464,6 +542,30 @@ def test_a_grid_cut_into_tiles_gives_the_same_tables(tmp_path, overlap):
     tiles = write_cut(tmp_path, values, (0, 13, 30, 44), (0, 20, 45, 76), overlap=overlap, **place)
     for name, path in (("one", str(one)), ("cut", [str(tile) for tile in tiles[::-1]])):
         settings = settings_for(one, tmp_path, grid={"path": path}, output={"path": f"{name}.gpkg"})
+        assert (screen(settings).screened.status == "ok").sum() > 10
+    assert_same_results(tmp_path / "one.gpkg", tmp_path / "cut.gpkg")
+
+
+@pytest.mark.real
+def test_a_real_grid_cut_by_its_windows_gives_the_same_tables(tmp_path):
+    """Steps of a tenth of a degree are no binary numbers: places are counted from the same corner all the same."""
+    path = DATA / "etopo1_bering_antimeridian.tif"
+    tiles = []
+    with rasterio.open(path) as grid:
+        for row, col in product(range(0, grid.height, 47), range(0, grid.width, 53)):
+            window = Window(col, row, min(53, grid.width - col), min(47, grid.height - row))
+            tiles.append(tmp_path / f"{row}-{col}.tif")
+            profile = {"driver": "GTiff", "count": 1, "dtype": grid.dtypes[0], "crs": grid.crs, "nodata": grid.nodata}
+            x, y = grid.transform.c + col * grid.transform.a, grid.transform.f + row * grid.transform.e
+            size = {"width": window.width, "height": window.height, "transform": Affine(0.1, 0, x, 0, -0.1, y)}
+            with rasterio.open(tiles[-1], "w", **profile, **size) as out:
+                out.write(grid.read(window=window))
+    assert len(tiles) == 32
+    for name, files in (("one", path), ("cut", [str(tile) for tile in tiles])):
+        settings = settings_for(
+            path, tmp_path, grid={"path": files}, coast={"generalise_km": 60.0, "box": [170.0, 58.0, -170.0, 66.0]},
+            output={"path": f"{name}.gpkg"},
+        )  # fmt: skip
         assert (screen(settings).screened.status == "ok").sum() > 10
     assert_same_results(tmp_path / "one.gpkg", tmp_path / "cut.gpkg")
 
@@ -641,6 +743,13 @@ def test_int16_tiles_with_scale_and_a_variable_among_several(tmp_path):
     assert len(source.sheets) == 1
     assert source.dtype == "int16"
     assert_array_equal(whole(source).depth_m, np.where(values == -20, 9.0, -(0.5 * values - 2)))
+
+
+def test_no_points_at_all_and_points_that_the_first_sheet_has(stack):
+    source, _ = stack
+    assert source.sample([], [])[0].shape == (0,)
+    depth_m, state = source.sample(3.3, 50.4 + 0.03 * np.arange(3))
+    assert depth_m.shape == state.shape == (3,)
 
 
 def test_nothing_is_said_while_several_files_are_read(cuts):
