@@ -17,8 +17,8 @@ PACKAGE = Path(shelfmap.__file__).parent
 #: Modules from the ground up; a module may import those before it. `_kernels` stands for all compiled loops.
 ORDER = [
     "errors", "constants", "words", "settings", "geodesy", "_kernels", "vertical", "rasterfile", "grid", "inspection",
-    "rasters", "synthetic", "demo", "basins", "chains", "coast", "transects", "profiles", "shelfbreak", "deepsea",
-    "modes", "response", "index", "assess", "columns", "antimeridian", "replacement", "vectors", "layers", "tables",
+    "rasters", "synthetic", "demo", "basins", "chains", "closing", "coast", "transects", "profiles", "shelfbreak",
+    "deepsea", "modes", "response", "index", "assess", "columns", "antimeridian", "replacement", "vectors", "layers", "tables",
     "inputs", "provenance", "sections", "pipeline", "cli", "__main__",
 ]  # fmt: skip
 
@@ -27,7 +27,7 @@ ONLY_HERE = {
     "pyproj": {"geodesy"},
     "numba": {"_kernels"},
     "rasterio": {"rasterfile", "rasters"},
-    "contourpy": {"coast", "chains"},
+    "contourpy": {"closing"},
     "geopandas": {"layers", "vectors"},
     "pyogrio": {"layers", "vectors"},
     "pyarrow": {"layers", "vectors"},
