@@ -4,6 +4,7 @@ import zlib
 from bisect import bisect_left, bisect_right
 from collections.abc import Callable, Iterable, Iterator, Sequence
 from dataclasses import dataclass
+from functools import lru_cache
 from typing import Any, Final
 
 import numpy as np
@@ -190,12 +191,21 @@ class Basins:
             tile, kinds = self.tiling.tile(i, j), self._tiles[i, j]
             row0, row1 = max(tile.row0, window.row0), min(tile.row1, window.row1)
             col0, col1 = max(tile.col0 + shift, window.col0), min(tile.col1 + shift, window.col1)
-            labels = np.frombuffer(zlib.decompress(kinds.packed), dtype=kinds.dtype)
-            labels = labels.reshape(tile.row1 - tile.row0, tile.col1 - tile.col0)
-            out[row0 - window.row0 : row1 - window.row0, col0 - window.col0 : col1 - window.col0] = kinds.kind[
+            here = out[row0 - window.row0 : row1 - window.row0, col0 - window.col0 : col1 - window.col0]
+            if len(kinds.held) == 1:
+                here[:] = next(iter(kinds.held))
+                continue
+            labels = _unpacked(kinds.packed, kinds.dtype).reshape(-1, tile.col1 - tile.col0)
+            here[:] = kinds.kind[
                 labels[row0 - tile.row0 : row1 - tile.row0, col0 - shift - tile.col0 : col1 - shift - tile.col0]
             ]
         return out
+
+
+@lru_cache(maxsize=12)  # the neighbours of a tile, and those of the next one
+def _unpacked(packed: bytes, dtype: str) -> LabelArray:
+    """Labels of a tile, row after row."""
+    return np.frombuffer(zlib.decompress(packed), dtype=dtype)
 
 
 def label_basins(
@@ -263,7 +273,11 @@ def _label_tiles(job: tuple[GridSource, Sequence[Tile], float]) -> list[_Waters]
 
 def _label_tile(grid: Grid, level_m: float, cell_m2: FloatArray) -> _Waters:
     """Label the waters of a tile whose rows have cells of these areas."""
-    found, n = ndimage.label(is_water(grid.depth_m, level_m))
+    water = is_water(grid.depth_m, level_m)
+    if water.all() or not water.any():  # most tiles of a globe
+        found, n = water.astype(np.int32), int(water[0, 0])
+    else:
+        found, n = ndimage.label(water)
     missing = np.isnan(grid.depth_m)
     found += found > 0  # 1 is for missing cells
     found[missing] = _MISSING

@@ -5,6 +5,7 @@ Pure functions of what they are given, so that tiles can be traced anywhere in a
 
 from collections.abc import Sequence
 from dataclasses import dataclass
+from functools import lru_cache
 from itertools import pairwise
 from typing import Final
 
@@ -108,6 +109,13 @@ def _land_of_grid(source: GridSource, level_m: float, windows: Sequence[Tile], b
     ]
 
 
+@lru_cache(maxsize=1)  # neighbouring windows are mostly of one shape
+def _cells(shape: tuple[int, int]) -> tuple[FloatArray, FloatArray]:
+    """Column and row of each cell of a window, from its first one."""
+    col, row = np.meshgrid(np.arange(shape[1], dtype=float), np.arange(shape[0], dtype=float))
+    return col, row
+
+
 def _land_polygons(depth_m: NDArray[np.float32], level_m: float, sea: BoolArray, window: Tile) -> Geometries:
     """Land of a window as polygons in grid index; lakes are land, missing cells are like the nearest known."""
     below_m = depth_m.astype(np.float64) + level_m
@@ -117,7 +125,8 @@ def _land_polygons(depth_m: NDArray[np.float32], level_m: float, sea: BoolArray,
     if missing.any():
         nearest = ndimage.distance_transform_edt(missing, return_distances=False, return_indices=True)
         below_m = below_m[tuple(nearest)]
-    filled = contour_generator(z=below_m, fill_type=FillType.OuterOffset).filled(-np.inf, SHORE_HAIR_M)
+    col, row = _cells(below_m.shape)
+    filled = contour_generator(col, row, below_m, fill_type=FillType.OuterOffset).filled(-np.inf, SHORE_HAIR_M)
     corner = np.array([window.col0, window.row0], dtype=float)
     polygons = [
         shapely.polygons(rings[0], rings[1:] or None)

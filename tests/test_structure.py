@@ -18,8 +18,8 @@ PACKAGE = Path(shelfmap.__file__).parent
 ORDER = [
     "errors", "constants", "words", "settings", "geodesy", "_kernels", "vertical", "rasterfile", "grid", "inspection",
     "rasters", "synthetic", "demo", "basins", "chains", "closing", "coast", "transects", "profiles", "shelfbreak",
-    "deepsea", "modes", "response", "index", "assess", "columns", "antimeridian", "replacement", "vectors", "layers", "tables",
-    "inputs", "provenance", "sections", "pipeline", "cli", "__main__",
+    "deepsea", "modes", "response", "index", "assess", "columns", "antimeridian", "replacement", "vectors", "layers",
+    "tables", "inputs", "provenance", "sections", "pipeline", "cli", "__main__",
 ]  # fmt: skip
 
 #: Libraries that only these modules import.
