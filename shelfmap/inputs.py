@@ -14,6 +14,7 @@ from shelfmap.grid import GridSource
 from shelfmap.settings import Settings
 from shelfmap.transects import Transects, lay_transects, transects_from_lines
 from shelfmap.vectors import VectorData, read_vector
+from shelfmap.workers import Mapped
 
 __all__ = ["make_coast", "make_transects", "picked_breaks"]
 
@@ -30,7 +31,7 @@ _ID_NAMES: Final = ("transect_id", "transect_i")
 BACKWARD_FALL_M: Final = 20.0
 
 
-def make_coast(source: GridSource, settings: Settings, *, mapped: object = map) -> Coast:
+def make_coast(source: GridSource, settings: Settings, *, mapped: Mapped = map) -> Coast:
     """Coast of a run: from the grid, or from the vector file of the settings (polygons are land, lines the coast).
 
     Parameters
@@ -39,6 +40,8 @@ def make_coast(source: GridSource, settings: Settings, *, mapped: object = map) 
         The bathymetry.
     settings : Settings
         Of which `coast` counts.
+    mapped : Mapped
+        Runs the tiles of the grid, in this process by default; the coast is the same wherever they run.
 
     Raises
     ------
@@ -48,11 +51,11 @@ def make_coast(source: GridSource, settings: Settings, *, mapped: object = map) 
         If the file cannot be read.
     """
     if settings.coast.file is None:
-        return trace_coast(source, settings.coast)
+        return trace_coast(source, settings.coast, mapped=mapped)
     data = read_vector(settings.coast.file, settings.coast.layer)
     kind = shapely.get_dimensions(data.geometry)
     if (kind == _POLYGON).any():
-        return trace_coast(source, settings.coast, land=data.geometry[kind == _POLYGON])
+        return trace_coast(source, settings.coast, land=data.geometry[kind == _POLYGON], mapped=mapped)
     if (kind == _LINE).any():
         return coast_from_lines(source, data.geometry[kind == _LINE], str(data.path))
     raise CoastError(f"{data.path}: holds neither lines nor polygons; give the coast as lines, or the land as polygons")

@@ -19,7 +19,7 @@ from shelfmap.layers import pack, to_columns, to_table, unpack
 from shelfmap.profiles import step_of
 from shelfmap.settings import Settings
 from shelfmap.transects import Transects
-from shelfmap.workers import Mapping
+from shelfmap.workers import Mapped
 
 __all__ = ["Laid", "lay", "timed"]
 
@@ -55,14 +55,14 @@ class Laid:
             raise GridError(f"{self.source.path}: has changed while it was read; run again once nothing writes to it")
 
 
-def lay(settings: Settings, mapped: Mapping, kept: Checkpoint | None = None) -> Laid:
+def lay(settings: Settings, mapped: Mapped, kept: Checkpoint | None = None) -> Laid:
     """Open the grid, make the coast and lay the transects.
 
     Parameters
     ----------
     settings : Settings
         Of the run.
-    mapped : Mapping
+    mapped : Mapped
         Does the work on the coast.
     kept : Checkpoint, optional
         Where a coast traced from the grid is kept, and taken from.
@@ -120,7 +120,7 @@ def _warn_of_coarse_cells(source: GridSource, settings: Settings) -> None:
         )
 
 
-def _coast(source: GridSource, settings: Settings, mapped: Mapping, kept: Checkpoint | None, content: str) -> Coast:
+def _coast(source: GridSource, settings: Settings, mapped: Mapped, kept: Checkpoint | None, content: str) -> Coast:
     """Coast kept by a stopped run, else made, and kept where it took reading the whole grid."""
     if kept is None or settings.coast.file is not None:
         return make_coast(source, settings, mapped=mapped)

@@ -29,7 +29,7 @@ from shelfmap.settings import Settings
 from shelfmap.stations import station_layers
 from shelfmap.tables import Columns
 from shelfmap.transects import Transects
-from shelfmap.workers import Mapping, mapping
+from shelfmap.workers import Mapped, mapping
 
 __all__ = ["Progress", "Run", "screen", "write_coast", "write_transects"]
 
@@ -259,7 +259,7 @@ class _Islets:
 
 
 def _packed_sections(
-    laid: Laid, settings: Settings, picks: NDArray[np.object_], mapped: Mapping, kept: Checkpoint
+    laid: Laid, settings: Settings, picks: NDArray[np.object_], mapped: Mapped, kept: Checkpoint
 ) -> Iterator[bytes]:
     """Give the packed rows of every section in order: kept ones as they are, the others screened and kept."""
     run_key = _run_key(laid, settings)

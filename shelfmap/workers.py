@@ -13,7 +13,7 @@ from typing import Any, Final, Protocol, TypeVar
 
 from shelfmap.errors import SettingsError, ShelfmapError
 
-__all__ = ["Mapping", "mapping"]
+__all__ = ["Mapped", "mapping"]
 
 _Job = TypeVar("_Job")
 _Result = TypeVar("_Result")
@@ -27,7 +27,7 @@ RETRIES: Final = 3
 _PATIENCE_S: Final = 10
 
 
-class Mapping(Protocol):
+class Mapped(Protocol):
     """Like the builtin `map` of one iterable: results in the order of the jobs, which are taken a few ahead."""
 
     def __call__(self, function: Callable[[_Job], _Result], jobs: Iterable[_Job], /) -> Iterator[_Result]:
@@ -35,7 +35,7 @@ class Mapping(Protocol):
 
 
 @contextmanager
-def mapping(workers: int = 1, executor: Executor | None = None, scheduler: str | None = None) -> Iterator[Mapping]:
+def mapping(workers: int = 1, executor: Executor | None = None, scheduler: str | None = None) -> Iterator[Mapped]:
     """Give the `map` of a run.
 
     Parameters
@@ -77,7 +77,7 @@ def mapping(workers: int = 1, executor: Executor | None = None, scheduler: str |
         ) from error
 
 
-def _ordered(executor: Executor, ahead: int) -> Mapping:
+def _ordered(executor: Executor, ahead: int) -> Mapped:
     """Map over an executor in order, with at most `ahead` jobs handed out and not yet collected."""
 
     def mapped(function: Callable[[_Job], _Result], jobs: Iterable[_Job], /) -> Iterator[_Result]:
@@ -98,7 +98,7 @@ def _ordered(executor: Executor, ahead: int) -> Mapping:
 
 
 @contextmanager
-def _cluster(address: str) -> Iterator[Mapping]:
+def _cluster(address: str) -> Iterator[Mapped]:
     """Map over the workers of a dask.distributed scheduler; jobs of workers that are lost are done again by others."""
     try:
         from distributed import Client  # noqa: PLC0415 - an extra, and slow to import

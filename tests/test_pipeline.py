@@ -19,6 +19,7 @@ from shelfmap.geodesy import distance_bearing
 from shelfmap.grid import open_grid
 from shelfmap.pipeline import screen
 from shelfmap.provenance import status_counts
+from shelfmap.sections import pack_section
 from shelfmap.settings import Settings
 from shelfmap.synthetic import step_profile, straight_coast
 from shelfmap.vectors import read_table, read_vector
@@ -253,7 +254,7 @@ def die(section):
     """Stands in for a section whose process is killed; the first one is done by this process."""
     if multiprocessing.parent_process() is not None:
         os._exit(9)
-    return sections.pack_section(section)
+    return pack_section(section)
 
 
 def test_dead_worker_ends_in_one_sentence_with_the_cure(three_sections, monkeypatch):

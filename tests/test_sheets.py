@@ -26,12 +26,12 @@ from shelfmap.errors import GridError, LayerError
 from shelfmap.geodesy import Projection
 from shelfmap.grid import INSIDE, OUTSIDE, VOID, open_grid
 from shelfmap.inspection import inspect_grid
-from shelfmap.vectors import read_table
 from shelfmap.pipeline import screen
 from shelfmap.profiles import place_on, sample_profiles, step_of
 from shelfmap.settings import VOID_LAND_M, GridSettings, TransectSettings
 from shelfmap.sheets import boxes_meet
 from shelfmap.transects import transects_from_lines
+from shelfmap.vectors import read_table
 
 NO_COAST = Coast(lines=(), islets=EMPTY, source="none")
 PLAIN = {"x0": 3.0, "y0": 50.0, "dx": 0.25, "dy": 0.125}  # sides that binary numbers hold exactly
