@@ -18,7 +18,7 @@ from rasterio.transform import Affine
 from rasterio.windows import Window
 from utils_geometry import EMPTY
 from utils_grid import DATA, masked_bilinear, write_nc, write_tif
-from utils_pipeline import assert_same_results, settings_for, small_coast
+from utils_pipeline import assert_same_results, screened_of, settings_for, small_coast
 
 from shelfmap import profiles as profiles_module
 from shelfmap.coast import Coast
@@ -542,7 +542,7 @@ def test_a_grid_cut_into_tiles_gives_the_same_tables(tmp_path, overlap):
     tiles = write_cut(tmp_path, values, (0, 13, 30, 44), (0, 20, 45, 76), overlap=overlap, **place)
     for name, path in (("one", str(one)), ("cut", [str(tile) for tile in tiles[::-1]])):
         settings = settings_for(one, tmp_path, grid={"path": path}, output={"path": f"{name}.gpkg"})
-        assert (screen(settings).screened.status == "ok").sum() > 10
+        assert (screen(settings).status == "ok").sum() > 10
     assert_same_results(tmp_path / "one.gpkg", tmp_path / "cut.gpkg")
 
 
@@ -566,7 +566,7 @@ def test_a_real_grid_cut_by_its_windows_gives_the_same_tables(tmp_path):
             path, tmp_path, grid={"path": files}, coast={"generalise_km": 60.0, "box": [170.0, 58.0, -170.0, 66.0]},
             output={"path": f"{name}.gpkg"},
         )  # fmt: skip
-        assert (screen(settings).screened.status == "ok").sum() > 10
+        assert (screen(settings).status == "ok").sum() > 10
     assert_same_results(tmp_path / "one.gpkg", tmp_path / "cut.gpkg")
 
 
@@ -597,10 +597,11 @@ def test_a_fine_survey_over_a_coarse_grid_is_followed(tmp_path):
         coarse, tmp_path, grid={"path": [str(fine), str(coarse)]},
         transects={"spacing_km": 2.0, "length_km": 60.0, "step_km": 0.4},
     )  # fmt: skip
-    run = screen(settings)
-    profiles, transects = run.screened.profiles, run.screened.transects
+    source = open_grid(settings.grid)
+    _, screened = screened_of(settings)
+    profiles, transects = screened.profiles, screened.transects
     lon, lat = place_on(transects, profiles.shore_m[:, None] + profiles.distance_m)
-    col, row = run.source.sheets[0].index_of(lon, lat)
+    col, row = source.sheets[0].index_of(lon, lat)
     raw = np.isfinite(profiles.depth_m) & ~profiles.is_filled & (profiles.distance_m > 0)
     known = raw & (col > 1) & (col < 198) & (row > 1) & (row < 148) & ((row < 59) | (row > 64))
     assert known.sum() > 500
@@ -610,8 +611,8 @@ def test_a_fine_survey_over_a_coarse_grid_is_followed(tmp_path):
     assert void.sum() > 20
     assert_allclose(profiles.depth_m[void], coarse_m[void], atol=0.02)
     # stations follow the survey's coast where there is one, and the coarse one elsewhere
-    on_survey = (run.source.sheets[0].index_of(transects.lon_deg, transects.lat_deg)[1] > 10) & (
-        run.source.sheets[0].index_of(transects.lon_deg, transects.lat_deg)[1] < 140
+    on_survey = (source.sheets[0].index_of(transects.lon_deg, transects.lat_deg)[1] > 10) & (
+        source.sheets[0].index_of(transects.lon_deg, transects.lat_deg)[1] < 140
     )
     east_m = (transects.lon_deg + 9.5) * 111_320 * np.cos(np.radians(40.0))
     assert np.abs(np.median(east_m[on_survey])) < 1e3
