@@ -52,8 +52,15 @@ def _spoken(command: _F) -> _F:
                 if level <= logging.DEBUG:
                     click.echo(traceback.format_exc(), err=True, nl=False)
                 taken = isinstance(error, OutputExistsError)
-                click.echo(f"Error: {error}{' (--overwrite allows it)' if taken else ''}", err=True)
+                click.echo(_plain(f"Error: {error}{' (--overwrite allows it)' if taken else ''}"), err=True)
                 raise click.exceptions.Exit(EXIT_USAGE if taken else EXIT_FAILED) from None
+            except MemoryError as error:
+                click.echo(
+                    f"Error: memory ran out ({_plain(str(error)) or 'no more to be had'}); take a smaller region, "
+                    "a larger transects.spacing_km or transects.step_km",
+                    err=True,
+                )
+                raise click.exceptions.Exit(EXIT_FAILED) from None
 
     return spoken  # type: ignore[return-value]
 
@@ -80,6 +87,7 @@ def _messages(level: int) -> Iterator[None]:
     """Print logs from `level` on and, unless quiet, warnings: a line each."""
     log, handler = logging.getLogger("shelfmap"), logging.StreamHandler()
     handler.setFormatter(logging.Formatter("%(levelname)s: %(message)s"))
+    handler.addFilter(_plain_record)
     before = log.level
     log.addHandler(handler)
     log.setLevel(level)
@@ -162,7 +170,7 @@ def inspect(grid: Path, as_json: bool, **given: Any) -> None:
         table = {"path": str(grid)} | {name: value for name, value in given.items() if value is not None}
         settings = Settings.from_dict({"grid": table}, folder=Path.cwd(), where="command line").grid
     report = inspect_grid(settings)
-    click.echo(json.dumps(report.as_dict(), indent=2) if as_json else "\n".join(report.lines()))
+    click.echo(json.dumps(report.as_dict(), indent=2) if as_json else _plain("\n".join(report.lines())))
     if not report.can_screen:
         raise click.exceptions.Exit(EXIT_NO)
 
@@ -236,7 +244,17 @@ def _read(settings_file: Path) -> "Settings":
 def _say(text: str, *, end: str = "\n") -> None:
     """Tell people, not programs; quiet means quiet."""
     if logging.getLogger("shelfmap").isEnabledFor(logging.WARNING):
-        click.echo(text + end, err=True, nl=False)
+        click.echo(_plain(text) + end, err=True, nl=False)
+
+
+def _plain(text: str) -> str:
+    """Text without the control characters that file names and settings may hold: a terminal would obey them."""
+    return "".join(c if c.isprintable() or c == "\n" else f"\\u{ord(c):04x}" for c in text)
+
+
+def _plain_record(record: logging.LogRecord) -> bool:
+    record.msg, record.args = _plain(record.getMessage()), None
+    return True
 
 
 def _screen(settings: "Settings", *, as_json: bool, **how: Any) -> None:

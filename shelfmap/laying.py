@@ -26,6 +26,9 @@ __all__ = ["Laid", "lay", "timed"]
 #: A grid with fewer cells than this in `generalise_km` gives bearings that follow the steps of its shoreline.
 FEWEST_COAST_CELLS: Final = 4.0
 
+#: A coast that took less than this is made again rather than kept, seconds.
+LEAST_KEPT_S: Final = 5.0
+
 _LOG = logging.getLogger(__name__)
 
 
@@ -121,15 +124,17 @@ def _warn_of_coarse_cells(source: GridSource, settings: Settings) -> None:
 
 
 def _coast(source: GridSource, settings: Settings, mapped: Mapped, kept: Checkpoint | None, content: str) -> Coast:
-    """Coast kept by a stopped run, else made, and kept where it took reading the whole grid."""
+    """Coast kept by a stopped run, else made, and kept where that took long."""
     if kept is None or settings.coast.file is not None:
         return make_coast(source, settings, mapped=mapped)
     key = digest("coast", content, settings.coast.model_dump_json())
     data = kept.load(key)
     if data is not None:
         return _unpack_coast(data)
+    start = time.perf_counter()
     coast = make_coast(source, settings, mapped=mapped)
-    kept.save(key, _pack_coast(coast))
+    if time.perf_counter() - start >= LEAST_KEPT_S:
+        kept.save(key, _pack_coast(coast))
     return coast
 
 

@@ -214,7 +214,7 @@ def _check_output(settings: Settings, path: Path, *, overwrite: bool) -> None:
         ("shelf_break.file", settings.shelf_break.file),
     ]
     for name, given in inputs:
-        if given is not None and given.resolve() == path.resolve():
+        if given is not None and given.exists() and path.exists() and given.samefile(path):
             raise LayerError(f"output {path} is {name} too and would be lost; write to another file")
     check_target(path, overwrite=overwrite)
 

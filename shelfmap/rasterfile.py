@@ -4,14 +4,18 @@ Together with `rasters`, which writes, the only place that knows the raster libr
 from south to north, columns from west to east, scaled, and NaN where missing.
 """
 
+import math
+import os
 import re
+import threading
 import warnings
-from collections.abc import Iterator, Mapping
+from collections import OrderedDict
+from collections.abc import Iterable, Iterator, Mapping
 from contextlib import contextmanager
 from dataclasses import dataclass
 from functools import lru_cache
 from pathlib import Path
-from typing import Any, Final
+from typing import Any, Final, NamedTuple
 
 import numpy as np
 import rasterio
@@ -22,6 +26,7 @@ from rasterio.windows import Window
 
 from shelfmap.errors import GridError
 from shelfmap.geodesy import WGS84, Projection
+from shelfmap.localfiles import CLOSED, archive_of, local_file, why_refused
 from shelfmap.settings import GridSettings
 
 __all__ = ["Indices", "RasterFile", "RasterHeader", "disk_file", "files_behind", "projection_of", "read_header"]
@@ -32,9 +37,18 @@ Indices = tuple[int, int, int, int]
 # Blocks the library keeps: enough for one row of tiles round the globe at 15 arc-seconds.
 _CACHE_MB: Final = 256
 
-_LOCAL_ARCHIVE: Final = re.compile(r"/vsi(zip|tar|gzip)/+(.+?\.(?:zip|tgz|tar\.gz|tar|gz))((?:/.*)?)", re.IGNORECASE)
-_NETWORK_PATH: Final = re.compile(r"/vsi|\b[a-z][a-z0-9+.-]+:/|^\w{2,}:|<", re.IGNORECASE)
-_NETWORK_FILE: Final = re.compile(rb"<(GDAL_WMS|GDAL_WMTS|WCS_GDAL|WMS_|WMT_|WMTS|Capabilities)")
+#: Rasters kept open: systems allow a process a few hundred files.
+_MOST_HANDLES: Final = 64
+_HANDLES: Final = threading.local()
+#: Types whose every value a float32 holds exactly.
+_EXACT_IN_SINGLE: Final = ("int8", "uint8", "int16", "uint16", "float16", "float32")
+
+#: A compressed block is unpacked whole, however little of it is asked for: none may be larger, bytes.
+_MOST_BLOCK_BYTES: Final = 2**30
+#: Cells have no smaller sides, degrees or units of the system: they would be one place in double precision.
+_LEAST_STEP: Final = 1e-7
+#: A larger grid than this is a mistake or a trap: seven times all of the globe at 15 arc-seconds, cells.
+_MOST_CELLS: Final = 25_000_000_000
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -84,8 +98,10 @@ class RasterFile:
                 raise GridError(f"{self.path}: the file has changed since it was opened first; start again")
             yield dataset
 
-    def values(self, dataset: Any, window: Indices) -> NDArray[np.float64]:
+    def values(self, dataset: Any, window: Indices) -> NDArray[np.floating[Any]]:
         """Values of a window that lies in the file, given in rows from the south and columns from the west.
+
+        In single precision where that holds them exactly, else in double precision.
 
         Raises
         ------
@@ -97,21 +113,29 @@ class RasterFile:
         col_off = self.n_cols - col1 if self.flip_cols else col0
         stored_window = Window(col_off, row_off, col1 - col0, row1 - row0)
         with _named(self.path):
-            return self._values(dataset, stored_window)
-
-    def _values(self, dataset: Any, stored_window: Window) -> NDArray[np.float64]:
-        stored = dataset.read(self.band, window=stored_window)
-        missing = ~np.isfinite(stored)
-        if self.nodata is not None:
-            # a missing value such as -9999.9 is compared as the stored type rounds it
-            floating = np.issubdtype(stored.dtype, np.floating)
-            with np.errstate(over="ignore"):
-                missing |= stored == (stored.dtype.type(self.nodata) if floating else self.nodata)
-        if MaskFlags.per_dataset in dataset.mask_flag_enums[self.band - 1]:
-            missing |= dataset.read_masks(self.band, window=stored_window) == 0
-        value = self.scale * stored.astype(np.float64) + self.offset
+            stored = dataset.read(self.band, window=stored_window)
+            missing = self._missing(stored)
+            if MaskFlags.per_dataset in dataset.mask_flag_enums[self.band - 1]:
+                missing |= dataset.read_masks(self.band, window=stored_window) == 0
+        value = stored.astype(np.float32 if stored.dtype in _EXACT_IN_SINGLE else np.float64)
+        if (self.scale, self.offset) != (1.0, 0.0):
+            value = self.scale * value.astype(np.float64) + self.offset
         value[missing] = np.nan
         return np.asarray(value[:: -1 if self.flip_rows else 1, :: -1 if self.flip_cols else 1])
+
+    def _missing(self, stored: NDArray[Any]) -> NDArray[np.bool_]:
+        """Where stored values mean missing."""
+        is_float = np.issubdtype(stored.dtype, np.floating)
+        missing = ~np.isfinite(stored) if is_float else np.zeros(stored.shape, dtype=bool)
+        if self.nodata is None:
+            return missing
+        nodata: Any = self.nodata
+        if is_float:  # a missing value such as -9999.9 is compared as the stored type rounds it
+            with np.errstate(over="ignore"):
+                nodata = stored.dtype.type(nodata)
+        elif np.isfinite(nodata) and nodata == int(nodata):
+            nodata = int(nodata)  # compared as it stands, without turning all into floats
+        return np.asarray(missing | (stored == nodata))
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -200,13 +224,57 @@ def projection_of(crs: str) -> Projection:
 @contextmanager
 def _opened(name: str) -> Iterator[tuple[Any, bool]]:
     """Open a raster without a network; also tell whether the file places its cells at all."""
-    with _named(name), rasterio.Env(CPL_VSIL_CURL_ALLOWED_FILENAME="none", GDAL_CACHEMAX=_CACHE_MB):
+    with _named(name), rasterio.Env(**CLOSED, GDAL_CACHEMAX=_CACHE_MB):
+        yield _handle(name)
+
+
+def _handle(name: str) -> tuple[Any, bool]:
+    """Open raster, kept open for the next windows, so that blocks unpacked for one serve the others.
+
+    One for each thread and process, opened anew once any file it is read from has changed or gone.
+    """
+    handles: OrderedDict[tuple[str, int], _Handle] = _HANDLES.__dict__.setdefault("open", OrderedDict())
+    key = (name, os.getpid())
+    if key not in handles or handles[key].stamps != _stamps(handles[key].files):
         with warnings.catch_warnings(record=True) as caught:
             warnings.simplefilter("always")
             dataset = rasterio.open(name)
-        with dataset:
-            misplaced = any(issubclass(warning.category, NotGeoreferencedWarning) for warning in caught)
-            yield dataset, not (misplaced or dataset.gcps[0] or dataset.rpcs)
+        misplaced = any(issubclass(warning.category, NotGeoreferencedWarning) for warning in caught)
+        is_georeferenced = not (misplaced or dataset.gcps[0] or dataset.rpcs)
+        files = _disk_files(dataset.files or [name])
+        handles[key] = _Handle(dataset, is_georeferenced, files, _stamps(files))
+        while len(handles) > _MOST_HANDLES:
+            handles.popitem(last=False)  # closed once nobody reads from it
+    handles.move_to_end(key)
+    return handles[key].dataset, handles[key].is_georeferenced
+
+
+class _Handle(NamedTuple):
+    """A raster that is kept open, and the state of its files then."""
+
+    dataset: Any
+    is_georeferenced: bool
+    files: tuple[Path, ...]
+    stamps: list[tuple[int, ...]]
+
+
+def _stamps(files: Iterable[Path]) -> list[tuple[int, ...]]:
+    """Identity, size and time of change of files; nothing for one that has gone."""
+    stamps: list[tuple[int, ...]] = []
+    for file in files:
+        try:
+            stat = file.stat()
+            stamps.append((stat.st_ino, stat.st_size, stat.st_mtime_ns))
+        except OSError:
+            stamps.append(())
+    return stamps
+
+
+def _disk_files(names: Iterable[str]) -> tuple[Path, ...]:
+    """Local files, archives among them, behind names of GDAL's."""
+    paths = [Path(name) for name in names]
+    found = (path if (archive := archive_of(path)) is None else archive[1] for path in paths)
+    return tuple(sorted({path for path in found if path.is_file()}))
 
 
 @contextmanager
@@ -232,16 +300,10 @@ def disk_file(path: Path) -> Path:
     """
     if path.is_dir():
         raise GridError(f"{path}: is a folder; name the raster file in it")
-    if path.is_file():
-        return path
-    text = path.as_posix()
-    if archive := _archive(text):
-        return archive
-    if not _LOCAL_ARCHIVE.fullmatch(text) and _NETWORK_PATH.search(text):
-        raise GridError(
-            f"{text}: network paths are not opened in this version; download the grid and name the local file"
-        )
-    raise GridError(f"{text}: no such file; check grid.path, which is relative to the settings file")
+    file, why = local_file(path, "grid.path")
+    if file is None:
+        raise GridError(f"{path.as_posix()}: {why}")
+    return file
 
 
 def files_behind(name: str) -> tuple[Path, ...]:
@@ -253,34 +315,22 @@ def files_behind(name: str) -> tuple[Path, ...]:
         If it cannot be opened.
     """
     with _opened(name) as (dataset, _):
-        names = dataset.files or [name]
-    found = (_archive(file) or Path(file) for file in names)
-    return tuple(sorted({path for path in found if path.is_file()}))
-
-
-def _archive(name: str) -> Path | None:
-    """Archive that holds a file of GDAL's; None for one that stands by itself."""
-    archive = _LOCAL_ARCHIVE.fullmatch(name)
-    if archive is None:
-        return None
-    # a Path folds the double slash of /vsizip//tmp/a.zip, so the archive may be absolute all the same
-    return next((path for path in (Path("/" + archive[2]), Path(archive[2])) if path.is_file()), None)
+        return _disk_files(dataset.files or [name])
 
 
 def _local_name(path: Path) -> str:
     """Name GDAL opens for a local file."""
     file = disk_file(path)
-    if file != path:
-        kind, _, inner = _LOCAL_ARCHIVE.fullmatch(path.as_posix()).groups()  # type: ignore[union-attr]
-        return f"/vsi{kind.lower()}/{file.as_posix()}{inner}"
     try:
-        with file.open("rb") as stream:
-            start = stream.read(4096)
+        why = why_refused(file)
     except OSError as error:
         raise GridError(f"{path}: cannot be opened ({error.strerror}); make it readable") from error
-    if _NETWORK_FILE.search(start):
-        raise GridError(f"{path}: describes a network service, which is not opened in this version; download the grid")
-    return str(path)
+    if why is not None:
+        raise GridError(f"{path}: {why}")
+    archive = archive_of(path) if file != path else None
+    if archive is not None:
+        return f"/vsi{archive[0]}/{file.as_posix()}{archive[2]}"
+    return str(path.absolute()) if ":" in str(path) else str(path)  # GDAL takes what stands before a colon for a driver
 
 
 def _with_variable(name: str, variable: str | None) -> str:
@@ -305,6 +355,12 @@ def _check_layout(dataset: Any, band: int, is_georeferenced: bool, name: str) ->
         raise GridError(f"{name}: has {dataset.count} band(s), no band {band}; set grid.band to one it has")
     if "complex" in str(dataset.dtypes[band - 1]):
         raise GridError(f"{name}: holds complex numbers; give a grid of real elevations or depths")
+    block_bytes = math.prod(dataset.block_shapes[band - 1]) * np.dtype(dataset.dtypes[band - 1]).itemsize
+    if dataset.width * dataset.height > _MOST_CELLS or block_bytes > _MOST_BLOCK_BYTES:
+        raise GridError(
+            f"{name}: says it has {dataset.height} by {dataset.width} cells in blocks of {block_bytes / 1e6:.0f} MB; "
+            f"cut it to the region, of {_MOST_CELLS:.0e} cells at most, and write it in blocks of less than 1 GB"
+        )
     if dataset.width < 2 or dataset.height < 2:
         raise GridError(
             f"{name}: has {dataset.height} row(s) and {dataset.width} column(s); a grid needs two of each at least"
@@ -315,6 +371,15 @@ def _check_layout(dataset: Any, band: int, is_georeferenced: bool, name: str) ->
             "missing coordinates); warp it to a regular north-up grid"
         )
     transform = dataset.transform
+    steps = abs(transform.a), abs(transform.e)
+    if not (np.isfinite(transform[:6]).all() and min(steps) >= _LEAST_STEP):
+        raise GridError(
+            f"{name}: cells have sides of {transform.a:g} and {transform.e:g} from {transform.c:g}, {transform.f:g}; "
+            f"give a grid of steps of {_LEAST_STEP:g} at least, at finite places"
+        )
+    scale, offset = dataset.scales[band - 1], dataset.offsets[band - 1]
+    if not (np.isfinite([scale, offset]).all() and scale != 0):
+        raise GridError(f"{name}: values are scaled by {scale:g} and moved by {offset:g}; set a finite scale, not 0")
     if max(abs(transform.b), abs(transform.d)) > 1e-9 * max(abs(transform.a), abs(transform.e)):
         raise GridError(f"{name}: is rotated or sheared; warp it to a north-up grid")
 

@@ -7,6 +7,7 @@ stages, through the ``_m`` properties here.
 
 import difflib
 import json
+import re
 import tomllib
 from pathlib import Path
 from typing import Annotated, Any, Final, Literal, Self, TypeVar
@@ -32,8 +33,33 @@ __all__ = [
 #: Missing cells taken as land (`GridSettings.void_is_land`) stand this high above the water, metres: the shoreline of a
 #: grid that holds depths only falls between its last wet cell and the next.
 VOID_LAND_M: Final = 10.0
+#: Longest name of a file, and longest path, that systems take, less room for the folder of the settings.
+_NAME_BYTES: Final = 255
+_PATH_BYTES: Final = 3000
 #: Depths a deep sea may have, metres.
 DEEP_M: Final = (500.0, 11_000.0)
+
+
+#: Text of a fault shows no more of a value than this many characters.
+_SHOWN: Final = 60
+
+
+def _shown(value: object) -> str:
+    """Value as TOML writes it, on one line, cut where it is long."""
+    if value is None or isinstance(value, int | float | list | tuple | str | dict):
+        try:
+            text = json.dumps(value, ensure_ascii=False, default=str)
+        except ValueError:  # whole numbers too long to be written out
+            text = "a number of thousands of digits"
+    else:
+        text = str(value)
+    text = "".join(c if c.isprintable() else f"\\u{ord(c):04x}" for c in text)
+    return text if len(text) <= _SHOWN else f"{text[:_SHOWN]}..."
+
+
+def _key(part: object) -> str:
+    """Name of a setting, or the place in a list, quoted where it is no bare key of TOML."""
+    return str(part) if re.fullmatch(r"[\w-]{1,60}", str(part)) else _shown(str(part))
 
 
 def _constituent_name(value: object) -> object:
@@ -44,7 +70,7 @@ def _constituent_name(value: object) -> object:
     if value.lower() not in usual:
         near = difflib.get_close_matches(value.lower(), usual, n=1, cutoff=0.0)
         raise ValueError(
-            f"constituent {value!r} is unknown; did you mean {usual[near[0]]!r}? Known: {', '.join(CONSTITUENTS)}"
+            f"constituent {_shown(value)} is unknown; did you mean {usual[near[0]]!r}? Known: {', '.join(CONSTITUENTS)}"
         )
     return usual[value.lower()]
 
@@ -52,7 +78,9 @@ def _constituent_name(value: object) -> object:
 def _deep(value: object) -> object:
     """Refuse what is no depth in one sentence, not one for each kind of value allowed."""
     if value != "deepest" and not (isinstance(value, int | float) and DEEP_M[0] <= value <= DEEP_M[1]):
-        raise ValueError(f'deep_m = {value!r}: give {DEEP_M[0]:g} to {DEEP_M[1]:g} m, or "deepest"')
+        raise ValueError(
+            f'{_shown(value)} is no depth of a deep sea: give {DEEP_M[0]:g} to {DEEP_M[1]:g} m, or "deepest"'
+        )
     return value
 
 
@@ -61,6 +89,14 @@ def _as_path(value: object) -> object:
         raise ValueError("path is empty")
     if isinstance(value, str) and "\0" in value:
         raise ValueError("path holds a null character; leave it out")
+    if isinstance(value, str) and (
+        len(value.encode("utf-8", "surrogatepass")) > _PATH_BYTES
+        or any(len(part.encode("utf-8", "surrogatepass")) > _NAME_BYTES for part in Path(value).parts)
+    ):
+        raise ValueError(
+            f"path {_shown(value)} has a name of more than {_NAME_BYTES} bytes, or more than {_PATH_BYTES} "
+            "in all, which no disk takes; shorten it"
+        )
     return value
 
 
@@ -132,7 +168,7 @@ class CoastSettings(_Stage):
         description="Elevation of the line stations stand on, above the water level, m; transects start at the water.",
     )
     generalise_km: float = Field(
-        20.0, gt=0, le=500, description="Inlets narrower than this are bridged for the normals, km."
+        20.0, ge=0.001, le=500, description="Inlets narrower than this are bridged for the normals, km."
     )
     smallest_island_km2: float = Field(500.0, ge=0, description="Islands below this area get no stations, km2.")
     smallest_sea_km2: float = Field(
@@ -170,11 +206,11 @@ class CoastSettings(_Stage):
 class TransectSettings(_Stage):
     """Where stations stand and how far their transects reach."""
 
-    spacing_km: float = Field(10.0, gt=0, le=1000, description="Distance between stations along the coast, km.")
-    length_km: float = Field(600.0, gt=0, le=3000, description="How far seaward the shelf break is searched, km.")
+    spacing_km: float = Field(10.0, ge=0.001, le=1000, description="Distance between stations along the coast, km.")
+    length_km: float = Field(600.0, ge=0.005, le=3000, description="How far seaward the shelf break is searched, km.")
     step_km: float | None = Field(
         None,
-        gt=0,
+        ge=0.001,
         le=100,
         description="Sample spacing along a transect, km; default the grid's own step, of several grids the finest "
         "one's but at least a quarter of the last one's.",
@@ -208,9 +244,9 @@ class ShelfBreakSettings(_Stage):
     confirm_slope: float = Field(
         0.025, gt=0, lt=1, description="Gradient it must reach further on to count; at least `slope`."
     )
-    smoothing_km: float = Field(5.0, gt=0, le=200, description="Length over which gradients are taken, km.")
+    smoothing_km: float = Field(5.0, ge=0.001, le=200, description="Length over which gradients are taken, km.")
     sustain_km: float = Field(
-        5.0, gt=0, le=200, description="Length over which the gradient must stay above `slope`, km."
+        5.0, ge=0.001, le=200, description="Length over which the gradient must stay above `slope`, km."
     )
     shallowest_m: float = Field(20.0, ge=0, description="Least depth of a shelf break, m.")
     deepest_m: float = Field(550.0, gt=0, description="Greatest depth of a shelf break, m.")
@@ -303,7 +339,9 @@ class DepthErrorSettings(_Stage):
         5.0, ge=0, le=1000, description="Part of the depth error that is the same at all depths, one sd, m."
     )
     per_depth: float = Field(0.12, ge=0, le=1, description="Part that grows with depth, one sd as a share of it.")
-    correlation_km: float = Field(20.0, gt=0, le=2000, description="Distance over which depth errors go together, km.")
+    correlation_km: float = Field(
+        20.0, ge=0.001, le=2000, description="Distance over which depth errors go together, km."
+    )
 
 
 class OutputSettings(_Stage):
@@ -422,7 +460,7 @@ def _rooted(settings: _S, folder: Path) -> _S:
 
 def _fault(model: type[BaseModel], fault: dict[str, Any]) -> str:
     """Say one fault as a person would: where, what is wrong with its value, what is allowed."""
-    where = ".".join(str(part) for part in fault["loc"] if part != "[key]")
+    where = ".".join(_key(part) for part in fault["loc"] if part != "[key]")
     if fault["type"] == "extra_forbidden":
         known = sorted(_known_names(model, fault["loc"][:-1]))
         near = difflib.get_close_matches(str(fault["loc"][-1]), known, n=1, cutoff=0.5)
@@ -431,9 +469,9 @@ def _fault(model: type[BaseModel], fault: dict[str, Any]) -> str:
     if fault["type"] == "missing":
         return f"{where}: must be given"
     if fault["type"] == "path_type":
-        return f"{where} = {fault['input']!r}: must be the name of a file, in quotes"
+        return f"{where} = {_shown(fault['input'])}: must be the name of a file, in quotes"
     message = str(fault["msg"]).removeprefix("Value error, ")
-    value = "" if fault["type"] == "value_error" else f" = {fault['input']!r}"
+    value = "" if fault["type"] == "value_error" else f" = {_shown(fault['input'])}"
     return f"{where}{value}: ".removeprefix(": ") + message[:1].lower() + message[1:]
 
 

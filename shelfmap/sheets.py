@@ -4,10 +4,9 @@ Inside, rows run from south to north and columns from west to east, `depth_m` is
 "missing", however the files store them; this is the only place where a sign turns.
 """
 
-from collections.abc import Callable, Iterable, Iterator, Sequence
-from contextlib import ExitStack
+from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import dataclass, replace
-from typing import Any, Final
+from typing import Final
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -30,8 +29,6 @@ Box = tuple[float, float, float, float]
 SAME_LATTICE_CELLS: Final = 0.05
 # Scattered points are read in tiles of this many cells a side.
 _TILE_CELLS: Final = 512
-# Files held open at a time: systems allow a process a few hundred.
-_MOST_OPEN: Final = 64
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -167,34 +164,23 @@ class Sheet(Lattice):
 
     def read_many(self, windows: Iterable[Indices]) -> Iterator[Grid]:
         """Depths of several windows, one after the other, files opened once; see `read`."""
-        with ExitStack() as stack:
-            datasets: dict[str, Any] = {}
-
-            def opened(file: RasterFile) -> Any:
-                if len(datasets) >= _MOST_OPEN:
-                    stack.close()
-                    datasets.clear()
-                if file.path not in datasets:
-                    datasets[file.path] = stack.enter_context(file.opened())
-                return datasets[file.path]
-
-            for row0, row1, col0, col1 in windows:
-                rows = max(row0, 0), min(row1, self.n_rows)
-                cols = (col0, min(col1, col0 + self.n_cols)) if self.wraps else (max(col0, 0), min(col1, self.n_cols))
-                if rows[0] >= rows[1] or cols[0] >= cols[1]:
-                    raise GridError(
-                        f"{self.path}: window of rows {row0} to {row1} and columns {col0} to {col1} holds no cell of "
-                        f"the grid's {self.n_rows} by {self.n_cols}; ask for a window on the grid"
-                    )
-                first = cols[0] % self.n_cols
-                yield Grid(
-                    depth_m=self._depths(opened, (*rows, first, first + cols[1] - cols[0])),
-                    row0=rows[0],
-                    col0=first,
-                    wrap_cols=self.n_cols if self.wraps else 0,
+        for row0, row1, col0, col1 in windows:
+            rows = max(row0, 0), min(row1, self.n_rows)
+            cols = (col0, min(col1, col0 + self.n_cols)) if self.wraps else (max(col0, 0), min(col1, self.n_cols))
+            if rows[0] >= rows[1] or cols[0] >= cols[1]:
+                raise GridError(
+                    f"{self.path}: window of rows {row0} to {row1} and columns {col0} to {col1} holds no cell of "
+                    f"the grid's {self.n_rows} by {self.n_cols}; ask for a window on the grid"
                 )
+            first = cols[0] % self.n_cols
+            yield Grid(
+                depth_m=self._depths((*rows, first, first + cols[1] - cols[0])),
+                row0=rows[0],
+                col0=first,
+                wrap_cols=self.n_cols if self.wraps else 0,
+            )
 
-    def _depths(self, opened: Callable[[RasterFile], Any], window: Indices) -> DepthArray:
+    def _depths(self, window: Indices) -> DepthArray:
         """Depths of a window that begins on the sheet, and may run over its seam."""
         row0, row1, col0, col1 = window
         depth_m = np.full((row1 - row0, col1 - col0), np.nan, dtype=np.float32)
@@ -209,8 +195,12 @@ class Sheet(Lattice):
                 missing = np.isnan(part)
                 if missing.any():
                     place = south - placed.row0, north - placed.row0, west - left, east - left
-                    value_m = placed.file.values(opened(placed.file), place)
-                    value_m = self.level_shift_m + (value_m if placed.positive == "down" else -value_m)
+                    with placed.file.opened() as dataset:
+                        value_m = placed.file.values(dataset, place)
+                    if placed.positive == "up":
+                        np.negative(value_m, out=value_m)
+                    if self.level_shift_m:
+                        value_m = self.level_shift_m + value_m.astype(np.float64)
                     np.copyto(part, value_m, where=missing, casting="same_kind")
         if self.void_is_land:
             depth_m[np.isnan(depth_m)] = -VOID_LAND_M

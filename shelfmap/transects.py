@@ -26,6 +26,8 @@ _LOG = logging.getLogger(__name__)
 NODE_M: Final = 1e4
 #: No degree of latitude is shorter than this, metres.
 _LEAST_DEGREE_M: Final = 1.1e5
+#: More stations than these are no screening; their results would not fit in memory.
+MOST_STATIONS: Final = 100_000
 #: Points each side of a station that its bearing is taken from.
 _BEARING_POINTS: Final = 16
 
@@ -89,8 +91,9 @@ def lay_transects(coast: Coast, settings: TransectSettings, coast_settings: Coas
     Raises
     ------
     TransectError
-        If no station lies in the box.
+        If no station lies in the box, or the coast is far longer than the spacing.
     """
+    _refuse_crowd(coast, settings)
     back_m = coast_settings.generalise_m / 2
     columns: dict[str, list[FloatArray]] = {name: [] for name in ("part", "along", "piece", "lon", "lat", "bearing")}
     for part, line in enumerate(coast.lines, start=1):
@@ -128,6 +131,17 @@ def lay_transects(coast: Coast, settings: TransectSettings, coast_settings: Coas
         node_lon_deg=node_lon,
         node_lat_deg=node_lat,
     )
+
+
+def _refuse_crowd(coast: Coast, settings: TransectSettings) -> None:
+    """Refuse a spacing that would take more stations than a run can hold."""
+    length_m = sum(line.length_m for line in coast.lines)
+    if length_m / settings.spacing_m > MOST_STATIONS:
+        raise TransectError(
+            f"transects.spacing_km = {settings.spacing_km:g} would put {length_m / settings.spacing_m:.2g} stations on "
+            f"{length_m / 1e3:.0f} km of coast, of {MOST_STATIONS} at most; give "
+            f"{np.ceil(length_m / MOST_STATIONS) / 1e3:g} or more"
+        )
 
 
 def _points_along(line: CoastLine, along_m: FloatArray) -> tuple[FloatArray, FloatArray]:

@@ -15,6 +15,7 @@ from numpy.typing import NDArray
 
 from shelfmap.errors import GridError, LayerError, ShelfmapWarning
 from shelfmap.geodesy import Projection
+from shelfmap.localfiles import CLOSED, archive_of, local_file, why_refused
 
 __all__ = ["VectorData", "read_table", "read_vector"]
 
@@ -65,9 +66,10 @@ def read_vector(path: str | Path, layer: str | None = None) -> VectorData:
         If rows have no shape; they are dropped.
     """
     path = Path(path)
-    layer = _choose_layer(path, layer)
+    name = _local_name(path)
+    layer = _choose_layer(path, name, layer)
     with _readable(path):
-        meta, _, wkb, fields = pyogrio.raw.read(path, layer=layer, force_2d=True)
+        meta, _, wkb, fields = pyogrio.raw.read(name, layer=layer, force_2d=True)
         geometry: ObjectArray = shapely.from_wkb(wkb)
     keep = ~(shapely.is_missing(geometry) | shapely.is_empty(geometry))
     if not keep.all():
@@ -105,21 +107,42 @@ def read_table(path: str | Path, layer: str) -> dict[str, NDArray[Any]]:
         If the file cannot be read or holds no such layer.
     """
     path = Path(path)
-    _require_layer(path, layer, list(_layers_of(path)))
+    name = _local_name(path)
+    _require_layer(path, layer, list(_layers_of(path, name)))
     with _readable(path):
-        meta, _, _, fields = pyogrio.raw.read(path, layer=layer, read_geometry=False)
+        meta, _, _, fields = pyogrio.raw.read(name, layer=layer, read_geometry=False)
     return {str(name): values for name, values in zip(meta["fields"], fields, strict=True)}
 
 
-def _layers_of(path: Path) -> dict[str, bool]:
+def _local_name(path: Path) -> str:
+    """Name GDAL opens for a local file that sends it nowhere else; folders must be databases of that form."""
+    if path.is_dir() and path.suffix.lower() == ".gdb":
+        return str(path.absolute())
+    if path.is_dir():
+        raise LayerError(f"vector file {path} is a folder; name the file in it")
+    file, why = local_file(path, "the setting that names it")
+    if file is None:
+        raise LayerError(f"vector file {path}: {why}")
+    try:
+        refused = why_refused(file)
+    except OSError as error:
+        raise LayerError(f"vector file {path} cannot be opened ({error.strerror}); make it readable") from error
+    if refused is not None:
+        raise LayerError(f"vector file {path}: {refused}")
+    archive = archive_of(path) if file != path else None
+    # never a bare name: GDAL takes what stands before a colon for a driver
+    return str(path.absolute()) if archive is None else f"/vsi{archive[0]}/{file.absolute()}{archive[2]}"
+
+
+def _layers_of(path: Path, name: str) -> dict[str, bool]:
     """Name of every layer of a file, and whether it has shapes."""
     with _readable(path):
-        return {str(name): geometry is not None for name, geometry in pyogrio.list_layers(path)}
+        return {str(layer): geometry is not None for layer, geometry in pyogrio.list_layers(name)}
 
 
-def _choose_layer(path: Path, layer: str | None) -> str:
+def _choose_layer(path: Path, name: str, layer: str | None) -> str:
     """Layer asked for, or the only one that has shapes."""
-    layers = _layers_of(path)
+    layers = _layers_of(path, name)
     drawn = [name for name, has_shapes in layers.items() if has_shapes]
     if layer is not None:
         _require_layer(path, layer, list(layers))
@@ -159,9 +182,25 @@ def _to_lonlat(geometry: ObjectArray, crs: str | None, path: Path) -> ObjectArra
 
 @contextmanager
 def _readable(path: Path) -> Iterator[None]:
-    """Turn what GDAL says while reading into one error with a cure."""
+    """Keep GDAL from the network; turn its errors while reading into one with a cure, its warnings into ours."""
+    before = {option: pyogrio.get_gdal_config_option(option) for option in CLOSED}
+    pyogrio.set_gdal_config_options(dict(CLOSED))
     try:
-        yield
-    except (RuntimeError, OSError, shapely.errors.ShapelyError) as error:
-        cure = "give a vector file that GDAL reads, such as a GeoPackage" if path.exists() else "correct the path"
-        raise LayerError(f"vector file {path} cannot be read ({error}); {cure}") from error
+        with warnings.catch_warnings(record=True) as caught:
+            warnings.simplefilter("always")
+            yield
+    except (RuntimeError, OSError, ValueError, shapely.errors.ShapelyError) as error:
+        raise LayerError(
+            f"vector file {path} cannot be read ({_one_line(error)}); give a vector file that GDAL reads, "
+            "such as a GeoPackage"
+        ) from error
+    finally:
+        pyogrio.set_gdal_config_options(before)
+    for said in dict.fromkeys(_one_line(warning.message) for warning in caught):
+        warnings.warn(f"{path}: {said}", ShelfmapWarning, stacklevel=4)
+
+
+def _one_line(said: object) -> str:
+    """What a library says, on one line, cut where it is long."""
+    text = " ".join(str(said).split())
+    return text if len(text) <= 200 else f"{text[:200]}..."

@@ -90,10 +90,10 @@ def test_all_keys_are_tried_above_or_are_files_and_names():
         ({"grid": {"path": "a", "postive": "up"}}, "grid.postive: no such setting; did you mean 'positive'"),
         ({"shelf_break": {"depest_m": 1}}, "shelf_break.depest_m: no such setting; did you mean 'deepest_m'"),
         ({"response": {"zzz": 1}}, "response.zzz: no such setting; known here: constituents, deep_m, drag"),
-        ({"response": {"constituents": ["MK2"]}}, "constituent 'MK2' is unknown; did you mean '[MK]2'"),
+        ({"response": {"constituents": ["MK2"]}}, 'constituent "MK2" is unknown; did you mean .[MK]2.'),
         (
             {"response": {"drag": 0.002, "offshore_amplitude_m": {"Q9": 1.0}}},
-            "offshore_amplitude_m.Q9: constituent 'Q9'",
+            'offshore_amplitude_m.Q9: constituent "Q9"',
         ),
     ],
 )
@@ -109,9 +109,9 @@ def test_all_faults_are_named_at_once_each_on_its_line():
     assert str(caught.value).splitlines() == [
         "my.toml: 4 setting(s) to mend",
         "  grid: must be given",
-        "  transects.spacing_km = -1: input should be greater than 0",
+        "  transects.spacing_km = -1: input should be greater than or equal to 0.001",
         "  transects.lenght_km: no such setting; did you mean 'length_km'?",
-        "  response.deep_m: deep_m = 'x': give 500 to 11000 m, or \"deepest\"",
+        '  response.deep_m: "x" is no depth of a deep sea: give 500 to 11000 m, or "deepest"',
     ]
 
 

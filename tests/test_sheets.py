@@ -696,7 +696,7 @@ def test_a_tile_that_vanishes_or_breaks_is_named(tmp_path, spoil, message):
 
 
 def test_more_files_than_may_be_open(tmp_path, monkeypatch):
-    monkeypatch.setattr("shelfmap.sheets._MOST_OPEN", 3)
+    monkeypatch.setattr("shelfmap.rasterfile._MOST_HANDLES", 3)
     values = rough((4, 40), void_share=0.0)
     source = opened(*write_cut(tmp_path, values, (0, 2, 4), range(0, 41, 4), **PLAIN))
     assert_array_equal(whole(source).depth_m, -values)

@@ -111,18 +111,18 @@ def test_coordinates_that_cannot_be_in_their_system_are_refused(tmp_path):
 @pytest.mark.parametrize(
     ("content", "message"),
     [
-        (None, "correct the path"),
-        (b"", "give a vector file that GDAL reads"),
-        (b"SQLite format 3\0rest", "give a vector"),
+        (None, ": no such file; check"),
+        (b"", " cannot be read .*give a vector file that GDAL reads"),
+        (b"SQLite format 3\0rest", " cannot be read .*give a vector"),
     ],
 )
 def test_missing_and_unreadable_files_are_refused(tmp_path, content, message):
     path = tmp_path / "a.gpkg"
     if content is not None:
         path.write_bytes(content)
-    with pytest.raises(LayerError, match=rf"a\.gpkg cannot be read .*{message}"):
+    with pytest.raises(LayerError, match=rf"a\.gpkg{message}"):
         read_vector(path)
-    with pytest.raises(LayerError, match=rf"a\.gpkg cannot be read .*{message}"):
+    with pytest.raises(LayerError, match=rf"a\.gpkg{message}"):
         read_table(path, "a")
 
 
