@@ -347,6 +347,12 @@ def test_adjoining_polygons_are_one_land_and_their_lakes_are_land(write_grid):
     assert len(coast.islets) == 0
 
 
+def test_land_off_the_grid_is_refused(write_grid):
+    source = open_up(write_grid(scene(beach)))
+    with pytest.raises(CoastError, match=r"all of it is water \(or land of coast\.file\)"):
+        trace_coast(source, CoastSettings(smallest_sea_km2=500), np.array([shapely.box(100, 50, 101, 51)]))
+
+
 @pytest.mark.parametrize("direction", [1, -1])
 def test_coast_lines_are_turned_so_that_the_sea_is_on_the_right(write_grid, direction):
     source = open_up(write_grid(straight_coast(0.0, 10.0, SHELF, lon_deg=180.0, shape=(61, 61))))
