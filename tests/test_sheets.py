@@ -334,9 +334,30 @@ def test_groups_of_transects_do_not_move_a_depth(stack, monkeypatch, most_cells)
         "shelfmap.profiles._read_stack", lambda *args, _call=profiles_module._read_stack: read.append(1) or _call(*args)
     )
     apart = sample_profiles(source, transects, 1500.0, seek_m=1e4, islets=EMPTY)
-    assert len(read) == 30 if most_cells == 1 else 1 < len(read) < 30
+    assert len(read) == 30 if most_cells == 1 else 1 < len(read) < 31
     assert_array_equal(apart.depth_m, together.depth_m)
     assert_array_equal(apart.end_reason, together.end_reason)
+
+
+def test_a_long_transect_on_fine_cells_is_read_in_runs(tmp_path, monkeypatch):
+    """230 km across 800 by 800 cells: 640,000 cells as one window; a tenth of that, and a cell or two more a run."""
+    values = rough((800, 800), void_share=0.02)
+    source = opened(write_tif(tmp_path / "a.tif", values - 1000, x0=3.0, y0=-1.0, dx=0.002, dy=0.002))
+    line = np.array([shapely.linestrings([3.01, 4.59], [-0.99, 0.59])], dtype=object)
+    transects = transects_from_lines(line, None, NO_COAST, 1e4)
+    at_once = sample_profiles(source, transects, 200.0, seek_m=0.0, islets=EMPTY)
+    assert at_once.n_samples[0] > 1200
+    stacks = []
+    monkeypatch.setattr("shelfmap.profiles.MOST_CELLS", 64_000)
+    monkeypatch.setattr(
+        "shelfmap.profiles._read_stack",
+        lambda *args, _call=profiles_module._read_stack: stacks.append(_call(*args)) or stacks[-1],
+    )
+    in_runs = sample_profiles(source, transects, 200.0, seek_m=0.0, islets=EMPTY)
+    depth, layout, _ = stacks[0]
+    assert len(layout) == 10
+    assert depth.size < 1.4 * 64_000
+    assert_array_equal(in_runs.depth_m, at_once.depth_m)
 
 
 def test_sheets_that_transects_pass_by_are_not_read(stack):
