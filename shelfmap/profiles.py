@@ -294,7 +294,7 @@ def _read_stack(
     line these are as many times smaller as there are runs. See `tracing.Track`.
     """
     n_legs = node_m.shape[1] - 1
-    n_runs = min(max(1, math.ceil(_n_cells(source, _joined(_boxes(source, col, row))) / MOST_CELLS)), n_legs)
+    n_runs = max(1, min(math.ceil(_n_cells(source, _joined(_boxes(source, col, row))) / MOST_CELLS), n_legs))
     edges = np.linspace(0, n_legs, n_runs + 1).astype(int).tolist()
     runs = [slice(begin, end + 1) for begin, end in pairwise(edges)]
     boxes = [_joined(_boxes(source, col[:, :, run], row[:, :, run])) for run in runs]
