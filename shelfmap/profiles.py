@@ -1,8 +1,10 @@
 """From a grid and transects to depth profiles, each from the shore seaward."""
 
+import math
 import warnings
 from collections.abc import Iterator
 from dataclasses import dataclass
+from itertools import pairwise
 from typing import Final
 
 import numpy as np
@@ -47,9 +49,11 @@ LEAST_SPIKE_M: Final = 10.0
 MOST_SAMPLES: Final = 6000
 #: Sheets finer than this share of the frame's cells, one part in so many, do not make samples closer.
 FINEST_SHARE: Final = 4.0
-#: Windows of all sheets of the grid together have at most this many cells, unless one transect alone needs more:
-#: 160 MB of depths.
+#: Windows of all sheets of the grid, for as many transects as fit, have at most this many cells together: 160 MB.
 MOST_CELLS: Final = 40_000_000
+
+# Which ends of a box (first and last row, first and last column) are the least of their kind.
+_IS_LEAST: Final = np.array([True, False, True, False])
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -135,18 +139,15 @@ def sample_profiles(
     seek_row_m = np.where(transects.is_drawn, np.nanmax(transects.node_m, axis=1) / 2, seek_m)
     n_nodes = np.isfinite(transects.node_m).sum(axis=1)
     col, row = _node_index(source, transects)
-    boxes = _boxes(source, col, row)
     depth_m, filled = np.full((n, m), np.nan), np.zeros((n, m), dtype=np.uint8)
     shore_m, land_m = np.full(n, np.nan), np.full(n, np.nan)
     start, end = np.zeros(n, dtype=np.int64), np.full(n, -1, dtype=np.int64)
     n_samples, counts = np.zeros(n, dtype=np.int64), np.zeros((n, 3), dtype=np.int64)
-    for first, stop, box in _groups(source, boxes):
+    for first, stop in _groups(source, _boxes(source, col, row)):
         rows = slice(first, stop)
-        met, depth, layout = _read_stack(source, box)
-        node = np.stack([index[rows, number] for number in met for index in (row, col)], axis=1)
+        depth, layout, node = _read_stack(source, transects.node_m[rows], col[rows], row[rows])
         tracing.trace_rows(
-            depth, layout,
-            np.concatenate([transects.node_m[rows, None], node], axis=1), n_nodes[rows], step_m, seek_row_m[rows],
+            depth, layout, node, n_nodes[rows], step_m, seek_row_m[rows],
             SHORT_GAP_SAMPLES, SHORT_GAP_SHARE, LEAST_SPIKE_M, SHORE_HAIR_M,
             depth_m[rows], filled[rows], shore_m[rows], start[rows], n_samples[rows], end[rows], land_m[rows],
             counts[rows],
@@ -303,45 +304,64 @@ def _boxes(source: GridSource, col: FloatArray, row: FloatArray) -> FloatArray:
     return np.asarray(box)
 
 
-def _groups(source: GridSource, boxes: FloatArray) -> Iterator[tuple[int, int, FloatArray]]:
-    """Cut transects into runs of rows whose windows of all sheets are small enough to read; the box of each run."""
-    widest = np.array([sheet.n_cols for sheet in source.sheets])
+def _groups(source: GridSource, boxes: FloatArray) -> Iterator[tuple[int, int]]:
+    """Cut transects into runs of rows whose windows of all sheets together are small enough to read."""
     first, box = 0, boxes[0]
     for k in range(1, len(boxes)):
-        wider = _joined(box, boxes[k])
+        wider = np.where(_IS_LEAST, np.fmin(box, boxes[k]), np.fmax(box, boxes[k]))
         # far apart, as on two islands, they are cheaper to read one by one
-        if _cells(wider, widest) > min(MOST_CELLS, _cells(box, widest) + _cells(boxes[k], widest)):
-            yield first, k, box
+        if _n_cells(source, wider) > min(MOST_CELLS, _n_cells(source, box) + _n_cells(source, boxes[k])):
+            yield first, k
             first, box = k, boxes[k]
         else:
             box = wider
-    yield first, len(boxes), box
+    yield first, len(boxes)
 
 
-def _cells(box: FloatArray, widest: IntArray) -> float:
-    """Cells of a box of indices on each sheet, all together."""
+def _n_cells(source: GridSource, box: FloatArray) -> float:
+    """Cells in a box of each sheet, all sheets together."""
+    widest = np.array([sheet.n_cols for sheet in source.sheets])
     return float(np.nansum((box[:, 1] - box[:, 0]) * np.minimum(box[:, 3] - box[:, 2], widest)))
 
 
-def _joined(box: FloatArray, other: FloatArray) -> FloatArray:
-    """Least and greatest row, least and greatest column of two boxes of indices on each sheet."""
-    return np.where([True, False, True, False], np.fmin(box, other), np.fmax(box, other))
+def _read_stack(
+    source: GridSource, node_m: FloatArray, col: FloatArray, row: FloatArray
+) -> tuple[NDArray[np.float32], IntArray, FloatArray]:
+    """Windows of the sheets that a group of transects needs, and nodes on them, as the compiled loops take them.
 
-
-def _read_stack(source: GridSource, box: FloatArray) -> tuple[IntArray, NDArray[np.float32], IntArray]:
-    """Which sheets a group of transects needs, and their windows as the compiled loops take them, see `Track`."""
-    met = np.flatnonzero(np.isfinite(box).all(axis=1))
-    if not len(met):  # all transects off the grid: any window tells
-        met, box = np.array([len(box) - 1]), np.where(np.isnan(box), np.array([0, 2, 0, 2]), box)
-    grids = [source.sheets[number].read(*box[number].astype(int).tolist()) for number in met]
-    sizes = np.array([grid.depth_m.size for grid in grids])
+    A transect whose windows alone are too large is read in runs of its nodes, with windows for each: along a slanting
+    line these are as many times smaller as there are runs. See `tracing.Track`.
+    """
+    n_legs = node_m.shape[1] - 1
+    n_runs = max(1, min(math.ceil(_n_cells(source, _joined(_boxes(source, col, row))) / MOST_CELLS), n_legs))
+    edges = np.linspace(0, n_legs, n_runs + 1).astype(int).tolist()
+    runs = [slice(begin, end + 1) for begin, end in pairwise(edges)]
+    boxes = [_joined(_boxes(source, col[:, :, run], row[:, :, run])) for run in runs]
+    grids, nodes = [], [node_m]
+    for number, sheet in enumerate(source.sheets):
+        for run, box in zip(runs, boxes, strict=True):
+            if np.isfinite(box[number]).all():
+                grids.append(sheet.read(*box[number].astype(int).tolist()))
+                for index in (row, col):
+                    nodes.append(np.full(node_m.shape, np.nan))
+                    nodes[-1][:, run] = index[:, number, run]
+    if not grids:  # all of them off the grid: any window tells
+        grids, nodes = [source.sheets[-1].read(0, 2, 0, 2)], [node_m, row[:, -1], col[:, -1]]
+    begins = np.cumsum([0] + [grid.depth_m.size for grid in grids])
     layout = [
         (begin, *grid.depth_m.shape, grid.row0, grid.col0, grid.wrap_cols)
-        for begin, grid in zip(np.cumsum(sizes) - sizes, grids, strict=True)
+        for begin, grid in zip(begins, grids, strict=False)
     ]
     depth = grids[0].depth_m.ravel() if len(grids) == 1 else np.concatenate([grid.depth_m.ravel() for grid in grids])
     depth.setflags(write=False)  # one type for the loops, so that they are compiled once
-    return met, depth, np.array(layout, dtype=np.int64)
+    return depth, np.array(layout, dtype=np.int64), np.stack(nodes, axis=1)
+
+
+def _joined(boxes: FloatArray) -> FloatArray:
+    """(s, 4) least and greatest row, least and greatest column of the boxes of n transects on each sheet."""
+    least: FloatArray = np.fmin.reduce(boxes)
+    greatest: FloatArray = np.fmax.reduce(boxes)
+    return np.where(_IS_LEAST, least, greatest)
 
 
 def _ends_at_islet(transects: Transects, end: IntArray, land_m: FloatArray, islets: NDArray[np.object_]) -> BoolArray:

@@ -290,7 +290,7 @@ def test_failed_section_is_raised_and_the_older_output_stays(three_sections, mon
     with pytest.raises(fault):
         screen(three_sections, overwrite=True)
     assert path.read_bytes() == before
-    assert sorted(file.name for file in path.parent.iterdir()) == [".out.gpkg.unfinished", "grid0.tif", "out.gpkg"]
+    assert sorted(file.name for file in path.parent.iterdir()) == ["grid0.tif", "out.gpkg"]
 
 
 def test_existing_output_is_refused_before_any_work(tmp_path):

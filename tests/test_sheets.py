@@ -334,9 +334,30 @@ def test_groups_of_transects_do_not_move_a_depth(stack, monkeypatch, most_cells)
         "shelfmap.profiles._read_stack", lambda *args, _call=profiles_module._read_stack: read.append(1) or _call(*args)
     )
     apart = sample_profiles(source, transects, 1500.0, seek_m=1e4, islets=EMPTY)
-    assert len(read) == 30 if most_cells == 1 else 1 < len(read) < 30
+    assert len(read) == 30 if most_cells == 1 else 1 < len(read) < 31
     assert_array_equal(apart.depth_m, together.depth_m)
     assert_array_equal(apart.end_reason, together.end_reason)
+
+
+def test_a_long_transect_on_fine_cells_is_read_in_runs(tmp_path, monkeypatch):
+    """230 km across 800 by 800 cells: 640,000 cells as one window; a tenth of that, and a cell or two more a run."""
+    values = rough((800, 800), void_share=0.02)
+    source = opened(write_tif(tmp_path / "a.tif", values - 1000, x0=3.0, y0=-1.0, dx=0.002, dy=0.002))
+    line = np.array([shapely.linestrings([3.01, 4.59], [-0.99, 0.59])], dtype=object)
+    transects = transects_from_lines(line, None, NO_COAST, 1e4)
+    at_once = sample_profiles(source, transects, 200.0, seek_m=0.0, islets=EMPTY)
+    assert at_once.n_samples[0] > 1200
+    stacks = []
+    monkeypatch.setattr("shelfmap.profiles.MOST_CELLS", 64_000)
+    monkeypatch.setattr(
+        "shelfmap.profiles._read_stack",
+        lambda *args, _call=profiles_module._read_stack: stacks.append(_call(*args)) or stacks[-1],
+    )
+    in_runs = sample_profiles(source, transects, 200.0, seek_m=0.0, islets=EMPTY)
+    depth, layout, _ = stacks[0]
+    assert len(layout) == 10
+    assert depth.size < 1.4 * 64_000
+    assert_array_equal(in_runs.depth_m, at_once.depth_m)
 
 
 def test_sheets_that_transects_pass_by_are_not_read(stack):
@@ -354,16 +375,19 @@ def test_sheets_that_transects_pass_by_are_not_read(stack):
             sample_profiles(source, transects, 1500.0, seek_m=1e4, islets=EMPTY)
 
 
-def test_a_transect_on_the_far_side_of_the_earth_meets_no_tile(tmp_path):
-    """Across the meridian opposite of a tile its columns jump by a turn, right over the tile."""
-    fine = write_tif(tmp_path / "f.tif", np.full((50, 50), -7, np.float32), x0=-0.25, y0=-0.25, dx=0.01, dy=0.01)
-    water = write_tif(tmp_path / "w.tif", np.full((179, 360), -500, np.float32), x0=-180.0, y0=-89.0, dx=1.0, dy=1.0)
-    line = np.array([shapely.linestrings([178.0, 182.0], [0.0, 0.0])], dtype=object)
+def test_a_transect_across_the_meridian_opposite_of_a_sheet_meets_nothing_there(tmp_path):
+    """From 348 to 358 E, over a sheet that ends at 350: at 355 its columns jump by a turn, right over the sheet."""
+    upper = write_tif(tmp_path / "u.tif", np.full((40, 351), -7, np.float32), x0=0.0, y0=-20.0, dx=1.0, dy=1.0)
+    world = write_tif(tmp_path / "w.tif", np.full((179, 360), -500, np.float32), x0=-180.0, y0=-89.0, dx=1.0, dy=1.0)
+    with rasterio.open(upper, "r+") as sheet:  # a step of its own, so that it is no tile of the world
+        sheet.transform = Affine(1.001, 0, -0.5, 0, -1.0, 19.5)
+    source = opened(upper, world)
+    assert len(source.sheets) == 2
+    line = np.array([shapely.linestrings([348.0, 358.0], [0.0, 0.0])], dtype=object)
     transects = transects_from_lines(line, None, NO_COAST, 1e4)
-    profiles = sample_profiles(opened(fine, water), transects, 100.0, seek_m=0.0, islets=EMPTY)
-    assert_array_equal(profiles.depth_m, 500.0)
-    alone = sample_profiles(opened(fine), transects, 100.0, seek_m=0.0, islets=EMPTY)
-    assert alone.n_samples[0] == 0
+    profiles = sample_profiles(source, transects, 2000.0, seek_m=0.0, islets=EMPTY)
+    lon, _ = place_on(transects, profiles.shore_m[:, None] + profiles.distance_m)
+    assert_allclose(profiles.depth_m, np.where(lon < 350.35, 7.0, 500.0), rtol=1e-12)
 
 
 # --- the frame -------------------------------------------------------------------------------------------------
@@ -399,20 +423,21 @@ def test_cells_of_the_frame_take_means_of_the_finest_sheet(stack):
 def test_windows_over_the_seam_hold_the_same_bits(tmp_path):
     """Whatever window a cell of the frame is read in, and on whichever turn."""
     rng = np.random.default_rng(7)
-    coarse = write_tif(tmp_path / "w.tif", WORLD, x0=-180.0, **POLE_TO_POLE)
+    coarse = write_tif(tmp_path / "w.tif", WORLD[:, :35], **{**POLE_TO_POLE, "x0": -180.0, "dx": 360 / 35})
     fine_m = rng.uniform(-5000, -10, (70, 90)).astype(np.float32)
     fine = write_tif(tmp_path / "f.tif", fine_m, x0=160.3, y0=-30.2, dx=0.7, dy=0.9)
     source = opened(fine, coarse)
     everything = whole(source).depth_m
-    covered = np.abs(everything + WORLD) > 1e-3
+    covered = np.abs(everything + WORLD[:, :35]) > 1e-3
     assert covered[:, :4].any()
     assert covered[:, -2:].any()
     for _ in range(30):
         row0, col0 = rng.integers(0, 15), rng.integers(-40, 40)
         window = source.read(row0, row0 + rng.integers(1, 9), col0, col0 + rng.integers(1, 30))
         rows = window.row0 + np.arange(window.depth_m.shape[0])
-        cols = (window.col0 + np.arange(window.depth_m.shape[1])) % 36
+        cols = (window.col0 + np.arange(window.depth_m.shape[1])) % 35
         assert_array_equal(window.depth_m, everything[np.ix_(rows, cols)])
+    assert_array_equal(source._means(source.sheets[0], (8, 12, 35, 39)), source._means(source.sheets[0], (8, 12, 0, 4)))
 
 
 def test_missing_cells_of_upper_sheets_are_no_land(tmp_path):

@@ -23,7 +23,7 @@ _OUTSIDE = -1.0e30
 
 
 class Track(NamedTuple):
-    """A transect on windows of sheets, those that give depths first in front."""
+    """A transect on windows of sheets, those that give depths first in front; a sheet may have several windows."""
 
     depth_m: F32
     """Windows one after the other, row by row; NaN void."""
@@ -31,8 +31,8 @@ class Track(NamedTuple):
     """(s, 6) of each window: where it begins in `depth_m`, its rows and columns, the row and the column of the sheet
     that it begins with, columns of the sheet round the globe (0 where it does not close)."""
     node: F64
-    """(1 + 2 s, k) distance of each node from the station, metres, rising; then its row and its column on each sheet,
-    NaN where that is far."""
+    """(1 + 2 s, k) distance of each node from the station, metres, rising; then its row and its column on the sheet of
+    each window, NaN where that is far."""
 
 
 @njit(cache=True)
