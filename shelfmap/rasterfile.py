@@ -35,7 +35,7 @@ __all__ = ["Indices", "RasterFile", "RasterHeader", "disk_file", "files_behind",
 Indices = tuple[int, int, int, int]
 
 # Blocks the library keeps: enough for one row of tiles round the globe at 15 arc-seconds.
-_CACHE_MB: Final = 256
+_CACHE_BYTES: Final = 256 * 2**20
 
 #: Rasters kept open: systems allow a process a few hundred files.
 _MOST_HANDLES: Final = 64
@@ -224,7 +224,7 @@ def projection_of(crs: str) -> Projection:
 @contextmanager
 def _opened(name: str) -> Iterator[tuple[Any, bool]]:
     """Open a raster without a network; also tell whether the file places its cells at all."""
-    with _named(name), rasterio.Env(**CLOSED, GDAL_CACHEMAX=_CACHE_MB):
+    with _named(name), rasterio.Env(**CLOSED, GDAL_CACHEMAX=_CACHE_BYTES):
         yield _handle(name)
 
 
