@@ -1,5 +1,6 @@
 """Rows of layers: checked against the column table, and as Arrow tables that travel, are kept and are written."""
 
+import io
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any, Final
@@ -138,10 +139,11 @@ def pack(tables: Mapping[str, pa.Table]) -> bytes:
 
 
 def unpack(data: bytes) -> dict[str, pa.Table]:
-    """Named Arrow tables from bytes made by `pack`."""
-    source, tables = pa.BufferReader(data), {}
-    while source.tell() < source.size():
-        with pa.ipc.open_stream(source) as stream:
+    """Named Arrow tables from bytes made by `pack`, each in memory of its own, so that one can outlive the others."""
+    source = io.BytesIO(data)
+    tables = {}
+    while source.tell() < len(data):
+        with pa.ipc.open_stream(pa.PythonFile(source, mode="r")) as stream:
             table = stream.read_all()
         tables[table.schema.metadata[b"name"].decode()] = table
     return tables
