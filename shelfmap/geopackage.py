@@ -23,7 +23,7 @@ from shelfmap.words import CAUTIONS, ENUMERATIONS
 __all__ = ["GeoPackage", "write_layers"]
 
 #: Rows gathered before they are written: each call opens the file anew.
-_ROWS_AT_ONCE: Final = 250_000
+_ROWS_AT_ONCE: Final = 100_000
 
 
 class GeoPackage:

@@ -20,7 +20,7 @@ _Result = TypeVar("_Result")
 
 #: Jobs handed out ahead of the one whose result is waited for, by worker: enough to keep all busy, few enough that
 #: results waiting for their turn do not fill the memory.
-AHEAD: Final = 4
+AHEAD: Final = 16
 #: How often a cluster tries a job again whose worker was lost.
 RETRIES: Final = 3
 #: How long a cluster may take to answer at first, seconds.
