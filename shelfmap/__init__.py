@@ -30,13 +30,13 @@ if TYPE_CHECKING:
     from shelfmap.coast import trace_coast
     from shelfmap.grid import open_grid
     from shelfmap.index import resonance_index
-    from shelfmap.layers import read_table
     from shelfmap.pipeline import screen
     from shelfmap.profiles import sample_profiles
     from shelfmap.response import DepthError, Friction, coriolis_rad_s, deep_end, shelf_modes, wave_response
     from shelfmap.settings import Settings
     from shelfmap.shelfbreak import find_shelf_breaks
     from shelfmap.transects import lay_transects
+    from shelfmap.vectors import read_table
 else:
     _HOMES = {
         "DepthError": "response",
@@ -47,7 +47,7 @@ else:
         "find_shelf_breaks": "shelfbreak",
         "lay_transects": "transects",
         "open_grid": "grid",
-        "read_table": "layers",
+        "read_table": "vectors",
         "resonance_index": "index",
         "sample_profiles": "profiles",
         "screen": "pipeline",

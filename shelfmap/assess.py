@@ -10,7 +10,7 @@ from shelfmap.index import Q_STOPPED
 from shelfmap.profiles import END_REASONS, START_REASONS, Profiles
 from shelfmap.shelfbreak import ShelfBreaks
 
-__all__ = ["LEAST_SAMPLES", "Doubt", "confidences", "doubts", "sills", "statuses", "usable"]
+__all__ = ["LEAST_SAMPLES", "Doubt", "confidences", "doubts", "neighbour_doubts", "sills", "statuses", "usable"]
 
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
@@ -106,22 +106,16 @@ def sills(profiles: Profiles, breaks: ShelfBreaks) -> tuple[FloatArray, FloatArr
 def doubts(
     profiles: Profiles,
     breaks: ShelfBreaks,
-    crosses: BoolArray,
-    width_change: FloatArray,
     kernel_share: FloatArray,
     period_error: FloatArray,
     damped_q: FloatArray,
 ) -> Iterator[Doubt]:
-    """Go through the reasons to trust an index less, each with the transects it holds for.
+    """Go through the reasons in a transect itself to trust its index less, each with the transects it holds for.
 
     Parameters
     ----------
     profiles, breaks
         Results of the stages, n transects.
-    crosses : (n,) array of bool
-        Whether a transect crosses another before the break.
-    width_change : (n,) array of float
-        Ratio of the wider to the narrower of its shelf width and its neighbours', the largest; NaN unknown.
     kernel_share : (n,) array of float
         Largest share of one sample in the slowest period.
     period_error : (n,) array of float
@@ -136,42 +130,52 @@ def doubts(
     holds : (n,) array of bool
         Where.
     """
-    n = len(profiles.n_samples)
-
-    def said(text: str, *values: NDArray[Any]) -> TextArray:
-        return np.array([text.format(*(column[k] for column in values)) for k in range(n)], dtype=object)
-
     width_km, spread_km = breaks.break_m / 1e3, breaks.spread_m / 1e3
     with np.errstate(invalid="ignore"):
         cells = breaks.break_m / profiles.step_m
-        yield said("crosses another transect before the break"), crosses
         yield (
-            said("break found by {:.0%} of the thresholds and smoothings tried", breaks.found_share),
+            _said("break found by {:.0%} of the thresholds and smoothings tried", breaks.found_share),
             breaks.found_share < LEAST_FOUND_SHARE,
         )
         yield (
-            said("break moves by {:.1f} km with threshold and smoothing", spread_km),
+            _said("break moves by {:.1f} km with threshold and smoothing", spread_km),
             spread_km > WIDEST_SPREAD * width_km,
         )
-        yield said("break is faint, contrast {:.1f}", breaks.contrast), breaks.contrast < CLEAR_CONTRAST
-        yield said("shelf is {:.1f} samples wide", cells), cells < FEWEST_SHELF_SAMPLES
+        yield _said("break is faint, contrast {:.1f}", breaks.contrast), breaks.contrast < CLEAR_CONTRAST
+        yield _said("shelf is {:.1f} samples wide", cells), cells < FEWEST_SHELF_SAMPLES
         yield (
-            said("one sample holds {:.0%} of the period", kernel_share),
+            _said("one sample holds {:.0%} of the period", kernel_share),
             (kernel_share > HEAVIEST_CELL) & (kernel_share * np.maximum(cells, FEWEST_SHELF_SAMPLES) > 3.0),
         )
-        yield said("period uncertain by {:.0%}", period_error), period_error > LARGEST_PERIOD_ERROR
-        yield (
-            said("shelf width changes {:.1f}-fold to a neighbour", width_change),
-            width_change > LARGEST_WIDTH_CHANGE,
-        )
+        yield _said("period uncertain by {:.0%}", period_error), period_error > LARGEST_PERIOD_ERROR
         on_shelf = profiles.distance_m[None, :] < np.nan_to_num(breaks.break_m)[:, None]
         gaps = (profiles.is_filled & on_shelf).sum(axis=1)
-        yield said("samples on the shelf bridged, filled or smoothed: {:d}", gaps), gaps > 0
-        yield said("friction all but stops mode 1, Q {:.1f}", damped_q), damped_q < Q_STOPPED
+        yield _said("samples on the shelf bridged, filled or smoothed: {:d}", gaps), gaps > 0
+        yield _said("friction all but stops mode 1, Q {:.1f}", damped_q), damped_q < Q_STOPPED
         basin_m, sill_m = sills(profiles, breaks)
-        yield said("basin of {:.0f} m behind a sill of {:.1f} m", basin_m, sill_m), basin_m > SILL_RATIO * sill_m
+        yield _said("basin of {:.0f} m behind a sill of {:.1f} m", basin_m, sill_m), basin_m > SILL_RATIO * sill_m
         in_water = profiles.start_reason == START_REASONS.index("open_water")
-        yield said("starts in open water, off a bridged inlet"), in_water
+        yield _said("starts in open water, off a bridged inlet", in_water), in_water
+
+
+def neighbour_doubts(crosses: BoolArray, width_change: FloatArray) -> Iterator[Doubt]:
+    """Go through the reasons in the transects beside one to trust its index less, as `doubts` does.
+
+    Parameters
+    ----------
+    crosses : (n,) array of bool
+        Whether a transect crosses another before the break.
+    width_change : (n,) array of float
+        Ratio of the wider to the narrower of its shelf width and its neighbours', the largest; NaN unknown.
+    """
+    yield _said("crosses another transect before the break", crosses), crosses
+    with np.errstate(invalid="ignore"):
+        changes = width_change > LARGEST_WIDTH_CHANGE
+    yield _said("shelf width changes {:.1f}-fold to a neighbour", width_change), changes
+
+
+def _said(text: str, *values: NDArray[Any]) -> TextArray:
+    return np.array([text.format(*row) for row in zip(*values, strict=True)], dtype=object)
 
 
 def confidences(has_index: BoolArray, n_doubts: NDArray[np.int64]) -> TextArray:

@@ -105,6 +105,10 @@ _settings_file = click.argument("settings_file", metavar="SETTINGS.toml", type=c
 _overwrite = click.option("--overwrite", is_flag=True, help="Replace files that are there already.")
 _as_json = click.option("--json", "as_json", is_flag=True, help="Print a summary as JSON instead of the path.")
 _workers = click.option("--workers", default=1, show_default=True, type=click.IntRange(1), help="Processes to use.")
+_anew = click.option("--anew", is_flag=True, help="Do all again, whatever a stopped run has left.")
+_scheduler = click.option(
+    "--scheduler", metavar="ADDRESS", help="Use the workers of a dask scheduler, such as tcp://10.0.0.1:8786."
+)
 
 
 def _output(default: str) -> Callable[[_F], _F]:
@@ -126,16 +130,21 @@ def main() -> None:
 @_settings_file
 @_output("output.path of the settings")
 @_overwrite
+@_anew
 @_workers
+@_scheduler
 @_as_json
 @_spoken
-def screen(settings_file: Path, output: Path | None, overwrite: bool, workers: int, as_json: bool) -> None:
-    """Screen a coast: transects, shelf breaks and resonance index into one GeoPackage."""
+def screen(settings_file: Path, output: Path | None, as_json: bool, **how: Any) -> None:
+    """Screen a coast: transects, shelf breaks and resonance index into one GeoPackage.
+
+    A run that was stopped goes on from its finished sections of coast when the same command is given again.
+    """
     settings = _read(settings_file)
     if output is not None:
         written = settings.output.model_copy(update={"path": output.absolute()})
         settings = settings.model_copy(update={"output": written})
-    _screen(settings, overwrite=overwrite, workers=workers, as_json=as_json)
+    _screen(settings, as_json=as_json, **how)
 
 
 @main.command(epilog="Example: shelfmap inspect dem.tif --positive up")
@@ -177,20 +186,21 @@ def demo(folder: Path, overwrite: bool, workers: int, as_json: bool) -> None:
     from shelfmap.demo import write_demo
 
     settings_file = write_demo(folder, overwrite=overwrite)[-1]
-    _screen(_read(settings_file), overwrite=overwrite, workers=workers, as_json=as_json)
+    _screen(_read(settings_file), as_json=as_json, overwrite=overwrite, workers=workers)
 
 
 @main.command(epilog="Example: shelfmap coast coast.toml --output coast_lines.gpkg")
 @_settings_file
 @_output("coast_lines.gpkg beside the settings")
 @_overwrite
+@_workers
 @_spoken
-def coast(settings_file: Path, output: Path | None, overwrite: bool) -> None:
+def coast(settings_file: Path, output: Path | None, overwrite: bool, workers: int) -> None:
     """Write the generalised coast, to edit in a GIS and give back as coast.file."""
     from shelfmap.pipeline import write_coast
 
     path = output or settings_file.with_name("coast_lines.gpkg")
-    traced = write_coast(_read(settings_file), path, overwrite=overwrite)
+    traced = write_coast(_read(settings_file), path, overwrite=overwrite, workers=workers)
     length_km = sum(line.length_m for line in traced.lines) / 1e3
     _say(f"{len(traced.lines)} stretches of coast, {length_km:.0f} km in all: {traced.source}")
     click.echo(path)
@@ -200,14 +210,15 @@ def coast(settings_file: Path, output: Path | None, overwrite: bool) -> None:
 @_settings_file
 @_output("transect_lines.gpkg beside the settings")
 @_overwrite
+@_workers
 @_spoken
-def transects(settings_file: Path, output: Path | None, overwrite: bool) -> None:
+def transects(settings_file: Path, output: Path | None, overwrite: bool, workers: int) -> None:
     """Write the transects, to edit in a GIS and give back as transects.file."""
     from shelfmap.pipeline import write_transects
 
     path = output or settings_file.with_name("transect_lines.gpkg")
-    profiles = write_transects(_read(settings_file), path, overwrite=overwrite)
-    _say(f"{len(profiles.n_samples)} transects, sampled every {profiles.step_m / 1e3:.2f} km")
+    count = write_transects(_read(settings_file), path, overwrite=overwrite, workers=workers)
+    _say(f"{count} transects")
     click.echo(path)
 
 
@@ -246,7 +257,7 @@ def _plain_record(record: logging.LogRecord) -> bool:
     return True
 
 
-def _screen(settings: "Settings", *, overwrite: bool, workers: int, as_json: bool) -> None:
+def _screen(settings: "Settings", *, as_json: bool, **how: Any) -> None:
     """Screen with progress and a count of statuses on stderr, path or summary on stdout."""
     from shelfmap import pipeline
 
@@ -254,7 +265,7 @@ def _screen(settings: "Settings", *, overwrite: bool, workers: int, as_json: boo
         _say(f"{stage} {done}/{total}", end="\r")  # whatever is printed next overwrites it
 
     shown = progress if sys.stderr.isatty() else None
-    run = pipeline.screen(settings, overwrite=overwrite, workers=workers, progress=shown)
+    run = pipeline.screen(settings, progress=shown, **how)
     summary = run.summary()
     counts = ", ".join(f"{count} {status}" for status, count in summary["status"].items())
     _say(f"{summary['transects']} transects: {counts}")

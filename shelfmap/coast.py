@@ -5,34 +5,26 @@ width is bridged, everything else stays where it is. It is made tile by tile in 
 pieces are joined at the seams.
 """
 
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
-from itertools import pairwise
 
 import numpy as np
 import shapely
-from contourpy import FillType, contour_generator
 from numpy.typing import NDArray
-from scipy import ndimage
 
 from shelfmap.basins import SHORE_HAIR_M, Basins, Tile, Tiling, label_basins
 from shelfmap.chains import join_ends
+from shelfmap.closing import TracingJob, trace_tiles, window_of
 from shelfmap.errors import CoastError
-from shelfmap.geodesy import area_m2, distance_bearing, geodesic_nodes, local_projection, unwrap_along
+from shelfmap.geodesy import area_m2, distance_bearing, geodesic_nodes, unwrap_along
 from shelfmap.grid import INSIDE, GridSource
 from shelfmap.settings import CoastSettings
+from shelfmap.workers import Mapped
 
 __all__ = ["Coast", "CoastLine", "coast_from_lines", "trace_coast"]
 
 FloatArray = NDArray[np.float64]
 Geometries = NDArray[np.object_]
-
-#: Round joins of the closing use this many segments a quarter circle: chords stay within 0.5 % of the radius.
-QUARTER_SEGMENTS = 8
-#: Edges of land polygons are cut at this many cells: longer ones, straight in the grid, bow off in the local plane.
-LONGEST_EDGE_CELLS = 4.0
-#: Seams between tiles lie off the cells by this much of one: a coast along the cells would lie on both sides of them.
-SEAM_CELLS = 0.3719
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -78,8 +70,15 @@ class Coast:
     source: str
     """Where it comes from, one clause for people."""
 
+    @property
+    def length_km(self) -> float:
+        """Length of all pieces, km."""
+        return sum(line.length_m for line in self.lines) / 1e3
 
-def trace_coast(source: GridSource, settings: CoastSettings, land: Geometries | None = None) -> Coast:
+
+def trace_coast(
+    source: GridSource, settings: CoastSettings, land: Geometries | None = None, *, mapped: Mapped = map
+) -> Coast:
     """Trace the generalised coast of a grid, or of land polygons on it.
 
     Parameters
@@ -90,6 +89,8 @@ def trace_coast(source: GridSource, settings: CoastSettings, land: Geometries | 
         Level, generalisation, smallest island and sea, box.
     land : array of shapely polygons, optional
         Land in longitude and latitude, used instead of the grid's own shoreline.
+    mapped : Mapped
+        Runs the tiles, in this process by default; the coast is the same bit for bit wherever they run.
 
     Returns
     -------
@@ -109,6 +110,7 @@ def trace_coast(source: GridSource, settings: CoastSettings, land: Geometries | 
         level_m=settings.level_m,
         smallest_sea_m2=settings.smallest_sea_km2 * 1e6,
         smallest_enclosed_sea_m2=settings.smallest_enclosed_sea_km2 * 1e6,
+        mapped=mapped,
     )
     if not len(basins.areas_m2):
         raise CoastError(
@@ -116,16 +118,15 @@ def trace_coast(source: GridSource, settings: CoastSettings, land: Geometries | 
             "check that it holds depths here, their sign (grid.positive), the level (grid.level_shift_m) and "
             "coast.smallest_sea_km2"
         )
-    tracer = _Tracer(source, settings, basins, land)
+    in_index = None if land is None else _in_index(source, land, settings.smallest_enclosed_sea_km2 * 1e6)
     pieces: list[FloatArray] = []
     islets: list[Geometries] = []
-    n_i, n_j = tiling.shape
-    for i in range(n_i):
-        for j in range(n_j):
-            tile_lines, tile_islets = tracer.trace(tiling.tile(i, j))
-            pieces.extend(tile_lines)
-            islets.append(tile_islets)
-    chains = join_ends(pieces, tolerance=tracer.join_cells, turn=source.n_cols if tiling.closes else None)
+    for traced in mapped(trace_tiles, _tracing_jobs(source, settings, basins, in_index)):
+        for tile in traced:
+            pieces.extend(tile.lines)
+            islets.append(tile.islets)
+    join_cells = max(0.3, 0.05 * settings.generalise_m / 2 / source.step_m)
+    chains = join_ends(pieces, tolerance=join_cells, turn=source.n_cols if tiling.closes else None)
     lines, dropped = _sort_out(source, chains, settings)
     if not lines:
         raise CoastError(
@@ -179,138 +180,63 @@ def region_of(source: GridSource, box: tuple[float, float, float, float] | None,
     return Tile(row0, row1, col0, col1)
 
 
-class _Tracer:
-    """What the tracing of each tile needs to know."""
+def _in_index(source: GridSource, land: Geometries, smallest_sea_m2: float) -> Geometries:
+    """Land on the grid as polygons in its index, joined, lakes filled; round the globe once more on both sides."""
+    west, south, east, north = source.box_deg
+    spare_deg = 180.0 if source.wraps else 0.5
+    land = shapely.make_valid(land)
+    moved = [
+        shapely.transform(land, lambda lonlat, turn=turn: lonlat + np.array([turn, 0.0]))
+        for turn in (-360.0, 0.0, 360.0)
+    ]
+    cut = shapely.clip_by_rect(np.concatenate(moved), west - spare_deg, south, east + spare_deg, north)
+    parts = shapely.get_parts(cut[~shapely.is_empty(cut)])
+    # most lands lie apart: a plain union takes minutes on those of a globe
+    whole = shapely.get_parts(shapely.disjoint_subset_union_all(parts[shapely.get_dimensions(parts) == 2]))
+    rings, number = shapely.get_rings(whole[shapely.get_dimensions(whole) == 2], return_index=True)
+    is_shell = np.diff(number, prepend=-1) > 0
+    kept = is_shell.copy()
+    kept[~is_shell] = [area_m2(*shapely.get_coordinates(hole).T) >= smallest_sea_m2 for hole in rings[~is_shell]]
+    polygons = shapely.polygons(rings[kept], indices=number[kept])
 
-    def __init__(self, source: GridSource, settings: CoastSettings, basins: Basins, land: Geometries | None) -> None:
-        self.source = source
-        self.settings = settings
-        self.basins = basins
-        self.radius_m = settings.generalise_m / 2
-        self.land = None if land is None else self._in_index(land)
-        self.join_cells = max(0.3, 0.05 * self.radius_m / min(source.step_x_m, source.step_y_m))
+    def to_index(lonlat: FloatArray) -> FloatArray:
+        x, y = source.projection.from_lonlat(lonlat[:, 0], lonlat[:, 1])
+        return np.stack([(x - source.x0) / source.dx, (y - source.y0) / source.dy], axis=1)
 
-    def _in_index(self, land: Geometries) -> Geometries:
-        """Land on the grid as polygons in its index, joined, lakes filled; round the globe once more on both sides."""
-        source = self.source
-        west, south, east, north = source.box_deg
-        spare_deg = 180.0 if source.wraps else 0.5
-        land = shapely.make_valid(land)
-        moved = [
-            shapely.transform(land, lambda lonlat, turn=turn: lonlat + np.array([turn, 0.0]))
-            for turn in (-360.0, 0.0, 360.0)
-        ]
-        cut = shapely.clip_by_rect(np.concatenate(moved), west - spare_deg, south, east + spare_deg, north)
-        whole = shapely.get_parts(shapely.union_all(cut))
-        rings, number = shapely.get_rings(whole[shapely.get_dimensions(whole) == 2], return_index=True)
-        is_shell = np.diff(number, prepend=-1) > 0
-        least_m2 = self.settings.smallest_enclosed_sea_km2 * 1e6
-        is_sea = np.array([area_m2(*shapely.get_coordinates(ring).T) >= least_m2 for ring in rings], dtype=bool)
-        polygons = shapely.polygons(rings[is_shell | is_sea], indices=number[is_shell | is_sea])
+    return np.asarray(shapely.get_parts(shapely.make_valid(shapely.transform(polygons, to_index))))
 
-        def to_index(lonlat: FloatArray) -> FloatArray:
-            x, y = source.projection.from_lonlat(lonlat[:, 0], lonlat[:, 1])
-            return np.stack([(x - source.x0) / source.dx, (y - source.y0) / source.dy], axis=1)
 
-        return np.asarray(shapely.get_parts(shapely.make_valid(shapely.transform(polygons, to_index))))
-
-    def trace(self, tile: Tile) -> tuple[list[FloatArray], Geometries]:
-        """Generalised coast inside one tile, in grid index, and the islets met (lon, lat)."""
-        window = self._window(tile)
-        land = self._land_polygons(window)
-        none = np.zeros(0, dtype=object)
-        if not len(land):
-            return [], none
-        lon_deg, lat_deg = self.source.lonlat_of((tile.col0 + tile.col1) / 2, (tile.row0 + tile.row1) / 2)
-        plane = local_projection(float(lon_deg), float(lat_deg))
-
-        def to_plane(index: FloatArray) -> FloatArray:
-            return np.stack(plane.from_lonlat(*self.source.lonlat_of(index[:, 0], index[:, 1])), axis=1)
-
-        local = shapely.simplify(shapely.make_valid(shapely.transform(land, to_plane)), self.radius_m / 50)
-        area_m2 = shapely.area(local)
-        inside = shapely.box(window.col0 + 0.5, window.row0 + 0.5, window.col1 - 1.5, window.row1 - 1.5)
-        is_whole = shapely.covered_by(land, inside)  # land cut by the window may be large
-        tiny = is_whole & (area_m2 < (self.radius_m / 2) ** 2)
-        large = ~is_whole | (area_m2 >= self.settings.smallest_island_km2 * 1e6)
-        closed = shapely.union_all(local[~tiny])
-        closed = shapely.buffer(closed, self.radius_m, quad_segs=QUARTER_SEGMENTS)
-        closed = shapely.buffer(closed, -self.radius_m, quad_segs=QUARTER_SEGMENTS)
-        parts = shapely.get_parts(closed)
-        # islands are bridged to large land only, not to each other
-        held, _ = shapely.STRtree(local[large]).query(parts, predicate="intersects")
-        kept = np.isin(np.arange(len(parts)), held)
-        dropped, _ = shapely.STRtree(parts[~kept]).query(local, predicate="intersects")
-        islets = shapely.transform(
-            land[np.union1d(np.flatnonzero(tiny), dropped)],
-            lambda index: np.stack(self.source.lonlat_of(index[:, 0], index[:, 1]), axis=1),
-        )
-        return self._clip(parts[kept], plane.to_lonlat, tile), islets
-
-    def _window(self, tile: Tile) -> Tile:
-        """Tile with the margin its closing needs, clipped to the region."""
-        lat_deg = np.abs(self.source.lonlat_of(np.full(2, float(tile.col0)), np.array([tile.row0, tile.row1]))[1]).max()
-        _, middle_deg = self.source.lonlat_of((self.source.n_cols - 1) / 2, (self.source.n_rows - 1) / 2)
-        shrink = 1.0
-        if self.source.is_geographic:
-            shrink = max(0.02, np.cos(np.radians(min(89.0, lat_deg))) / np.cos(np.radians(float(middle_deg))))
-        rows = int(3 * self.radius_m / self.source.step_y_m) + 3
-        cols = int(3 * self.radius_m / (self.source.step_x_m * shrink)) + 3
-        return self.basins.tiling.with_margin(tile, rows, cols)
-
-    def _land_polygons(self, window: Tile) -> Geometries:
-        """Land of a window as polygons in grid index; lakes are land, missing cells are like the nearest known."""
-        if self.land is not None:
-            frame = (window.col0, window.row0, window.col1 - 1, window.row1 - 1)
-            cut = shapely.clip_by_rect(self.land, *frame)
-            parts = shapely.get_parts(cut[~shapely.is_empty(cut)])
-            polygons = parts[shapely.get_dimensions(parts) == 2]
-            return np.asarray(shapely.segmentize(polygons, max_segment_length=LONGEST_EDGE_CELLS))
-        grid = self.source.read(window.row0, window.row1, window.col0, window.col1)
-        depth_m = grid.depth_m.astype(np.float64) + self.settings.level_m
-        with np.errstate(invalid="ignore"):
-            lake = (depth_m > SHORE_HAIR_M) & ~self.basins.sea_mask(window)
-        depth_m[lake] = -1.0
-        missing = np.isnan(depth_m)
-        if missing.all():
-            return np.zeros(0, dtype=object)
-        if missing.any():
-            nearest = ndimage.distance_transform_edt(missing, return_distances=False, return_indices=True)
-            depth_m = depth_m[tuple(nearest)]
-        filled = contour_generator(z=depth_m, fill_type=FillType.OuterOffset).filled(-np.inf, SHORE_HAIR_M)
-        corner = np.array([window.col0, window.row0], dtype=float)
-        polygons = [
-            shapely.polygons(rings[0], rings[1:] or None)
-            for rings in (
-                [shapely.linearrings(points[a:b] + corner) for a, b in pairwise(offsets)]
-                for points, offsets in zip(*filled, strict=True)
+def _tracing_jobs(
+    source: GridSource, settings: CoastSettings, basins: Basins, land: Geometries | None
+) -> Iterator[TracingJob]:
+    """Jobs that trace all tiles in order, those left out that hold no shore."""
+    tiling = basins.tiling
+    row, band = -1, np.zeros(0, dtype=object)
+    for run in tiling.runs():
+        tiles = [tiling.tile(i, j) for i, j in run]
+        windows = [window_of(source, tiling, tile, settings.generalise_m / 2) for tile in tiles]
+        if land is None:
+            kept = [k for k, window in enumerate(windows) if basins.may_hold_shore(window)]
+        else:
+            if run[0][0] != row:  # land is cut to the row of tiles first: a continent has many vertices
+                row, band = run[0][0], _cut(land, windows[0].row0, windows[0].row1, -source.n_cols, 2 * source.n_cols)
+            cut = [_cut(band, window.row0, window.row1, window.col0, window.col1) for window in windows]
+            kept = [k for k, polygons in enumerate(cut) if len(polygons)]
+        if kept:
+            yield TracingJob(
+                source=source,
+                settings=settings,
+                tiles=tuple(tiles[k] for k in kept),
+                basins=basins.near([windows[k] for k in kept] if land is None else []),
+                land=None if land is None else tuple(cut[k] for k in kept),
             )
-        ]
-        return np.array(polygons, dtype=object)
 
-    def _clip(self, parts: Geometries, to_lonlat: object, tile: Tile) -> list[FloatArray]:
-        """Boundary of closed land within a tile, land on the left, in grid index."""
-        region, source = self.basins.tiling.region, self.source
-        rings = shapely.boundary(shapely.orient_polygons(parts))
-        rings = shapely.segmentize(shapely.get_parts(rings), max_segment_length=self.radius_m / 2)
 
-        def to_index(plane: FloatArray) -> FloatArray:
-            lon_deg, lat_deg = to_lonlat(plane[:, 0], plane[:, 1])  # type: ignore[operator]
-            col, row = source.index_of(lon_deg, lat_deg)
-            if source.wraps:
-                middle = (tile.col0 + tile.col1) / 2
-                col = col + source.n_cols * np.round((middle - col) / source.n_cols)
-            return np.stack([col, row], axis=1)
-
-        west, east = tile.col0 - SEAM_CELLS, tile.col1 - SEAM_CELLS
-        south, north = tile.row0 - SEAM_CELLS, tile.row1 - SEAM_CELLS
-        # the edge of the grid is no coast: stay off it by three quarters of a cell
-        south, north = max(south, region.row0 + 0.75), min(north, region.row1 - 1.75)
-        if not self.basins.tiling.closes:
-            west, east = max(west, region.col0 + 0.75), min(east, region.col1 - 1.75)
-        clipped = shapely.clip_by_rect(shapely.transform(rings, to_index), west, south, east, north)
-        parts = shapely.get_parts(clipped[~shapely.is_empty(clipped)])
-        return [shapely.get_coordinates(part) for part in parts if shapely.get_type_id(part) == 1]
+def _cut(land: Geometries, row0: int, row1: int, col0: int, col1: int) -> Geometries:
+    """Polygons within the cell centres of a half-open window."""
+    cut = shapely.clip_by_rect(land, col0, row0, col1 - 1, row1 - 1)
+    parts = shapely.get_parts(cut[~shapely.is_empty(cut)])
+    return np.asarray(parts[shapely.get_dimensions(parts) == 2])
 
 
 def _sort_out(

@@ -1,23 +1,25 @@
-"""Bathymetry rasters: what one holds, windows of it in memory, depths at points.
+"""The bathymetry of a run: one file, or several over each other, as one source of depths.
 
-Inside, rows run from south to north and columns from west to east, `depth_m` is positive down and NaN means
-"missing", however the file stores them; this is the only place where a sign or an order turns. An index
-(col, row) is a float that is 0 at the centre of the south-west cell.
+Files on one lattice make a sheet (`shelfmap.sheets`); sheets lie over each other in order of priority. The lowest of
+them, made large enough for all, is the frame: the cells in which coasts are traced.
 """
 
 import logging
-from collections.abc import Iterable, Iterator, Mapping
+from collections.abc import Iterable, Iterator, Mapping, Sequence
 from dataclasses import dataclass, replace
-from typing import Any, Final
+from itertools import pairwise
+from pathlib import Path
+from typing import Final
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from shelfmap._kernels.sampling import INSIDE, OUTSIDE, VOID, sample_points
+from shelfmap._kernels.sampling import INSIDE, OUTSIDE, VOID
 from shelfmap.errors import GridError
-from shelfmap.geodesy import Projection, distance_bearing, unwrap_lon_deg
-from shelfmap.rasterfile import Indices, RasterFile, RasterHeader, projection_of, read_header
-from shelfmap.settings import VOID_LAND_M, GridSettings
+from shelfmap.lattice import Lattice, cells_round
+from shelfmap.rasterfile import Indices, RasterHeader, files_behind, projection_of, read_header
+from shelfmap.settings import GridSettings
+from shelfmap.sheets import Grid, PlacedFile, Sheet, join_files, name_of
 from shelfmap.vertical import Positive, check_unit, datum_words, decide_positive
 
 __all__ = ["FARTHEST_VALUE_M", "INSIDE", "OUTSIDE", "VOID", "Grid", "GridSource", "open_grid"]
@@ -35,264 +37,160 @@ FILL_VALUE: Final = -9999.0
 # A sample of a large grid: this many windows a side, of this many cells a side.
 _SAMPLE_WINDOWS: Final = 8
 _SAMPLE_CELLS: Final = 256
-# Scattered points are read in tiles of this many cells a side.
-_TILE_CELLS: Final = 512
+# A cell of the frame takes the mean of this many depths a side of a finer sheet, at most.
+_MOST_DEPTHS: Final = 4
+# So many depths of a finer sheet are taken at a time.
+_DEPTHS_AT_A_TIME: Final = 1_000_000
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
-class Grid:
-    """A window of a grid in memory.
+class GridSource(Lattice):
+    """What shelfmap understands of the grid: strings and numbers, no depths, so that it travels to workers.
+
+    The lattice is the frame, that of the last sheet.
 
     Parameters
     ----------
-    depth_m : (n_rows, n_cols) array of float32
-        Depth, metres, positive down, rows south to north; NaN = missing. Becomes read-only.
-    row0, col0 : int
-        Index of its first cell in the source.
-    wrap_cols : int
-        Columns round the globe where the source goes round it, else 0.
+    sheets : tuple of Sheet
+        Files on one lattice each, in order of priority; the last holds all.
+    boxes : tuple of Indices
+        Cells of the frame (row0, row1, col0, col1) that each of the other sheets may give depths to.
     """
 
-    depth_m: NDArray[np.float32]
-    row0: int
-    col0: int
-    wrap_cols: int = 0
+    sheets: tuple[Sheet, ...]
+    boxes: tuple[Indices, ...]
 
-    def __post_init__(self) -> None:
-        if self.depth_m.ndim != 2 or self.depth_m.dtype != np.float32 or not self.depth_m.flags.c_contiguous:
-            raise GridError(
-                f"depth_m is {self.depth_m.dtype} of shape {self.depth_m.shape}; give a C-contiguous 2-D float32 array"
-            )
-        self.depth_m.setflags(write=False)
-
-    def sample(self, col: ArrayLike, row: ArrayLike) -> tuple[FloatArray, StateArray]:
-        """Depth at points, bilinear between cell centres, missing cells left out of the mean.
-
-        Parameters
-        ----------
-        col, row : array_like of float
-            Indices in the source (not in the window), broadcast together.
-
-        Returns
-        -------
-        depth_m : array of float
-            Metres; NaN unless the state is INSIDE.
-        state : array of uint8
-            INSIDE; VOID where missing cells carry more than half the weight; OUTSIDE beyond the outer cell centres.
-
-        Examples
-        --------
-        >>> grid = Grid(depth_m=np.array([[10, 20], [np.nan, 40]], dtype=np.float32), row0=0, col0=0)
-        >>> depth_m, state = grid.sample([0.25, 0.0, 1.5], [0.0, 1.0, 0.0])
-        >>> depth_m, state
-        (array([12.5,  nan,  nan]), array([0, 1, 2], dtype=uint8))
-        """
-        cols, rows = np.broadcast_arrays(np.asarray(col, dtype=float), np.asarray(row, dtype=float))
-        depth_m = np.empty(cols.shape)
-        state = np.empty(cols.shape, dtype=np.uint8)
-        sample_points(
-            self.depth_m,
-            self.row0,
-            self.col0,
-            self.wrap_cols,
-            rows.ravel(),
-            cols.ravel(),
-            depth_m.reshape(-1),
-            state.reshape(-1),
-        )
-        return depth_m, state
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class GridSource:
-    """What shelfmap understands of a raster: strings and numbers, no depths, so that it travels to workers.
-
-    Parameters
-    ----------
-    file : RasterFile
-        How to read the values.
-    crs_wkt, crs_why : str
-        Coordinate system and where it comes from.
-    x0, y0 : float
-        Centre of the south-west cell, grid units.
-    dx, dy : float
-        Cell sides, grid units, > 0.
-    n_rows, n_cols : int
-        Cells, without a last column that repeats the first 360 degrees further on.
-    wraps : bool
-        True where the columns go once round the globe.
-    positive, positive_why : str
-        "up" for elevations or "down" for depths, and why.
-    level_shift_m : float
-        How far the water stands above the grid's zero.
-    void_is_land : bool
-        Whether missing cells read as land.
-    vertical_words : tuple of str
-        Metadata that name a vertical datum.
-    """
-
-    file: RasterFile
-    crs_wkt: str
-    crs_why: str
-    x0: float
-    y0: float
-    dx: float
-    dy: float
-    n_rows: int
-    n_cols: int
-    wraps: bool
-    positive: Positive
-    positive_why: str
-    level_shift_m: float
-    void_is_land: bool
-    vertical_words: tuple[str, ...]
+    @property
+    def files(self) -> tuple[PlacedFile, ...]:
+        """Every file, sheet by sheet in order of priority."""
+        return tuple(file for sheet in self.sheets for file in sheet.files)
 
     @property
     def path(self) -> str:
-        """Name of the raster."""
-        return self.file.path
+        """Name of the raster, or of the first and how many more there are."""
+        return name_of(self.files)
 
-    @property
-    def is_geographic(self) -> bool:
-        """True where coordinates are degrees."""
-        return self.projection.is_geographic
-
-    @property
-    def projection(self) -> Projection:
-        """Way between the grid's coordinates and longitude, latitude."""
-        return projection_of(self.crs_wkt)
-
-    @property
-    def step_x_m(self) -> float:
-        """Length on the ground of a cell's west-east side in the middle of the grid, metres."""
-        return self._step_m(1.0, 0.0)
-
-    @property
-    def step_y_m(self) -> float:
-        """Length on the ground of a cell's south-north side in the middle of the grid, metres."""
-        return self._step_m(0.0, 1.0)
-
-    @property
-    def step_m(self) -> float:
-        """The smaller of the two cell sides in the middle of the grid, metres."""
-        return min(self.step_x_m, self.step_y_m)
-
-    def _step_m(self, cols: float, rows: float) -> float:
-        col, row = (self.n_cols - 1) / 2, (self.n_rows - 1) / 2
-        half = np.array([-0.5, 0.5])
-        lon_deg, lat_deg = self.lonlat_of(col + half * cols, row + half * rows)
-        distance_m, _ = distance_bearing(lon_deg[0], lat_deg[0], lon_deg[1], lat_deg[1])
-        return float(distance_m)
-
-    @property
-    def box_deg(self) -> tuple[float, float, float, float]:
-        """West, south, east, north of the cells' outer edges, degrees; east above west, past 180 where need be."""
-        across = np.linspace(-0.5, self.n_cols - 0.5, 65)
-        along = np.linspace(-0.5, self.n_rows - 0.5, 65)
-        col = np.concatenate([across, across, np.full(65, -0.5), np.full(65, self.n_cols - 0.5)])
-        row = np.concatenate([np.full(65, -0.5), np.full(65, self.n_rows - 0.5), along, along])
-        lon, lat = self.lonlat_of(col, row)
-        if not self.is_geographic:
-            middle_lon, _ = self.lonlat_of((self.n_cols - 1) / 2, (self.n_rows - 1) / 2)
-            on_earth = np.isfinite(lon) & np.isfinite(lat)
-            lon, lat = unwrap_lon_deg(lon[on_earth], middle_lon), lat[on_earth]
-        west, south, east, north = float(lon.min()), float(lat.min()), float(lon.max()), float(lat.max())
-        for pole in (-90.0, 90.0):
-            if not self.is_geographic and self._holds(0.0, pole):
-                west, east, south, north = -180.0, 180.0, min(south, pole), max(north, pole)
-        return west, max(south, -90.0), east, min(north, 90.0)
-
-    def _holds(self, lon_deg: float, lat_deg: float) -> bool:
-        col, row = self.index_of(lon_deg, lat_deg)
-        return bool(-0.5 <= col <= self.n_cols - 0.5 and -0.5 <= row <= self.n_rows - 0.5)
-
-    def index_of(self, lon_deg: ArrayLike, lat_deg: ArrayLike) -> tuple[FloatArray, FloatArray]:
-        """Index (col, row) of points; 0 is the centre of the west column, of the south row.
-
-        On a geographic grid longitudes are first turned into its range: from its first column on where it goes
-        round the globe, else within 180 degrees of its middle.
-        """
-        x, y = self.projection.from_lonlat(lon_deg, lat_deg)
-        if self.is_geographic:
-            middle_deg = self.x0 + (180.0 if self.wraps else (self.n_cols - 1) / 2 * self.dx)
-            x = unwrap_lon_deg(x, middle_deg)
-        return (x - self.x0) / self.dx, (y - self.y0) / self.dy
-
-    def lonlat_of(self, col: ArrayLike, row: ArrayLike) -> tuple[FloatArray, FloatArray]:
-        """Longitude and latitude, degrees, of indices; on a geographic grid in the grid's own range."""
-        x = self.x0 + np.asarray(col, dtype=float) * self.dx
-        y = self.y0 + np.asarray(row, dtype=float) * self.dy
-        return self.projection.to_lonlat(x, y)
-
-    def read(self, row0: int, row1: int, col0: int, col1: int) -> Grid:
-        """Depths of a half-open window, clipped to the grid; columns are taken round the globe where it wraps.
+    def disk_files(self) -> tuple[Path, ...]:
+        """Every local file the depths are read from, those that others refer to among them, in order.
 
         Raises
         ------
         GridError
-            If no cell of the grid is in the window, or the file has vanished, changed or is damaged.
+            If a raster cannot be opened any more.
+        """
+        return tuple(dict.fromkeys(path for placed in self.files for path in files_behind(placed.file.path)))
+
+    @property
+    def crs_why(self) -> str:
+        """Where the coordinate system of the frame comes from."""
+        return self.sheets[-1].files[0].crs_why
+
+    @property
+    def dtype(self) -> str:
+        """Type the values are stored in; all of them, where files differ."""
+        return ", ".join(dict.fromkeys(placed.file.dtype for placed in self.files))
+
+    @property
+    def positive(self) -> str:
+        """What is said of the values: "up" for elevations or "down" for depths, or "up and down" where files differ."""
+        return " and ".join(sorted({placed.positive for placed in self.files}, reverse=True))
+
+    @property
+    def positive_why(self) -> str:
+        """Why, for all files or for each of them."""
+        whys = dict.fromkeys(placed.positive_why for placed in self.files)
+        if len(whys) == 1:
+            return next(iter(whys))
+        return "; ".join(f"{placed.file.path} {placed.positive}, {placed.positive_why}" for placed in self.files)
+
+    @property
+    def level_shift_m(self) -> float:
+        """How far the water stands above the grid's zero."""
+        return self.sheets[-1].level_shift_m
+
+    @property
+    def void_is_land(self) -> bool:
+        """Whether cells missing in all files read as land."""
+        return self.sheets[-1].void_is_land
+
+    @property
+    def vertical_words(self) -> tuple[str, ...]:
+        """Metadata that name a vertical datum, each once."""
+        return tuple(sorted({words for placed in self.files for words in placed.vertical_words}))
+
+    def read(self, row0: int, row1: int, col0: int, col1: int) -> Grid:
+        """Depths of a half-open window of the frame, clipped to it; columns are taken round the globe where it wraps.
+
+        A cell takes the depth of the first sheet that has one. Where a sheet is finer than the frame that is the mean
+        of up to 4 by 4 of its depths spread over the cell, so that coasts follow it; at least half must be known.
+
+        Raises
+        ------
+        GridError
+            If no cell of the grid is in the window, or a file has vanished, changed or is damaged.
         """
         [grid] = self.read_many([(row0, row1, col0, col1)])
         return grid
 
     def read_many(self, windows: Iterable[Indices]) -> Iterator[Grid]:
-        """Depths of several windows, one after the other, the file opened once; see `read`."""
-        with self.file.opened() as dataset:
-            for row0, row1, col0, col1 in windows:
-                rows = max(row0, 0), min(row1, self.n_rows)
-                cols = (col0, min(col1, col0 + self.n_cols)) if self.wraps else (max(col0, 0), min(col1, self.n_cols))
-                if rows[0] >= rows[1] or cols[0] >= cols[1]:
-                    raise GridError(
-                        f"{self.path}: window of rows {row0} to {row1} and columns {col0} to {col1} holds no cell of "
-                        f"the grid's {self.n_rows} by {self.n_cols}; ask for a window on the grid"
-                    )
-                yield self._window(dataset, rows, cols)
+        """Depths of several windows, one after the other, files opened once; see `read`."""
+        for grid in self.sheets[-1].read_many(windows):
+            yield self._overlaid(grid) if self.boxes else grid
 
-    def _window(self, dataset: Any, rows: tuple[int, int], cols: tuple[int, int]) -> Grid:
-        """Read a window that lies on the grid, in two pieces where it runs over the seam."""
-        first = cols[0] % self.n_cols
-        last = first + cols[1] - cols[0]
-        pieces = [(first, min(last, self.n_cols)), (0, last - self.n_cols)]
-        value_m = np.hstack([self.file.values(dataset, (*rows, *piece)) for piece in pieces if piece[0] < piece[1]])
-        depth_m = self.level_shift_m + (value_m if self.positive == "down" else -value_m)
-        if self.void_is_land:
-            depth_m[np.isnan(depth_m)] = -VOID_LAND_M
-        return Grid(
-            depth_m=np.ascontiguousarray(depth_m, dtype=np.float32),
-            row0=rows[0],
-            col0=first,
-            wrap_cols=self.n_cols if self.wraps else 0,
-        )
+    def _overlaid(self, grid: Grid) -> Grid:
+        """Same window of the frame with the depths of the sheets above it."""
+        depth_m = grid.depth_m.copy()
+        n_rows, n_cols = depth_m.shape
+        for sheet, (south, north, west, east) in reversed(list(zip(self.sheets, self.boxes, strict=False))):
+            row0, row1 = max(south, grid.row0), min(north, grid.row0 + n_rows)
+            for turn in (-grid.wrap_cols, 0, grid.wrap_cols) if self.wraps else (0,):
+                col0, col1 = max(west + turn, grid.col0), min(east + turn, grid.col0 + n_cols)
+                if row0 < row1 and col0 < col1:
+                    part = depth_m[row0 - grid.row0 : row1 - grid.row0, col0 - grid.col0 : col1 - grid.col0]
+                    above_m = self._means(sheet, (row0, row1, col0, col1))
+                    np.copyto(part, above_m, where=~np.isnan(above_m), casting="same_kind")
+        return replace(grid, depth_m=depth_m)
+
+    def _means(self, sheet: Sheet, window: Indices) -> FloatArray:
+        """Mean depth of a sheet over each cell of a window of the frame; NaN where less than half of it is known."""
+        row0, row1, col0, col1 = window
+        n = min(max(round(self.step_m / sheet.step_m), 1), _MOST_DEPTHS)
+        off = (np.arange(n) + 0.5) / n - 0.5
+        cols = np.arange(col0, col1) % self.n_cols  # a cell beyond the seam is the same to the last bit
+        col = (cols[:, None] + off).ravel()
+        strips = []
+        rows = max(1, _DEPTHS_AT_A_TIME // (n * col.size))
+        for first, stop in pairwise([*range(row0, row1, rows), row1]):
+            row = (np.arange(first, stop)[:, None] + off).ravel()
+            depth_m, state = sheet.sample(*self.lonlat_of(*np.meshgrid(col, row)))
+            known = (state == INSIDE).reshape(stop - first, n, col1 - col0, n)
+            known_m = np.where(known, depth_m.reshape(known.shape), 0.0)
+            # added up in one order, whatever the window
+            total_m = np.asarray(sum(known_m[:, i, :, j] for i in range(n) for j in range(n)))
+            n_known = known.sum(axis=(1, 3))
+            strips.append(np.where(2 * n_known >= n * n, total_m / np.maximum(n_known, 1), np.nan))
+        return np.concatenate(strips)
 
     def sample(self, lon_deg: ArrayLike, lat_deg: ArrayLike) -> tuple[FloatArray, StateArray]:
-        """Depth and state at points anywhere on the grid, read from the file tile by tile; see `Grid.sample`."""
-        col, row = np.broadcast_arrays(*self.index_of(lon_deg, lat_deg))
-        depth_m = np.full(col.shape, np.nan)
-        state = np.full(col.shape, OUTSIDE, dtype=np.uint8)
-        near = (np.abs(col) <= self.n_cols) & (row > -1) & (row < self.n_rows)
-        if not self.wraps:
-            near &= (col > -1) & (col < self.n_cols)
-        here = np.flatnonzero(near)
-        tile_row, tile_col = (np.ravel(index)[here].astype(int) // _TILE_CELLS for index in (row, col))
-        n_across = self.n_cols // _TILE_CELLS + 1
-        tile = tile_row * n_across + tile_col
-        order = np.argsort(tile, kind="stable")
-        tiles, starts = np.unique(tile[order], return_index=True)
-        corners = [(t // n_across * _TILE_CELLS, t % n_across * _TILE_CELLS) for t in tiles.tolist()]
-        grids = self.read_many((r, r + _TILE_CELLS + 1, c, c + _TILE_CELLS + 1) for r, c in corners)
-        parts = np.split(here[order], starts[1:])
-        for grid, part in zip(grids, parts, strict=False):  # no point near: one empty part, no grid
-            depth_m.flat[part], state.flat[part] = grid.sample(col.flat[part], row.flat[part])
+        """Depth and state at points anywhere on the grid, each from the first sheet that has one; see `Grid.sample`."""
+        lon, lat = np.broadcast_arrays(np.asarray(lon_deg, dtype=float), np.asarray(lat_deg, dtype=float))
+        depth_m = np.full(lon.shape, np.nan)
+        state = np.full(lon.shape, OUTSIDE, dtype=np.uint8)
+        for sheet in self.sheets:
+            wanted = np.flatnonzero(state != INSIDE)
+            found_m, found = sheet.sample(lon.flat[wanted], lat.flat[wanted])
+            depth_m.flat[wanted] = found_m
+            state.flat[wanted] = np.minimum(state.flat[wanted], found)  # inside, else void, else outside
         return depth_m, state
 
 
 def open_grid(settings: GridSettings) -> GridSource:
-    """Understand a raster from its header and a bounded sample of its values.
+    """Understand the rasters of a run from their headers and a bounded sample of their values.
 
     Parameters
     ----------
     settings : GridSettings
-        Path, and whatever the file does not say or says wrong.
+        Path or paths, and whatever the files do not say or say wrong.
 
     Returns
     -------
@@ -301,29 +199,95 @@ def open_grid(settings: GridSettings) -> GridSource:
     Raises
     ------
     GridError
-        If the file is missing, damaged, on a network, not a regular north-up grid of real values in metres, has no
-        usable coordinate system, or does not tell elevations from depths.
+        If a file is missing, damaged, on a network, not a regular north-up grid of real values in metres, has no
+        usable coordinate system, or does not tell elevations from depths; or if the last sheet cannot hold the others.
     """
-    header = read_header(settings)
-    name = header.file.path
-    _check_extent(header)
-    check_unit(header.vertical.get("units", ""), name)
-    as_stored = _source_of(header)
-    lowest, highest = _sampled_range(as_stored)
-    if FILL_VALUE in (lowest, highest):
-        _LOG.warning("%s holds %g, which mostly means missing: then set grid.nodata = %g", name, FILL_VALUE, FILL_VALUE)
+    parts, told = [], {}
+    for path in settings.paths:
+        header = read_header(path, settings)
+        _check_extent(header)
+        check_unit(header.vertical.get("units", ""), header.file.path)
+        part = _as_stored(header)
+        parts.append(part)
+        told[header.file.path] = header.vertical, _sampled_range(part)
+    sheets = [
+        replace(
+            sheet,
+            files=tuple(_with_sign(placed, sheet, told, settings) for placed in sheet.files),
+            level_shift_m=settings.level_shift_m,
+        )
+        for sheet in join_files(parts)
+    ]
+    return _stacked(sheets, void_is_land=settings.void_is_land)
+
+
+def _stacked(sheets: Sequence[Sheet], *, void_is_land: bool) -> GridSource:
+    """Source of sheets in order of priority."""
+    *above, last = sheets
+    last = replace(last, void_is_land=void_is_land)
+    for sheet in above:
+        last = last.extended(_cells_of(sheet, last))
+    for upper, lower in pairwise([*above, last]):
+        if lower.step_m < 0.9 * upper.step_m:
+            _LOG.warning(
+                "%s has smaller cells than %s, but is used only where that has no depth: name finer files first",
+                lower.path,
+                upper.path,
+            )
+    return GridSource(
+        **{name: getattr(last, name) for name in Lattice.__dataclass_fields__},
+        sheets=(*above, last),
+        boxes=tuple(_cells_of(sheet, last) for sheet in above),
+    )
+
+
+def _cells_of(sheet: Sheet, frame: Sheet) -> Indices:
+    """Cells of a frame (row0, row1, col0, col1) whose centres lie in the box of a sheet.
+
+    Raises
+    ------
+    GridError
+        If the sheet reaches beyond the frame's map.
+    """
+    if frame.is_geographic:
+        west, south, east, north = sheet.box_deg
+        middle_deg = frame.x0 + (frame.n_cols - 1) / 2 * frame.dx
+        turn_deg = 360.0 * round((middle_deg - (west + east) / 2) / 360.0)
+        col = (np.array([west, east]) + turn_deg - frame.x0) / frame.dx
+        row = (np.array([south, north]) - frame.y0) / frame.dy
+    else:
+        across, along = (np.linspace(-0.5, n - 0.5, 65) for n in (sheet.n_cols, sheet.n_rows))
+        col, row = frame.index_of(*sheet.lonlat_of(*np.meshgrid(across, along)))
+        if not (np.isfinite(col).all() and np.isfinite(row).all()):
+            raise GridError(
+                f"{sheet.path}: reaches beyond what {frame.projection.name} can map, the system of the last grid "
+                f"{frame.path}; in grid.path name the file that covers the most last"
+            )
+    hair = 1e-6
+    return (
+        int(np.ceil(row.min() - hair)), int(np.floor(row.max() + hair)) + 1,
+        int(np.ceil(col.min() - hair)), int(np.floor(col.max() + hair)) + 1,
+    )  # fmt: skip
+
+
+def _with_sign(
+    placed: PlacedFile,
+    sheet: Sheet,
+    told: Mapping[str, tuple[Mapping[str, str], tuple[float, float]]],
+    settings: GridSettings,
+) -> PlacedFile:
+    """Same file, told elevations from depths; tiles that say the same are judged by the values of all of them."""
+    name = placed.file.path
+    texts, _ = told[name]
+    ranges = [values for other, values in (told[each.file.path] for each in sheet.files) if other == texts]
+    known = np.array([values for values in ranges if np.isfinite(values).all()]).reshape(-1, 2)
+    lowest, highest = (float(known[:, 0].min()), float(known[:, 1].max())) if len(known) else (np.nan, np.nan)
     positive, why = settings.positive, "set by grid.positive"
     if positive == "auto":
-        positive, why = decide_positive(header.vertical, lowest, highest, name)
+        positive, why = decide_positive(texts, lowest, highest, name)
     else:
-        why += _objection(positive, header.vertical, lowest, highest)
-    return replace(
-        as_stored,
-        positive=positive,
-        positive_why=why,
-        level_shift_m=settings.level_shift_m,
-        void_is_land=settings.void_is_land,
-    )
+        why += _objection(positive, texts, lowest, highest)
+    return replace(placed, positive=positive, positive_why=why)
 
 
 def _objection(positive: Positive, texts: Mapping[str, str], lowest: float, highest: float) -> str:
@@ -338,19 +302,26 @@ def _objection(positive: Positive, texts: Mapping[str, str], lowest: float, high
     return f", although {why} speaks for {other}"
 
 
-def _source_of(header: RasterHeader) -> GridSource:
-    """Give the source of a header, values taken as stored and as elevations until the sign is known."""
-    is_geographic = projection_of(header.crs_wkt).is_geographic
-    n_cols = header.file.n_cols
-    cells_round = 360.0 / header.dx
-    # a last column one turn from the first repeats it; a tenth of a cell allows for steps stored in short decimals
-    repeats = is_geographic and abs(n_cols - 1 - cells_round) < 0.1
-    wraps = repeats or (is_geographic and abs(n_cols - cells_round) < 0.1)
-    n_cols -= repeats
-    return GridSource(
+def _as_stored(header: RasterHeader) -> Sheet:
+    """Sheet of one file, values taken as stored and as elevations until the sign is known."""
+    period = cells_round(header.dx, is_geographic=projection_of(header.crs_wkt).is_geographic)
+    # a last column one turn from the first repeats it
+    n_cols = header.file.n_cols - (header.file.n_cols - 1 == period)
+    wraps = n_cols == period
+    placed = PlacedFile(
         file=header.file,
-        crs_wkt=header.crs_wkt,
+        row0=0,
+        col0=0,
+        n_cols=n_cols,
+        y_begin=header.y_begin,
         crs_why=header.crs_why,
+        positive="up",
+        positive_why="",
+        vertical_words=datum_words(header.tags),
+    )
+    return Sheet(
+        files=(placed,),
+        crs_wkt=header.crs_wkt,
         x0=header.x0,
         y0=header.y0,
         dx=360.0 / n_cols if wraps else header.dx,
@@ -358,11 +329,8 @@ def _source_of(header: RasterHeader) -> GridSource:
         n_rows=header.file.n_rows,
         n_cols=n_cols,
         wraps=wraps,
-        positive="up",
-        positive_why="",
         level_shift_m=0.0,
         void_is_land=False,
-        vertical_words=datum_words(header.tags),
     )
 
 
@@ -389,7 +357,7 @@ def _check_extent(header: RasterHeader) -> None:
         raise GridError(f"{name}: {extent} goes round the globe more than once; cut it to 360 degrees")
 
 
-def _sampled_range(source: GridSource) -> tuple[float, float]:
+def _sampled_range(source: Sheet) -> tuple[float, float]:
     """Lowest and highest stored value, of all cells of a small grid or of scattered windows of a large one.
 
     Raises
@@ -415,4 +383,7 @@ def _sampled_range(source: GridSource) -> tuple[float, float]:
                 f"{source.path}: value {value:.8g} is no elevation or depth in metres; if it means missing set "
                 f"grid.nodata to it, else convert the grid to metres"
             )
+    if FILL_VALUE in (lowest, highest):
+        name = source.path
+        _LOG.warning("%s holds %g, which mostly means missing: then set grid.nodata = %g", name, FILL_VALUE, FILL_VALUE)
     return (lowest, highest) if lowest <= highest else (np.nan, np.nan)

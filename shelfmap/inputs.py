@@ -11,9 +11,10 @@ from shelfmap.coast import Coast, coast_from_lines, trace_coast
 from shelfmap.errors import CoastError, SettingsError, TransectError
 from shelfmap.geodesy import unwrap_lon_deg
 from shelfmap.grid import GridSource
-from shelfmap.layers import VectorData, read_vector
 from shelfmap.settings import Settings
 from shelfmap.transects import Transects, lay_transects, transects_from_lines
+from shelfmap.vectors import VectorData, read_vector
+from shelfmap.workers import Mapped
 
 __all__ = ["make_coast", "make_transects", "picked_breaks"]
 
@@ -32,7 +33,7 @@ _LARGEST_ID: Final = 2**31 - 1
 BACKWARD_FALL_M: Final = 20.0
 
 
-def make_coast(source: GridSource, settings: Settings) -> Coast:
+def make_coast(source: GridSource, settings: Settings, *, mapped: Mapped = map) -> Coast:
     """Coast of a run: from the grid, or from the vector file of the settings (polygons are land, lines the coast).
 
     Parameters
@@ -41,6 +42,8 @@ def make_coast(source: GridSource, settings: Settings) -> Coast:
         The bathymetry.
     settings : Settings
         Of which `coast` counts.
+    mapped : Mapped
+        Runs the tiles of the grid, in this process by default; the coast is the same wherever they run.
 
     Raises
     ------
@@ -50,12 +53,12 @@ def make_coast(source: GridSource, settings: Settings) -> Coast:
         If the file cannot be read.
     """
     if settings.coast.file is None:
-        return trace_coast(source, settings.coast)
+        return trace_coast(source, settings.coast, mapped=mapped)
     data = read_vector(settings.coast.file, settings.coast.layer)
     kind = shapely.get_dimensions(data.geometry)
     if (kind == _POLYGON).any():
         _tell_left_out(data, kind != _POLYGON, "polygons, which are taken as land")
-        return trace_coast(source, settings.coast, land=data.geometry[kind == _POLYGON])
+        return trace_coast(source, settings.coast, land=data.geometry[kind == _POLYGON], mapped=mapped)
     if (kind == _LINE).any():
         _tell_left_out(data, kind != _LINE, "lines")
         return coast_from_lines(source, data.geometry[kind == _LINE], str(data.path))

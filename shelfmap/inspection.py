@@ -2,7 +2,6 @@
 
 import math
 from dataclasses import asdict, dataclass, replace
-from pathlib import Path
 from typing import Any, Final
 
 import numpy as np
@@ -10,16 +9,75 @@ import numpy as np
 from shelfmap.grid import FARTHEST_VALUE_M, GridSource, open_grid
 from shelfmap.rasterfile import disk_file
 from shelfmap.settings import GridSettings
+from shelfmap.sheets import PlacedFile, Sheet
 
-__all__ = ["GridReport", "inspect_grid"]
+__all__ = ["FileReport", "GridReport", "inspect_grid"]
 
 # Cells held in memory at a time.
 _BLOCK_CELLS: Final = 4_000_000
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
+class FileReport:
+    """What one file of a grid is.
+
+    Parameters
+    ----------
+    path, crs, crs_why : str
+        Name of the raster; its coordinate system and where that comes from.
+    sheet : int
+        Files of one number share a lattice and are read as one grid; number 1 gives depths first, the last carries
+        the coast.
+    n_rows, n_cols : int
+        Cells.
+    step_x_m, step_y_m : float
+        Cell sides on the ground in the middle of the sheet.
+    positive, positive_why : str
+        "up" for elevations or "down" for depths, and why.
+    """
+
+    path: str
+    sheet: int
+    crs: str
+    crs_why: str
+    n_rows: int
+    n_cols: int
+    step_x_m: float
+    step_y_m: float
+    positive: str
+    positive_why: str
+
+    @classmethod
+    def of(cls, placed: PlacedFile, sheet: Sheet, number: int) -> "FileReport":
+        """Report of a file of a sheet that has a number."""
+        return cls(
+            path=placed.file.path,
+            sheet=number,
+            crs=sheet.projection.name,
+            crs_why=placed.crs_why,
+            n_rows=placed.file.n_rows,
+            n_cols=placed.file.n_cols,
+            step_x_m=sheet.step_x_m,
+            step_y_m=sheet.step_y_m,
+            positive=placed.positive,
+            positive_why=placed.positive_why,
+        )
+
+    def line(self) -> str:
+        """Give the report as one line for people."""
+        return (
+            f"{self.path}: sheet {self.sheet}, {self.n_rows} rows by {self.n_cols} columns, cells of "
+            f"{self.step_x_m:.0f} m by {self.step_y_m:.0f} m, {self.crs}, {self.crs_why}; "
+            f"positive {self.positive}: {self.positive_why}"
+        )
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
 class GridReport:
     """What a grid holds and whether it can be screened.
+
+    Of several files, numbers of cells and what they hold are those of the cells in which the coast is traced: of the
+    last sheet, with the depths of the sheets above it.
 
     Parameters
     ----------
@@ -48,11 +106,13 @@ class GridReport:
     lowest_m, highest_m : float
         Extreme elevations above the grid's zero; NaN where all cells are missing.
     bytes_on_disk, bytes_in_memory : int
-        Size of the file, and of the whole grid as float32.
+        Size of the files, and of the whole grid as float32.
     can_screen : bool
         Whether the grid can be screened, and if not, `reasons` with what to do.
     reasons : tuple of str
         Why not, one sentence each.
+    files : tuple of FileReport
+        Each file, sheet by sheet in order of priority.
     """
 
     path: str
@@ -79,6 +139,7 @@ class GridReport:
     bytes_in_memory: int
     can_screen: bool
     reasons: tuple[str, ...]
+    files: tuple[FileReport, ...]
 
     def as_dict(self) -> dict[str, Any]:
         """Fields for JSON: NaN as None, tuples as lists."""
@@ -88,7 +149,7 @@ class GridReport:
     def lines(self) -> list[str]:
         """Give the report as lines of text for people."""
         west, south, east, north = self.box_deg
-        meaning = "elevations" if self.positive == "up" else "depths"
+        meaning = {"up": "elevations", "down": "depths"}.get(self.positive, "elevations and depths")
         shares = f"sea {self.sea_share:.1%}, land {self.land_share:.1%}, missing {self.void_share:.1%}"
         disk, memory = _size(self.bytes_on_disk), _size(self.bytes_in_memory)
         lines = [
@@ -105,7 +166,9 @@ class GridReport:
             f"size         {disk} on disk as {self.dtype}, {memory} whole in memory",
             f"screening    {'possible' if self.can_screen else 'not possible'}",
         ]
-        return lines + [f"             {reason}" for reason in self.reasons]
+        files = [f"file {number:<8}{file.line()}" for number, file in enumerate(self.files, 1)]
+        reasons = [f"             {reason}" for reason in self.reasons]
+        return lines[:1] + (files if len(files) > 1 else []) + lines[1:] + reasons
 
 
 def inspect_grid(settings: GridSettings) -> GridReport:
@@ -145,16 +208,21 @@ def inspect_grid(settings: GridSettings) -> GridReport:
         level_shift_m=source.level_shift_m,
         void_is_land=source.void_is_land,
         vertical_words=source.vertical_words,
-        dtype=source.file.dtype,
+        dtype=source.dtype,
         sea_share=n_sea / n_cells,
         land_share=n_land / n_cells,
         void_share=n_void / n_cells,
         lowest_m=lowest_m,
         highest_m=highest_m,
-        bytes_on_disk=disk_file(Path(settings.path)).stat().st_size,
+        bytes_on_disk=sum(disk_file(path).stat().st_size for path in settings.paths),
         bytes_in_memory=4 * n_cells,
         can_screen=not reasons,
         reasons=reasons,
+        files=tuple(
+            FileReport.of(placed, sheet, number)
+            for number, sheet in enumerate(source.sheets, 1)
+            for placed in sheet.files
+        ),
     )
 
 
@@ -164,7 +232,8 @@ def _count(source: GridSource) -> tuple[int, int, float, float]:
     blocks = [(row, row + rows, 0, source.n_cols) for row in range(0, source.n_rows, rows)]
     n_sea = n_land = 0
     lowest_m, highest_m = math.inf, -math.inf
-    for grid in replace(source, void_is_land=False).read_many(blocks):
+    last = replace(source.sheets[-1], void_is_land=False)
+    for grid in replace(source, sheets=(*source.sheets[:-1], last)).read_many(blocks):
         depth_m = grid.depth_m[~np.isnan(grid.depth_m)]
         if depth_m.size:
             n_sea += int(np.count_nonzero(depth_m > 0))

@@ -1,35 +1,29 @@
-"""Results to GeoPackage, whole or not at all; the reader's names stand here too."""
+"""Rows of layers: checked against the column table, and as Arrow tables that travel, are kept and are written."""
 
-import json
-import os
-import sqlite3
-from collections.abc import Iterator, Mapping, Sequence
-from contextlib import closing, contextmanager
+import io
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
-from datetime import UTC, datetime
-from pathlib import Path
-from typing import Any
+from typing import Any, Final
 
 import numpy as np
 import pyarrow as pa
-import pyogrio
 import shapely
 from numpy.typing import NDArray
 
-from shelfmap import __version__
 from shelfmap.antimeridian import split_antimeridian
 from shelfmap.columns import LAYERS, Column, columns_of
-from shelfmap.errors import GridError, LayerError
-from shelfmap.geodesy import WGS84, Projection
-from shelfmap.replacement import check_target, replacing
-from shelfmap.vectors import VectorData, read_table, read_vector
-from shelfmap.words import CAUTIONS, ENUMERATIONS
+from shelfmap.errors import LayerError
+from shelfmap.geodesy import Projection
+from shelfmap.words import ENUMERATIONS
 
-__all__ = ["Layer", "VectorData", "read_table", "read_vector", "write_layers"]
+__all__ = ["GEOMETRY_COLUMN", "Layer", "encode", "geometry_type", "pack", "to_columns", "to_table", "unpack"]
 
 ObjectArray = NDArray[np.object_]
 
-_GEOMETRY_COLUMN = "geom"
+#: Column of the shapes, as well-known binary.
+GEOMETRY_COLUMN: Final = "geom"
+#: Where a table says what its shapes are.
+_TYPE_KEY: Final = b"geometry_type"
 _SHAPES = {
     "line": (shapely.GeometryType.LINESTRING, shapely.GeometryType.MULTILINESTRING),
     "point": (shapely.GeometryType.POINT,),
@@ -79,138 +73,80 @@ class Layer:
             raise LayerError(f"layer {self.name}: {LAYERS[self.name].geometry or 'no'} geometry must be given")
         lengths = {name: np.shape(self.columns[name]) for name in wanted}
         if self.geometry is not None:
-            lengths[_GEOMETRY_COLUMN] = np.shape(self.geometry)
+            lengths[GEOMETRY_COLUMN] = np.shape(self.geometry)
         if len(set(lengths.values())) > 1 or any(len(shape) != 1 for shape in lengths.values()):
             raise LayerError(f"layer {self.name}: columns must be 1-D and of one length, but are {lengths}")
 
 
-def write_layers(
-    path: str | Path,
-    layers: Sequence[Layer],
-    *,
-    crs: str = WGS84,
-    title: str = "",
-    description: str = "",
-    overwrite: bool = False,
-) -> Path:
-    """Write layers to one GeoPackage, whole or not at all.
+def encode(layer: Layer, projection: Projection | None = None) -> pa.Table:
+    """Arrow table of a layer, as it is written: every value checked, fields carrying title and meaning.
 
     Parameters
     ----------
-    path : str or Path
-        File to write, ending in .gpkg. It appears, or replaces an older one, only when everything is in it.
-    layers : sequence of Layer
-        In the order of the file.
-    crs : str
-        Coordinate system of the geometries, ``EPSG:n``.
-    title, description : str
-        What the run is called and where its numbers come from, for the file's metadata.
-    overwrite : bool
-        Whether a file that is there may be replaced.
-
-    Returns
-    -------
-    Path
-        The file.
+    layer : Layer
+        The rows.
+    projection : Projection, optional
+        Coordinate system of the output; needed for layers with geometry, whose lines are split at 180 degrees.
 
     Raises
     ------
-    OutputExistsError
-        If the file is there and `overwrite` is False.
     LayerError
-        If the layers do not fit the column table or the file cannot be written; an older file stays as it was.
-
-    Notes
-    -----
-    Lines that cross the 180 meridian are split there. Column titles, meanings and allowed words go into the tables of
-    OGC GeoPackage's Schema extension, the cautions into its Metadata extension. With the environment variable
-    SOURCE_DATE_EPOCH set, the same layers give the same bytes.
+        If values do not fit the column table, or geometry lies beyond the output's system.
     """
-    path = Path(path)
-    check_target(path, overwrite=overwrite)
-    projection = _output_projection(crs)
-    names = [layer.name for layer in layers]
-    if not names or len(set(names)) != len(names):
-        raise LayerError(f"output {path}: layers {names}; give at least one, and each once")
-    about = {"title": title, "abstract": description, "software": f"shelfmap {__version__}", "cautions": CAUTIONS}
-    with _one_sentence(path), replacing(path) as part, _dated():
-        for layer in layers:
-            _write_layer(part, layer, projection, crs)
-        with closing(sqlite3.connect(part)) as database, database:
-            _add_words(database, layers)
-            _add_metadata(database, about)
-            _count_rows(database, layers)
-    return path
-
-
-def _output_projection(crs: str) -> Projection:
-    authority, _, code = crs.partition(":")
-    if authority.upper() != "EPSG" or not code.isdecimal():
-        raise LayerError(f"output crs {crs!r} is not of the form EPSG:n; GIS programs need a code, such as EPSG:4326")
-    try:
-        projection = Projection(crs)
-    except GridError as error:
-        raise LayerError(f"output {error}") from error
-    if not (projection.crs.is_geographic or projection.crs.is_projected):
-        raise LayerError(
-            f"output crs {crs!r} ({projection.crs.name}) is neither geographic nor projected; "
-            "give one that maps are drawn in, such as EPSG:4326"
-        )
-    return projection
-
-
-@contextmanager
-def _one_sentence(path: Path) -> Iterator[None]:
-    """Turn what GDAL, SQLite and the system say while writing into one error with a cure."""
-    try:
-        yield
-    except LayerError:
-        raise
-    except (RuntimeError, sqlite3.Error, OSError) as error:
-        raise LayerError(
-            f"output {path} cannot be written ({error}); make room on the disk or write to another folder"
-        ) from error
-
-
-@contextmanager
-def _dated() -> Iterator[None]:
-    """Let GDAL write the date of SOURCE_DATE_EPOCH, if the environment has one, for the same bytes every time."""
-    seconds = os.environ.get("SOURCE_DATE_EPOCH")
-    if seconds is None:
-        yield
-        return
-    if not seconds.isdecimal():
-        raise LayerError(f"SOURCE_DATE_EPOCH = {seconds!r} is no whole number of seconds; mend or unset it")
-    date = datetime.fromtimestamp(int(seconds), tz=UTC).strftime("%Y-%m-%dT%H:%M:%S.000Z")
-    before = pyogrio.get_gdal_config_option("OGR_CURRENT_DATE")
-    pyogrio.set_gdal_config_options({"OGR_CURRENT_DATE": date})
-    try:
-        yield
-    finally:
-        pyogrio.set_gdal_config_options({"OGR_CURRENT_DATE": before})
-
-
-def _write_layer(part: Path, layer: Layer, projection: Projection, crs: str) -> None:
     columns = columns_of(layer.name, layer.waves)
     arrays = [_array(layer, column) for column in columns]
     fields = [pa.field(column.name, _ARROW_TYPES[column.dtype], metadata=_field_metadata(column)) for column in columns]
-    geometry_options: dict[str, str] = {}
-    layer_options = {"IDENTIFIER": LAYERS[layer.name].title, "DESCRIPTION": LAYERS[layer.name].description}
+    kind = ""
     if layer.geometry is not None:
+        if projection is None:
+            raise LayerError(f"layer {layer.name}: a coordinate system must be given for its geometry")
         geometry, kind = _drawable(layer, projection)
         arrays.append(pa.array(shapely.to_wkb(geometry, flavor="iso"), pa.binary()))
-        fields.append(pa.field(_GEOMETRY_COLUMN, pa.binary()))
-        geometry_options = {"geometry_name": _GEOMETRY_COLUMN, "geometry_type": kind, "crs": crs}
-        layer_options["GEOMETRY_NAME"] = _GEOMETRY_COLUMN
-    pyogrio.write_arrow(
-        pa.Table.from_arrays(arrays, schema=pa.schema(fields)),
-        part,
-        layer=layer.name,
-        driver="GPKG",
-        layer_metadata={"CAUTIONS": CAUTIONS},
-        layer_options=layer_options,
-        **geometry_options,
-    )
+        fields.append(pa.field(GEOMETRY_COLUMN, pa.binary()))
+    return pa.Table.from_arrays(arrays, schema=pa.schema(fields, metadata={_TYPE_KEY: kind}))
+
+
+def geometry_type(table: pa.Table) -> str:
+    """What the shapes of an encoded layer are, in OGC's words; empty for a table without any."""
+    return str(table.schema.metadata[_TYPE_KEY].decode())
+
+
+def to_table(columns: Mapping[str, NDArray[Any]]) -> pa.Table:
+    """Arrow table of any columns: numbers, text, bytes; None is empty.
+
+    Examples
+    --------
+    >>> to_columns(to_table({"a": np.array([1.5, np.nan]), "b": np.array(["x", None], dtype=object)}))["b"]
+    array(['x', None], dtype=object)
+    """
+    return pa.table({name: pa.array(values) for name, values in columns.items()})
+
+
+def to_columns(*tables: pa.Table) -> dict[str, NDArray[Any]]:
+    """Columns of Arrow tables, one below the other; whole numbers with gaps come as floats with NaN."""
+    table = pa.concat_tables(tables, promote_options="default")  # a column of nothing but gaps takes the others' type
+    return {name: table[name].to_numpy() for name in table.column_names}
+
+
+def pack(tables: Mapping[str, pa.Table]) -> bytes:
+    """Named Arrow tables as bytes: Arrow's streams one after the other."""
+    sink = pa.BufferOutputStream()
+    for name, table in tables.items():
+        named = table.replace_schema_metadata({**(table.schema.metadata or {}), b"name": name})
+        with pa.ipc.new_stream(sink, named.schema) as stream:
+            stream.write_table(named)
+    return bytes(sink.getvalue())
+
+
+def unpack(data: bytes) -> dict[str, pa.Table]:
+    """Named Arrow tables from bytes made by `pack`, each in memory of its own, so that one can outlive the others."""
+    source = io.BytesIO(data)
+    tables = {}
+    while source.tell() < len(data):
+        with pa.ipc.open_stream(pa.PythonFile(source, mode="r")) as stream:
+            table = stream.read_all()
+        tables[table.schema.metadata[b"name"].decode()] = table
+    return tables
 
 
 def _field_metadata(column: Column) -> dict[str, str]:
@@ -264,47 +200,3 @@ def _drawable(layer: Layer, projection: Projection) -> tuple[ObjectArray, str]:
         return geometry, "LineString"
     geometry[single] = shapely.multilinestrings(geometry[single], indices=np.arange(np.count_nonzero(single)))
     return geometry, "MultiLineString"
-
-
-def _add_words(database: sqlite3.Connection, layers: Sequence[Layer]) -> None:
-    """Add the words a text column may hold, each with its meaning; GDAL's Arrow writer cannot."""
-    for layer in layers:
-        for name in (column.name for column in columns_of(layer.name, layer.waves) if column.name in ENUMERATIONS):
-            database.executemany(
-                "INSERT OR IGNORE INTO gpkg_data_column_constraints"
-                " (constraint_name, constraint_type, value, description) VALUES (?, 'enum', ?, ?)",
-                [(name, word, f"{word}: {meaning}") for word, meaning in ENUMERATIONS[name].items()],
-            )
-            database.execute(
-                "UPDATE gpkg_data_columns SET constraint_name = ? WHERE table_name = ? AND column_name = ?",
-                (name, layer.name, name),
-            )
-
-
-def _add_metadata(database: sqlite3.Connection, about: dict[str, str]) -> None:
-    """Add what the whole file is, as JSON (RFC 8259).
-
-    Not through GDAL's own dataset metadata: with those in it, every program that reads the file through GDAL leaves a
-    .aux.xml beside it (measured with GDAL 3.12.4).
-    """
-    cursor = database.execute(
-        "INSERT INTO gpkg_metadata (md_scope, md_standard_uri, mime_type, metadata)"
-        " VALUES ('dataset', 'https://www.rfc-editor.org/rfc/rfc8259', 'application/json', ?)",
-        (json.dumps(about, ensure_ascii=False),),
-    )
-    database.execute(
-        "INSERT INTO gpkg_metadata_reference (reference_scope, timestamp, md_file_id)"
-        " SELECT 'geopackage', max(last_change), ? FROM gpkg_contents",
-        (cursor.lastrowid,),
-    )
-
-
-def _count_rows(database: sqlite3.Connection, layers: Sequence[Layer]) -> None:
-    """Make sure that all rows arrived."""
-    for layer in layers:
-        (count,) = database.execute(f'SELECT count(*) FROM "{layer.name}"').fetchone()
-        wanted = len(next(iter(layer.columns.values())))
-        if count != wanted:
-            raise LayerError(
-                f"layer {layer.name}: {count} of {wanted} rows arrived; make room on the disk and run again"
-            )

@@ -1,14 +1,10 @@
 """The only module that knows the order of the stages; coast sections run over one executor."""
 
+import itertools
 import logging
-import multiprocessing
-import os
-import signal
-import threading
 import warnings
 from collections.abc import Callable, Iterator, Sequence
-from concurrent.futures import BrokenExecutor, Executor, ProcessPoolExecutor
-from contextlib import contextmanager
+from concurrent.futures import Executor
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, Final
@@ -17,19 +13,23 @@ import numpy as np
 import shapely
 from numpy.typing import NDArray
 
+from shelfmap.checkpoint import Checkpoint, digest
 from shelfmap.coast import Coast
-from shelfmap.errors import LayerError, SettingsError, ShelfmapError, ShelfmapWarning
+from shelfmap.errors import LayerError, ShelfmapWarning
 from shelfmap.geodesy import distance_bearing
+from shelfmap.geopackage import GeoPackage, write_layers
 from shelfmap.grid import GridSource, open_grid
-from shelfmap.inputs import make_coast, make_transects, picked_breaks
-from shelfmap.layers import Layer, write_layers
-from shelfmap.profiles import END_REASONS, START_REASONS, Profiles, place_on, step_of
+from shelfmap.inputs import make_coast, picked_breaks
+from shelfmap.layers import Layer, to_columns, unpack
+from shelfmap.laying import Laid, lay, timed
 from shelfmap.provenance import run_layer, status_counts
-from shelfmap.replacement import check_target
-from shelfmap.sections import Section, sample_section, screen_section, stack
+from shelfmap.replacement import check_target, placing
+from shelfmap.sections import Section, pack_drawn_section, pack_section
 from shelfmap.settings import Settings
-from shelfmap.tables import Screened, result_layers, transect_columns
-from shelfmap.transects import NODE_M, Transects
+from shelfmap.stations import station_layers
+from shelfmap.tables import Columns
+from shelfmap.transects import Transects
+from shelfmap.workers import Mapped, mapping
 
 __all__ = ["Progress", "Run", "screen", "write_coast", "write_transects"]
 
@@ -40,18 +40,12 @@ Progress = Callable[[str, int, int], None]
 SECTION_STATIONS: Final = 64
 #: Whole turns by which longitudes of the same place may differ.
 TURNS_DEG: Final = np.array([-360.0, 0.0, 360.0])
-#: Lines to be edited begin this far landward of the shoreline, metres, so that they meet it when they come back.
-SETBACK_M: Final = 10.0
-
-#: A grid with fewer cells than this in `generalise_km` gives bearings that follow the steps of its shoreline.
-FEWEST_COAST_CELLS: Final = 4.0
-
 _LOG = logging.getLogger(__name__)
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Run:
-    """What a run made, and everything it was made from."""
+    """What a run made, and what it was made from; the results are in the file (`shelfmap.read_table`)."""
 
     path: Path
     """The GeoPackage."""
@@ -59,8 +53,8 @@ class Run:
     """What was understood of the grid."""
     coast: Coast
     """The coast that the stations stand on."""
-    screened: Screened
-    """Results of every stage, one row a transect, in SI units."""
+    status: NDArray[np.object_]
+    """(n,) status of each transect."""
     step_m: float
     """Sample spacing along the transects, metres."""
 
@@ -68,10 +62,10 @@ class Run:
         """Counts and totals of the run, ready for JSON."""
         return {
             "path": str(self.path),
-            "transects": len(self.screened.status),
-            "status": status_counts(self.screened.status),
+            "transects": len(self.status),
+            "status": status_counts(self.status),
             "coast_parts": len(self.coast.lines),
-            "coast_km": round(_length_km(self.coast), 1),
+            "coast_km": round(self.coast.length_km, 1),
             "step_km": round(self.step_m / 1e3, 3),
             "positive": f"{self.source.positive} ({self.source.positive_why})",
         }
@@ -81,11 +75,16 @@ def screen(
     settings: Settings,
     *,
     overwrite: bool = False,
+    anew: bool = False,
     workers: int = 1,
     executor: Executor | None = None,
+    scheduler: str | None = None,
     progress: Progress | None = None,
 ) -> Run:
     """Screen a coast: from the grid to a GeoPackage of transects with a resonance index.
+
+    Finished sections of coast are kept beside the output until it is whole, so that a run that was stopped goes on
+    from them when it is started again with the same settings and grid.
 
     Parameters
     ----------
@@ -93,64 +92,53 @@ def screen(
         Everything about the run.
     overwrite : bool
         Whether an older output may be replaced.
+    anew : bool
+        Whether to do everything again, whatever a stopped run has left.
     workers : int
-        Processes over sections of coast; the results are the same for any number. A script that asks for more than
-        one calls `screen` under ``if __name__ == "__main__":``, as always with processes.
+        Processes over the coast and its sections; the results are the same for any number. A script that asks for more
+        than one calls `screen` under ``if __name__ == "__main__":``, as always with processes.
     executor : Executor, optional
-        Runs the sections instead of processes started here.
+        Does the work instead of processes started here.
+    scheduler : str, optional
+        Address of a dask.distributed scheduler whose workers do it instead.
     progress : callable, optional
         Told of the sections done.
 
     Returns
     -------
     Run
-        The file and all that is in it.
+        The file, and what it was made from.
 
     Raises
     ------
     ShelfmapError
         If the grid, the coast, a file named in the settings or the output is not as it must be, or a worker process
-        died; nothing is written then. A single transect that cannot be screened gets a status and never stops the run.
+        died; no output is written then. A single transect that cannot be screened gets a status and never stops the
+        run.
 
     Warns
     -----
     ShelfmapWarning
         If breaks picked by hand lie beyond the depths of their transects, and are not used, or off their lines.
     """
-    _check_output(settings, settings.output.path, overwrite=overwrite)
-    source = open_grid(settings.grid)
-    _LOG.info("values of %s taken as %s: %s", source.path, source.positive, source.positive_why)
-    _warn_of_coarse_cells(source, settings)
-    coast = make_coast(source, settings)
-    _LOG.info("coast: %d stretches, %.0f km, %s", len(coast.lines), _length_km(coast), coast.source)
-    transects = make_transects(source, coast, settings)
-    picks = picked_breaks(settings, transects.transect_id)
-    sections = _sections(source, coast, transects, settings, picks)
-    screened = _screen_sections(sections, workers, executor, progress)
-    _warn_of_picks(sections, screened)
-    run = Run(
-        path=settings.output.path,
-        source=source,
-        coast=coast,
-        screened=screened,
-        step_m=step_of(source, settings.transects),
-    )
-    counts = ", ".join(f"{count} {status}" for status, count in status_counts(screened.status).items())
-    write_layers(
-        settings.output.path,
-        [
-            *result_layers(screened, coast, settings),
-            run_layer(settings, source, coast, run.step_m, screened.status),
-        ],
-        crs=settings.output.crs,
-        title=settings.title,
-        description=f"Screened from {source.path}; {len(transects)} transects: {counts}.",
-        overwrite=overwrite,
-    )
-    return run
+    path = settings.output.path
+    _check_output(settings, path, overwrite=overwrite)
+    with mapping(workers, executor, scheduler) as mapped, Checkpoint.beside(path, anew=anew) as kept:
+        laid = lay(settings, mapped, kept)
+        picks = picked_breaks(settings, laid.transects.transect_id)
+        with placing(kept.folder, path) as part:
+            file = GeoPackage(part, settings.output.crs, path)
+            with timed("sections"):
+                packed = _packed_sections(laid, settings, picks, mapped, kept)
+                columns = _collect(packed, _n_sections(laid.transects), file, progress)
+            _warn_of_picks(picks, columns, laid.step_m)
+            with timed("last layers"):
+                _finish(file, columns, laid, settings)
+            laid.check_unchanged()
+    return Run(path=path, source=laid.source, coast=laid.coast, status=columns["status"], step_m=laid.step_m)
 
 
-def write_coast(settings: Settings, path: Path, *, overwrite: bool = False) -> Coast:
+def write_coast(settings: Settings, path: Path, *, overwrite: bool = False, workers: int = 1) -> Coast:
     """Write the generalised coast as lines, to be edited and given back as `coast.file`.
 
     Parameters
@@ -161,6 +149,8 @@ def write_coast(settings: Settings, path: Path, *, overwrite: bool = False) -> C
         GeoPackage to write.
     overwrite : bool
         Whether an older file may be replaced.
+    workers : int
+        Processes to use.
 
     Raises
     ------
@@ -168,7 +158,8 @@ def write_coast(settings: Settings, path: Path, *, overwrite: bool = False) -> C
         As `screen`.
     """
     _check_output(settings, path, overwrite=overwrite)
-    coast = make_coast(open_grid(settings.grid), settings)
+    with mapping(workers) as mapped:
+        coast = make_coast(open_grid(settings.grid), settings, mapped=mapped)
     layer = Layer(
         name="coast_lines",
         columns={
@@ -184,13 +175,18 @@ def write_coast(settings: Settings, path: Path, *, overwrite: bool = False) -> C
     return coast
 
 
-def write_transects(settings: Settings, path: Path, *, overwrite: bool = False) -> Profiles:
+def write_transects(settings: Settings, path: Path, *, overwrite: bool = False, workers: int = 1) -> int:
     """Write the transects from shore to their ends, to be edited and given back as `transects.file`.
 
     Parameters
     ----------
-    settings, path, overwrite
+    settings, path, overwrite, workers
         As for `write_coast`.
+
+    Returns
+    -------
+    int
+        How many there are.
 
     Raises
     ------
@@ -198,149 +194,134 @@ def write_transects(settings: Settings, path: Path, *, overwrite: bool = False) 
         As `screen`.
     """
     _check_output(settings, path, overwrite=overwrite)
-    source = open_grid(settings.grid)
-    coast = make_coast(source, settings)
-    transects = make_transects(source, coast, settings)
-    profiles = stack([sample_section(section) for section in _sections(source, coast, transects, settings)])
-    layer = Layer(
-        name="transect_lines",
-        columns=transect_columns(transects, profiles),
-        geometry=_lines_to_edit(transects, profiles),
-    )
+    with mapping(workers) as mapped:
+        laid = lay(settings, mapped)
+        packed = mapped(pack_drawn_section, _sections(laid, settings))
+        columns = to_columns(*(unpack(data)["stations"] for data in packed))
+    layer = Layer(name="transect_lines", geometry=shapely.from_wkb(columns.pop("line")), columns=columns)
     write_layers(
-        path, [layer], crs=settings.output.crs, title=settings.title, description=coast.source, overwrite=overwrite
+        path, [layer], crs=settings.output.crs, title=settings.title, description=laid.coast.source, overwrite=overwrite
     )
-    return profiles
+    return len(laid.transects)
 
 
 def _check_output(settings: Settings, path: Path, *, overwrite: bool) -> None:
     """Refuse an output that cannot be written, or that would replace what it is made from."""
-    inputs = {
-        "grid.path": settings.grid.path,
-        "coast.file": settings.coast.file,
-        "transects.file": settings.transects.file,
-        "shelf_break.file": settings.shelf_break.file,
-    }
-    for name, given in inputs.items():
+    inputs = [
+        *(("grid.path", file) for file in settings.grid.paths),
+        ("coast.file", settings.coast.file),
+        ("transects.file", settings.transects.file),
+        ("shelf_break.file", settings.shelf_break.file),
+    ]
+    for name, given in inputs:
         if given is not None and given.exists() and path.exists() and given.samefile(path):
             raise LayerError(f"output {path} is {name} too and would be lost; write to another file")
     check_target(path, overwrite=overwrite)
 
 
-def _length_km(coast: Coast) -> float:
-    return sum(line.length_m for line in coast.lines) / 1e3
+# ---- sections
 
 
-def _sections(
-    source: GridSource,
-    coast: Coast,
-    transects: Transects,
-    settings: Settings,
-    picks: NDArray[np.object_] | None = None,
-) -> list[Section]:
+def _n_sections(transects: Transects) -> int:
+    return -(-len(transects) // SECTION_STATIONS)
+
+
+def _sections(laid: Laid, settings: Settings, picks: NDArray[np.object_] | None = None) -> Iterator[Section]:
     """Cut the transects, and the breaks picked on them, into sections of neighbouring stations."""
-    if picks is None:
-        picks = np.full(len(transects), None, dtype=object)
-    step_m = step_of(source, settings.transects)
-    if settings.transects.step_km is not None and step_m > settings.transects.step_km * 1e3:
-        _LOG.warning(
-            "transects.step_km = %g would take too many samples over %g km; %.3f km is used",
-            settings.transects.step_km,
-            settings.transects.length_km,
-            step_m / 1e3,
-        )
-    return [
-        Section(
-            source=source,
+    islets = _Islets(laid.coast)
+    for start in range(0, len(laid.transects), SECTION_STATIONS):
+        transects = laid.transects.rows(start, start + SECTION_STATIONS)
+        none = np.full(len(transects), None, dtype=object)
+        yield Section(
+            source=laid.source,
             settings=settings,
-            transects=transects.rows(start, start + SECTION_STATIONS),
-            step_m=step_m,
-            islets=_islets_near(coast, transects.rows(start, start + SECTION_STATIONS)),
-            picks=picks[start : start + SECTION_STATIONS],
+            transects=transects,
+            step_m=laid.step_m,
+            islets=islets.near(transects),
+            picks=none if picks is None else picks[start : start + SECTION_STATIONS],
         )
-        for start in range(0, len(transects), SECTION_STATIONS)
-    ]
 
 
-def _islets_near(coast: Coast, transects: Transects) -> NDArray[np.object_]:
-    """Islets that transects may meet: those in the box round them, longitudes a turn away too."""
-    if not len(coast.islets):
-        return coast.islets
-    lon_deg, lat_deg = transects.node_lon_deg, transects.node_lat_deg
-    west, south, east, north = np.nanmin(lon_deg), np.nanmin(lat_deg), np.nanmax(lon_deg), np.nanmax(lat_deg)
-    boxes = shapely.box(west + TURNS_DEG, south, east + TURNS_DEG, north)
-    _, near = shapely.STRtree(coast.islets).query(boxes, predicate="intersects")
-    return np.asarray(coast.islets[np.unique(near)])
+class _Islets:
+    """Islets of a coast, to be found by place."""
+
+    def __init__(self, coast: Coast) -> None:
+        self._islets = coast.islets
+        self._tree = shapely.STRtree(coast.islets)
+
+    def near(self, transects: Transects) -> NDArray[np.object_]:
+        """Those that transects may meet: in the box round them, longitudes a turn away too."""
+        lon_deg, lat_deg = transects.node_lon_deg, transects.node_lat_deg
+        west, south, east, north = np.nanmin(lon_deg), np.nanmin(lat_deg), np.nanmax(lon_deg), np.nanmax(lat_deg)
+        boxes = shapely.box(west + TURNS_DEG, south, east + TURNS_DEG, north)
+        _, near = self._tree.query(boxes, predicate="intersects")
+        return np.asarray(self._islets[np.unique(near)], dtype=object)
 
 
-def _screen_sections(
-    sections: Sequence[Section], workers: int, executor: Executor | None, progress: Progress | None
-) -> Screened:
-    """Screen every section and put the results together in order."""
-    done: list[Screened] = []
-    with _mapping(min(workers, len(sections)), executor) as mapped:
-        for result in mapped(screen_section, sections):
-            done.append(result)
-            if progress is not None:
-                progress("sections", len(done), len(sections))
-    return stack(done)
-
-
-@contextmanager
-def _mapping(workers: int, executor: Executor | None) -> Iterator[Callable[..., Iterator[Screened]]]:
-    """Give the `map` of a run: over the caller's executor, in this process, or over processes started afresh."""
-    if workers < 1:
-        raise SettingsError(f"workers = {workers}: at least 1")
-    try:
-        if executor is not None:
-            yield executor.map
-        elif workers == 1:
-            yield map
+def _packed_sections(
+    laid: Laid, settings: Settings, picks: NDArray[np.object_], mapped: Mapped, kept: Checkpoint
+) -> Iterator[bytes]:
+    """Give the packed rows of every section in order: kept ones as they are, the others screened and kept."""
+    run_key = _run_key(laid, settings)
+    sections = list(_sections(laid, settings, picks))
+    keys = [_section_key(run_key, section) for section in sections]
+    missing = [section for section, key in zip(sections, keys, strict=True) if not kept.has(key)]
+    if len(missing) < len(sections):
+        n_kept = len(sections) - len(missing)
+        _LOG.warning("%d of %d sections were finished by an earlier run and are used", n_kept, len(sections))
+    # the first one here: on a first run it compiles the loops, which processes must not do all at once
+    fresh = itertools.chain(map(pack_section, missing[:1]), mapped(pack_section, missing[1:]))
+    for section, key in zip(sections, keys, strict=True):
+        if kept.has(key):
+            data = kept.load(key) or pack_section(section)  # a kept one may be damaged
         else:
-            # workers leave Ctrl-C to this process, which then ends them
-            with ProcessPoolExecutor(
-                workers,
-                mp_context=multiprocessing.get_context("spawn"),
-                initializer=_obey_parent,
-            ) as pool:
-                yield pool.map
-    except BrokenExecutor as error:
-        raise ShelfmapError(
-            f"a worker process died ({error}), most often for want of memory; run again with fewer workers or a larger "
-            'transects.step_km, and in a script call screen under if __name__ == "__main__"'
-        ) from error
+            data = next(fresh)
+            kept.save(key, data)
+        yield data
 
 
-def _obey_parent() -> None:
-    """In a worker: leave Ctrl-C to the parent, and end when it has ended, however that came about."""
-    signal.signal(signal.SIGINT, signal.SIG_IGN)
-    parent = multiprocessing.parent_process()
-
-    def follow() -> None:
-        if parent is not None:
-            parent.join()
-            os._exit(1)
-
-    threading.Thread(target=follow, daemon=True).start()
+def _run_key(laid: Laid, settings: Settings) -> str:
+    """Hash of all that every section depends on: code, depths, settings."""
+    used = settings.model_dump_json(exclude={"title": True, "output": {"path": True, "crs": True}})
+    return digest(laid.content, used)
 
 
-def _warn_of_coarse_cells(source: GridSource, settings: Settings) -> None:
-    """Say where the grid is too coarse for the scale of the coast asked for."""
-    cells = settings.coast.generalise_m / source.step_m
-    if settings.transects.file is None and cells < FEWEST_COAST_CELLS:
-        _LOG.warning(
-            "coast.generalise_km = %g is %.1f cells of this grid: bearings follow its steps, less so from %.0f on",
-            settings.coast.generalise_km,
-            cells,
-            np.ceil(FEWEST_COAST_CELLS * source.step_m / 1e3),
-        )
+def _section_key(run_key: str, section: Section) -> str:
+    """Hash of all that one section depends on."""
+    transects = section.transects
+    arrays = [getattr(transects, name) for name in transects.__slots__]
+    return digest(run_key, section.step_m, section.islets, section.picks, *arrays)
 
 
-def _warn_of_picks(sections: Sequence[Section], screened: Screened) -> None:
+def _collect(packed: Iterator[bytes], n_sections: int, file: GeoPackage, progress: Progress | None) -> Columns:
+    """Write rows of sections as they come; give the columns of all stations."""
+    stations = []
+    for data in packed:
+        tables = unpack(data)
+        stations.append(tables.pop("stations"))
+        for name, table in tables.items():
+            file.add(name, table)
+        if progress is not None:
+            progress("sections", len(stations), n_sections)
+    return to_columns(*stations)
+
+
+def _finish(file: GeoPackage, columns: Columns, laid: Laid, settings: Settings) -> None:
+    """Write the layers that need all stations, and what the file is."""
+    for layer in station_layers(columns, laid.transects, laid.coast, settings):
+        file.add_layer(layer)
+    file.add_layer(run_layer(settings, laid.source, laid.coast, laid.step_m, columns["status"]))
+    counts = ", ".join(f"{count} {status}" for status, count in status_counts(columns["status"]).items())
+    file.finish(
+        title=settings.title,
+        description=f"Screened from {laid.source.path}; {len(laid.transects)} transects: {counts}.",
+    )
+
+
+def _warn_of_picks(picks: NDArray[np.object_], columns: Columns, step_m: float) -> None:
     """Say which breaks picked by hand could not be used, and which lie off their transects."""
-    picks = np.concatenate([section.picks for section in sections])
-    is_given = np.array([pick is not None for pick in picks], dtype=bool)
-    ids, is_used = screened.transects.transect_id, screened.breaks.is_picked
+    is_given, is_used = ~shapely.is_missing(picks), columns["picked"]
+    ids = columns["transect_id"]
     if (is_given & ~is_used).any():
         warnings.warn(
             f"breaks picked for transect_id {_some(ids[is_given & ~is_used])} lie beyond the depths of these transects "
@@ -348,10 +329,14 @@ def _warn_of_picks(sections: Sequence[Section], screened: Screened) -> None:
             ShelfmapWarning,
             stacklevel=3,
         )
-    lon_deg, lat_deg = place_on(screened.transects, screened.profiles.shore_m + screened.breaks.break_m)
     rows = np.flatnonzero(is_used)
-    off_m, _ = distance_bearing(lon_deg[rows], lat_deg[rows], shapely.get_x(picks[rows]), shapely.get_y(picks[rows]))
-    far = rows[off_m > 2 * screened.profiles.step_m]
+    off_m, _ = distance_bearing(
+        columns["break_lon"][rows],
+        columns["break_lat_deg"][rows],
+        shapely.get_x(picks[rows]),
+        shapely.get_y(picks[rows]),
+    )
+    far = rows[off_m > 2 * step_m]
     if len(far):
         warnings.warn(
             f"breaks picked for transect_id {_some(ids[far])} lie up to {off_m.max() / 1e3:.1f} km off their lines; "
@@ -361,26 +346,5 @@ def _warn_of_picks(sections: Sequence[Section], screened: Screened) -> None:
         )
 
 
-def _some(ids: NDArray[np.int64]) -> str:
+def _some(ids: Sequence[Any] | NDArray[np.int64]) -> str:
     return ", ".join(map(str, ids[:10])) + ", ..." * (len(ids) > 10)
-
-
-def _lines_to_edit(transects: Transects, profiles: Profiles) -> NDArray[np.object_]:
-    """Line of each transect that comes back as the same transect: from just landward of its shore to past its end.
-
-    What a profile ends at (land, missing depth, the grid's edge) lies on the line too, else it would be forgotten;
-    one that ends at the search length ends there.
-    """
-    at_shore = profiles.start_reason == START_REASONS.index("shore")
-    start_m = np.nan_to_num(profiles.shore_m) - SETBACK_M * at_shore
-    searched = profiles.end_reason == END_REASONS.index("search_length")
-    past = np.where(searched, -0.9, 0.5)  # steps past the last sample, less one
-    stop_m = np.nan_to_num(profiles.shore_m) + (profiles.n_samples + past) * profiles.step_m
-    start_m = np.maximum(start_m, np.nanmin(transects.node_m, axis=1))
-    stop_m = np.minimum(stop_m, np.nanmax(transects.node_m, axis=1))
-    lines = []
-    for row, (start, stop) in enumerate(zip(start_m, stop_m, strict=True)):
-        at_m = np.linspace(start, stop, int(np.ceil((stop - start) / NODE_M)) + 1)
-        lon_deg, lat_deg = place_on(transects.rows(row, row + 1), at_m[None, :])
-        lines.append(shapely.linestrings(lon_deg[0], lat_deg[0]))
-    return np.array(lines, dtype=object)

@@ -1,8 +1,10 @@
 """From a grid and transects to depth profiles, each from the shore seaward."""
 
+import math
 import warnings
 from collections.abc import Iterator
 from dataclasses import dataclass
+from itertools import pairwise
 from typing import Final
 
 import numpy as np
@@ -15,9 +17,19 @@ from shelfmap.basins import SHORE_HAIR_M
 from shelfmap.geodesy import distance_bearing
 from shelfmap.grid import GridSource
 from shelfmap.settings import TransectSettings
-from shelfmap.transects import Transects
+from shelfmap.sheets import Sheet, boxes_meet
+from shelfmap.transects import NODE_M, Transects
 
-__all__ = ["END_REASONS", "START_REASONS", "Profiles", "distance_along", "place_on", "sample_profiles", "step_of"]
+__all__ = [
+    "END_REASONS",
+    "START_REASONS",
+    "Profiles",
+    "distance_along",
+    "lines_along",
+    "place_on",
+    "sample_profiles",
+    "step_of",
+]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -35,8 +47,13 @@ SHORT_GAP_SHARE: Final = 0.02
 LEAST_SPIKE_M: Final = 10.0
 #: A profile has at most this many samples; a finer grid is sampled more coarsely, and the step says so.
 MOST_SAMPLES: Final = 6000
-#: Windows of the grid have at most this many cells, unless one transect alone needs more: 160 MB of depths.
+#: Sheets finer than this share of the frame's cells, one part in so many, do not make samples closer.
+FINEST_SHARE: Final = 4.0
+#: Windows of all sheets of the grid, for as many transects as fit, have at most this many cells together: 160 MB.
 MOST_CELLS: Final = 40_000_000
+
+# Which ends of a box (first and last row, first and last column) are the least of their kind.
+_IS_LEAST: Final = np.array([True, False, True, False])
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -82,8 +99,13 @@ class Profiles:
 
 
 def step_of(source: GridSource, settings: TransectSettings) -> float:
-    """Sample spacing of a run, metres: as set, else the grid's own step, and never over `MOST_SAMPLES` samples."""
-    wanted_m = source.step_m if settings.step_km is None else settings.step_km * 1e3
+    """Sample spacing of a run, metres: as set, else the grid's own step, and never over `MOST_SAMPLES` samples.
+
+    Of several sheets the finest counts, but down to a quarter of the frame's step only: one spacing serves the whole
+    run, and a survey of one harbour may cost a run round a continent four times the samples, not a hundred times.
+    """
+    finest_m = min(sheet.step_m for sheet in source.sheets)
+    wanted_m = settings.step_km * 1e3 if settings.step_km else max(finest_m, source.step_m / FINEST_SHARE)
     return max(wanted_m, settings.length_m / MOST_SAMPLES)
 
 
@@ -121,12 +143,11 @@ def sample_profiles(
     shore_m, land_m = np.full(n, np.nan), np.full(n, np.nan)
     start, end = np.zeros(n, dtype=np.int64), np.full(n, -1, dtype=np.int64)
     n_samples, counts = np.zeros(n, dtype=np.int64), np.zeros((n, 3), dtype=np.int64)
-    for first, stop, window in _windows(source, col, row):
-        grid = source.read(*window)
+    for first, stop in _groups(source, _boxes(source, col, row)):
         rows = slice(first, stop)
+        depth, layout, node = _read_stack(source, transects.node_m[rows], col[rows], row[rows])
         tracing.trace_rows(
-            grid.depth_m, grid.row0, grid.col0, grid.wrap_cols,
-            transects.node_m[rows], row[rows], col[rows], n_nodes[rows], step_m, seek_row_m[rows],
+            depth, layout, node, n_nodes[rows], step_m, seek_row_m[rows],
             SHORT_GAP_SAMPLES, SHORT_GAP_SHARE, LEAST_SPIKE_M, SHORE_HAIR_M,
             depth_m[rows], filled[rows], shore_m[rows], start[rows], n_samples[rows], end[rows], land_m[rows],
             counts[rows],
@@ -176,6 +197,35 @@ def place_on(transects: Transects, at_m: FloatArray) -> tuple[FloatArray, FloatA
     return lon_deg, lat_deg
 
 
+def lines_along(transects: Transects, start_m: FloatArray, stop_m: FloatArray) -> NDArray[np.object_]:
+    """Lines on transects between two distances from their stations, with nodes `NODE_M` apart at most.
+
+    Parameters
+    ----------
+    transects : Transects
+        The lines, n of them.
+    start_m, stop_m : (n,) array of float
+        Distances from the station, metres.
+
+    Returns
+    -------
+    (n,) array of shapely lines
+        Longitude and latitude, degrees, longitudes without jumps.
+    """
+    n_nodes = np.maximum(np.ceil((stop_m - start_m) / NODE_M).astype(int), 1) + 1
+    lon_deg, lat_deg = [], []
+    for k in range(len(transects)):
+        known = np.isfinite(transects.node_m[k])
+        node_m = transects.node_m[k, known]
+        at_m = np.linspace(start_m[k], stop_m[k], n_nodes[k])
+        lon_deg.append(np.interp(at_m, node_m, transects.node_lon_deg[k, known]))
+        lat_deg.append(np.interp(at_m, node_m, transects.node_lat_deg[k, known]))
+    lines: NDArray[np.object_] = shapely.linestrings(
+        np.concatenate(lon_deg), np.concatenate(lat_deg), indices=np.repeat(np.arange(len(transects)), n_nodes)
+    )
+    return lines
+
+
 def distance_along(transects: Transects, row: int, lon_deg: float, lat_deg: float) -> float:
     """Distance from the station to where a point near a transect projects on it.
 
@@ -205,47 +255,113 @@ def distance_along(transects: Transects, row: int, lon_deg: float, lat_deg: floa
 
 
 def _node_index(source: GridSource, transects: Transects) -> tuple[FloatArray, FloatArray]:
-    """Grid index of every node, columns without jumps along a transect where the grid goes round the globe."""
-    col, row = source.index_of(transects.node_lon_deg, transects.node_lat_deg)
-    if source.wraps:
-        col = col[:, :1] + (transects.node_lon_deg - transects.node_lon_deg[:, :1]) / source.dx
+    """(n, s, k) index of every node on every sheet, without jumps along a transect; NaN on sheets it does not meet."""
+    n, k = transects.node_m.shape
+    col, row = np.full((2, n, len(source.sheets), k), np.nan)
+    for number, sheet in enumerate(source.sheets):
+        near = np.ones(n, dtype=bool) if sheet is source.sheets[-1] else _near(sheet, transects)
+        if not near.any():
+            continue
+        lon_deg, lat_deg = transects.node_lon_deg[near], transects.node_lat_deg[near]
+        col[near, number], row[near, number] = sheet.index_of(lon_deg, lat_deg)
+        if sheet.wraps:
+            col[near, number] = col[near, number, :1] + (lon_deg - lon_deg[:, :1]) / sheet.dx
+        elif sheet.is_geographic:
+            turns = np.nan_to_num(np.round(np.diff(col[near, number]) * (sheet.dx / 360.0)))
+            col[near, number, 1:] -= np.cumsum(turns, axis=1) * (360.0 / sheet.dx)
     # far from where a projection holds it gives no finite place
     off_map = ~(np.isfinite(col) & np.isfinite(row))
     return np.where(off_map, np.nan, col), np.where(off_map, np.nan, row)
 
 
-def _windows(
-    source: GridSource, col: FloatArray, row: FloatArray
-) -> Iterator[tuple[int, int, tuple[int, int, int, int]]]:
-    """Cut transects into runs of rows whose windows of the grid (row0, row1, col0, col1) are small enough to read."""
+def _near(sheet: Sheet, transects: Transects) -> BoolArray:
+    """Which transects have a box that meets a sheet's."""
+    lon_deg, lat_deg = transects.node_lon_deg, transects.node_lat_deg
+    boxes = np.stack(
+        [np.nanmin(lon_deg, axis=1), np.nanmin(lat_deg, axis=1), np.nanmax(lon_deg, axis=1), np.nanmax(lat_deg, axis=1)]
+    )
+    sheet_box = sheet.box_deg
+    return np.array([boxes_meet((west, south, east, north), sheet_box) for west, south, east, north in boxes.T])
+
+
+def _boxes(source: GridSource, col: FloatArray, row: FloatArray) -> FloatArray:
+    """(n, s, 4) first and last row, first and last column that each transect needs of each sheet; NaN for none.
+
+    With a cell to spare, and clipped to the sheet; a sheet that a transect passes by is not needed.
+    """
     with warnings.catch_warnings():
         warnings.simplefilter("ignore", RuntimeWarning)  # a transect off the map has no least and no greatest index
-        boxes = np.stack(
-            [np.nanmin(row, axis=1), np.nanmax(row, axis=1), np.nanmin(col, axis=1), np.nanmax(col, axis=1)], axis=1
-        )
+        ends = [np.nanmin(row, axis=2), np.nanmax(row, axis=2), np.nanmin(col, axis=2), np.nanmax(col, axis=2)]
+    box = np.floor(np.stack(ends, axis=2)) + np.array([-1, 3, -1, 3])
+    for number, sheet in enumerate(source.sheets):
+        of_sheet = box[:, number]
+        beside = (of_sheet[:, 0] >= sheet.n_rows) | (of_sheet[:, 1] <= 0)
+        if not sheet.wraps:
+            beside |= (of_sheet[:, 2] >= sheet.n_cols) | (of_sheet[:, 3] <= 0)
+            of_sheet[:, 2:] = np.clip(of_sheet[:, 2:], 0, sheet.n_cols)
+        of_sheet[:, :2] = np.clip(of_sheet[:, :2], 0, sheet.n_rows)
+        of_sheet[beside] = np.nan
+    return np.asarray(box)
+
+
+def _groups(source: GridSource, boxes: FloatArray) -> Iterator[tuple[int, int]]:
+    """Cut transects into runs of rows whose windows of all sheets together are small enough to read."""
     first, box = 0, boxes[0]
     for k in range(1, len(boxes)):
-        wider = _joined(box, boxes[k])
-        if (wider[1] - wider[0]) * (wider[3] - wider[2]) > MOST_CELLS:
-            yield first, k, _window(source, box)
+        wider = np.where(_IS_LEAST, np.fmin(box, boxes[k]), np.fmax(box, boxes[k]))
+        # far apart, as on two islands, they are cheaper to read one by one
+        if _n_cells(source, wider) > min(MOST_CELLS, _n_cells(source, box) + _n_cells(source, boxes[k])):
+            yield first, k
             first, box = k, boxes[k]
         else:
             box = wider
-    yield first, len(boxes), _window(source, box)
+    yield first, len(boxes)
 
 
-def _joined(box: FloatArray, other: FloatArray) -> FloatArray:
-    """Least and greatest row, least and greatest column of two boxes of indices."""
-    least, greatest = np.fmin(box, other), np.fmax(box, other)
-    return np.array([least[0], greatest[1], least[2], greatest[3]])
+def _n_cells(source: GridSource, box: FloatArray) -> float:
+    """Cells in a box of each sheet, all sheets together."""
+    widest = np.array([sheet.n_cols for sheet in source.sheets])
+    return float(np.nansum((box[:, 1] - box[:, 0]) * np.minimum(box[:, 3] - box[:, 2], widest)))
 
 
-def _window(source: GridSource, box: FloatArray) -> tuple[int, int, int, int]:
-    """Window of the grid that holds a box of indices, with a cell to spare, and two rows and columns at least."""
-    row0, row1, col0, col1 = np.clip(np.nan_to_num(box), -1e9, 1e9).astype(int) + np.array([-1, 3, -1, 3])
-    if not source.wraps:
-        col0, col1 = min(max(col0, 0), source.n_cols - 2), max(min(col1, source.n_cols), 2)
-    return min(max(row0, 0), source.n_rows - 2), max(min(row1, source.n_rows), 2), col0, col1
+def _read_stack(
+    source: GridSource, node_m: FloatArray, col: FloatArray, row: FloatArray
+) -> tuple[NDArray[np.float32], IntArray, FloatArray]:
+    """Windows of the sheets that a group of transects needs, and nodes on them, as the compiled loops take them.
+
+    A transect whose windows alone are too large is read in runs of its nodes, with windows for each: along a slanting
+    line these are as many times smaller as there are runs. See `tracing.Track`.
+    """
+    n_legs = node_m.shape[1] - 1
+    n_runs = max(1, min(math.ceil(_n_cells(source, _joined(_boxes(source, col, row))) / MOST_CELLS), n_legs))
+    edges = np.linspace(0, n_legs, n_runs + 1).astype(int).tolist()
+    runs = [slice(begin, end + 1) for begin, end in pairwise(edges)]
+    boxes = [_joined(_boxes(source, col[:, :, run], row[:, :, run])) for run in runs]
+    grids, nodes = [], [node_m]
+    for number, sheet in enumerate(source.sheets):
+        for run, box in zip(runs, boxes, strict=True):
+            if np.isfinite(box[number]).all():
+                grids.append(sheet.read(*box[number].astype(int).tolist()))
+                for index in (row, col):
+                    nodes.append(np.full(node_m.shape, np.nan))
+                    nodes[-1][:, run] = index[:, number, run]
+    if not grids:  # all of them off the grid: any window tells
+        grids, nodes = [source.sheets[-1].read(0, 2, 0, 2)], [node_m, row[:, -1], col[:, -1]]
+    begins = np.cumsum([0] + [grid.depth_m.size for grid in grids])
+    layout = [
+        (begin, *grid.depth_m.shape, grid.row0, grid.col0, grid.wrap_cols)
+        for begin, grid in zip(begins, grids, strict=False)
+    ]
+    depth = grids[0].depth_m.ravel() if len(grids) == 1 else np.concatenate([grid.depth_m.ravel() for grid in grids])
+    depth.setflags(write=False)  # one type for the loops, so that they are compiled once
+    return depth, np.array(layout, dtype=np.int64), np.stack(nodes, axis=1)
+
+
+def _joined(boxes: FloatArray) -> FloatArray:
+    """(s, 4) least and greatest row, least and greatest column of the boxes of n transects on each sheet."""
+    least: FloatArray = np.fmin.reduce(boxes)
+    greatest: FloatArray = np.fmax.reduce(boxes)
+    return np.where(_IS_LEAST, least, greatest)
 
 
 def _ends_at_islet(transects: Transects, end: IntArray, land_m: FloatArray, islets: NDArray[np.object_]) -> BoolArray:

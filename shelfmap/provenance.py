@@ -55,10 +55,8 @@ def run_layer(
     topics: dict[str, Mapping[str, str | None]] = {
         "caution": {"cautions": CAUTIONS},
         "setting": dict(_flat(settings.model_dump(mode="json"))),
-        "source": {
-            "grid": source.path,
-            "grid values": f"positive {source.positive}: {source.positive_why}",
-            "grid coordinate system": f"{source.projection.name} ({source.crs_why})",
+        "source": _grid_rows(source)
+        | {
             "sample spacing [km]": f"{step_m / 1e3:.3f}",
             "coast": coast.source,
         },
@@ -69,6 +67,20 @@ def run_layer(
     rows = [(topic, name, value) for topic, values in topics.items() for name, value in values.items()]
     topic, name, value = (np.array(column, dtype=object) for column in zip(*rows, strict=True))
     return Layer(name="run", columns={"topic": topic, "name": name, "value": value})
+
+
+def _grid_rows(source: GridSource) -> dict[str, str]:
+    """What was understood of each file of the grid, in order of priority."""
+    rows: dict[str, str] = {}
+    for sheet in source.sheets:
+        for placed in sheet.files:
+            label = "grid" if len(source.files) == 1 else f"grid {len(rows) // 3 + 1}"
+            rows |= {
+                label: placed.file.path,
+                f"{label} values": f"positive {placed.positive}: {placed.positive_why}",
+                f"{label} coordinate system": f"{sheet.projection.name} ({placed.crs_why})",
+            }
+    return rows
 
 
 def _flat(tree: dict[str, Any], stem: str = "") -> Iterator[tuple[str, str | None]]:

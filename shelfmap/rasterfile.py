@@ -5,14 +5,17 @@ from south to north, columns from west to east, scaled, and NaN where missing.
 """
 
 import math
+import os
 import re
+import threading
 import warnings
-from collections.abc import Iterator, Mapping
+from collections import OrderedDict
+from collections.abc import Iterable, Iterator, Mapping
 from contextlib import contextmanager
 from dataclasses import dataclass
 from functools import lru_cache
 from pathlib import Path
-from typing import Any, Final
+from typing import Any, Final, NamedTuple
 
 import numpy as np
 import rasterio
@@ -26,13 +29,19 @@ from shelfmap.geodesy import WGS84, Projection
 from shelfmap.localfiles import CLOSED, archive_of, local_file, why_refused
 from shelfmap.settings import GridSettings
 
-__all__ = ["Indices", "RasterFile", "RasterHeader", "disk_file", "projection_of", "read_header"]
+__all__ = ["Indices", "RasterFile", "RasterHeader", "disk_file", "files_behind", "projection_of", "read_header"]
 
 #: Half-open window: row0, row1, col0, col1.
 Indices = tuple[int, int, int, int]
 
 # Blocks the library keeps: enough for one row of tiles round the globe at 15 arc-seconds.
-_CACHE_MB: Final = 256
+_CACHE_BYTES: Final = 256 * 2**20
+
+#: Rasters kept open: systems allow a process a few hundred files.
+_MOST_HANDLES: Final = 64
+_HANDLES: Final = threading.local()
+#: Types whose every value a float32 holds exactly.
+_EXACT_IN_SINGLE: Final = ("int8", "uint8", "int16", "uint16", "float16", "float32")
 
 #: A compressed block is unpacked whole, however little of it is asked for: none may be larger, bytes.
 _MOST_BLOCK_BYTES: Final = 2**30
@@ -89,24 +98,44 @@ class RasterFile:
                 raise GridError(f"{self.path}: the file has changed since it was opened first; start again")
             yield dataset
 
-    def values(self, dataset: Any, window: Indices) -> NDArray[np.float64]:
-        """Values of a window that lies in the file, given in rows from the south and columns from the west."""
+    def values(self, dataset: Any, window: Indices) -> NDArray[np.floating[Any]]:
+        """Values of a window that lies in the file, given in rows from the south and columns from the west.
+
+        In single precision where that holds them exactly, else in double precision.
+
+        Raises
+        ------
+        GridError
+            If the file is damaged or shorter than its header says.
+        """
         row0, row1, col0, col1 = window
         row_off = self.n_rows - row1 if self.flip_rows else row0
         col_off = self.n_cols - col1 if self.flip_cols else col0
         stored_window = Window(col_off, row_off, col1 - col0, row1 - row0)
-        stored = dataset.read(self.band, window=stored_window)
-        missing = ~np.isfinite(stored)
-        if self.nodata is not None:
-            # a missing value such as -9999.9 is compared as the stored type rounds it
-            floating = np.issubdtype(stored.dtype, np.floating)
-            with np.errstate(over="ignore"):
-                missing |= stored == (stored.dtype.type(self.nodata) if floating else self.nodata)
-        if MaskFlags.per_dataset in dataset.mask_flag_enums[self.band - 1]:
-            missing |= dataset.read_masks(self.band, window=stored_window) == 0
-        value = self.scale * stored.astype(np.float64) + self.offset
+        with _named(self.path):
+            stored = dataset.read(self.band, window=stored_window)
+            missing = self._missing(stored)
+            if MaskFlags.per_dataset in dataset.mask_flag_enums[self.band - 1]:
+                missing |= dataset.read_masks(self.band, window=stored_window) == 0
+        value = stored.astype(np.float32 if stored.dtype in _EXACT_IN_SINGLE else np.float64)
+        if (self.scale, self.offset) != (1.0, 0.0):
+            value = self.scale * value.astype(np.float64) + self.offset
         value[missing] = np.nan
         return np.asarray(value[:: -1 if self.flip_rows else 1, :: -1 if self.flip_cols else 1])
+
+    def _missing(self, stored: NDArray[Any]) -> NDArray[np.bool_]:
+        """Where stored values mean missing."""
+        is_float = np.issubdtype(stored.dtype, np.floating)
+        missing = ~np.isfinite(stored) if is_float else np.zeros(stored.shape, dtype=bool)
+        if self.nodata is None:
+            return missing
+        nodata: Any = self.nodata
+        if is_float:  # a missing value such as -9999.9 is compared as the stored type rounds it
+            with np.errstate(over="ignore"):
+                nodata = stored.dtype.type(nodata)
+        elif np.isfinite(nodata) and nodata == int(nodata):
+            nodata = int(nodata)  # compared as it stands, without turning all into floats
+        return np.asarray(missing | (stored == nodata))
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -123,6 +152,8 @@ class RasterHeader:
         Centre of the south-west cell, grid units.
     dx, dy : float
         Cell sides, grid units, > 0.
+    y_begin : float
+        Outer edge of the row that the file begins with, grid units.
     tags : mapping of str
         Every text of the metadata, by label.
     vertical : mapping of str
@@ -136,12 +167,13 @@ class RasterHeader:
     y0: float
     dx: float
     dy: float
+    y_begin: float
     tags: Mapping[str, str]
     vertical: Mapping[str, str]
 
 
-def read_header(settings: GridSettings) -> RasterHeader:
-    """Read and check the header of a raster.
+def read_header(path: Path, settings: GridSettings) -> RasterHeader:
+    """Read and check the header of one raster; its path in the settings is not used.
 
     Raises
     ------
@@ -149,7 +181,7 @@ def read_header(settings: GridSettings) -> RasterHeader:
         If the file is missing, damaged or on a network, has not the band or variable asked for, is no regular
         north-up grid of real numbers, or has no usable coordinate system.
     """
-    name = _with_variable(_local_name(Path(settings.path)), settings.variable)
+    name = _with_variable(_local_name(path), settings.variable)
     band = settings.band
     with _opened(name) as (dataset, is_georeferenced):
         _check_layout(dataset, band, is_georeferenced, name)
@@ -177,6 +209,7 @@ def read_header(settings: GridSettings) -> RasterHeader:
         y0=transform.f + transform.e * (0.5 if transform.e > 0 else height - 0.5),
         dx=abs(transform.a),
         dy=abs(transform.e),
+        y_begin=transform.f,
         tags=tags | vertical,
         vertical=vertical,
     )
@@ -191,14 +224,64 @@ def projection_of(crs: str) -> Projection:
 @contextmanager
 def _opened(name: str) -> Iterator[tuple[Any, bool]]:
     """Open a raster without a network; also tell whether the file places its cells at all."""
+    with _named(name), rasterio.Env(**CLOSED, GDAL_CACHEMAX=_CACHE_BYTES):
+        yield _handle(name)
+
+
+def _handle(name: str) -> tuple[Any, bool]:
+    """Open raster, kept open for the next windows, so that blocks unpacked for one serve the others.
+
+    One for each thread and process, opened anew once any file it is read from has changed or gone.
+    """
+    handles: OrderedDict[tuple[str, int], _Handle] = _HANDLES.__dict__.setdefault("open", OrderedDict())
+    key = (name, os.getpid())
+    if key not in handles or handles[key].stamps != _stamps(handles[key].files):
+        with warnings.catch_warnings(record=True) as caught:
+            warnings.simplefilter("always")
+            dataset = rasterio.open(name)
+        misplaced = any(issubclass(warning.category, NotGeoreferencedWarning) for warning in caught)
+        is_georeferenced = not (misplaced or dataset.gcps[0] or dataset.rpcs)
+        files = _disk_files(dataset.files or [name])
+        handles[key] = _Handle(dataset, is_georeferenced, files, _stamps(files))
+        while len(handles) > _MOST_HANDLES:
+            handles.popitem(last=False)  # closed once nobody reads from it
+    handles.move_to_end(key)
+    return handles[key].dataset, handles[key].is_georeferenced
+
+
+class _Handle(NamedTuple):
+    """A raster that is kept open, and the state of its files then."""
+
+    dataset: Any
+    is_georeferenced: bool
+    files: tuple[Path, ...]
+    stamps: list[tuple[int, ...]]
+
+
+def _stamps(files: Iterable[Path]) -> list[tuple[int, ...]]:
+    """Identity, size and time of change of files; nothing for one that has gone."""
+    stamps: list[tuple[int, ...]] = []
+    for file in files:
+        try:
+            stat = file.stat()
+            stamps.append((stat.st_ino, stat.st_size, stat.st_mtime_ns))
+        except OSError:
+            stamps.append(())
+    return stamps
+
+
+def _disk_files(names: Iterable[str]) -> tuple[Path, ...]:
+    """Local files, archives among them, behind names of GDAL's."""
+    paths = [Path(name) for name in names]
+    found = (path if (archive := archive_of(path)) is None else archive[1] for path in paths)
+    return tuple(sorted({path for path in found if path.is_file()}))
+
+
+@contextmanager
+def _named(name: str) -> Iterator[None]:
+    """Turn an error of the library into ours, with the name of the file: several may be open."""
     try:
-        with rasterio.Env(**CLOSED, GDAL_CACHEMAX=_CACHE_MB):
-            with warnings.catch_warnings(record=True) as caught:
-                warnings.simplefilter("always")
-                dataset = rasterio.open(name)
-            with dataset:
-                misplaced = any(issubclass(warning.category, NotGeoreferencedWarning) for warning in caught)
-                yield dataset, not (misplaced or dataset.gcps[0] or dataset.rpcs)
+        yield
     except RasterioError as error:
         reason = str(error.__cause__ or error).splitlines()[0][:160]
         raise GridError(
@@ -221,6 +304,18 @@ def disk_file(path: Path) -> Path:
     if file is None:
         raise GridError(f"{path.as_posix()}: {why}")
     return file
+
+
+def files_behind(name: str) -> tuple[Path, ...]:
+    """Every local file that a raster is read from: itself, those it refers to, or the archive that holds it.
+
+    Raises
+    ------
+    GridError
+        If it cannot be opened.
+    """
+    with _opened(name) as (dataset, _):
+        return _disk_files(dataset.files or [name])
 
 
 def _local_name(path: Path) -> str:

@@ -1,23 +1,24 @@
 """A file written beside its target and put in its place only when whole."""
 
 import os
-import shutil
 import sqlite3
-import tempfile
 from collections.abc import Iterator
-from contextlib import closing, contextmanager
+from contextlib import closing, contextmanager, suppress
 from pathlib import Path
-from typing import Final
+from typing import IO, Final
 
 from shelfmap.errors import LayerError, OutputExistsError
 
-__all__ = ["check_target", "replacing"]
+__all__ = ["check_target", "placing", "replacing", "unfinished"]
 
 #: How long another program may hold the old file before it counts as in use, seconds.
 _PATIENCE_S: Final = 0.5
 
 #: What SQLite leaves beside a file while it is open or after a crash.
 _COMPANIONS: Final = ("-journal", "-wal", "-shm")
+
+#: Held, by the system's means, by the run that works in a folder.
+_LOCK: Final = "lock"
 
 
 def check_target(path: str | Path, *, overwrite: bool) -> None:
@@ -28,7 +29,8 @@ def check_target(path: str | Path, *, overwrite: bool) -> None:
     OutputExistsError
         If the file is there and may not be overwritten.
     LayerError
-        If the name does not end in .gpkg, names a folder, or the file or its folder cannot be written to.
+        If the name does not end in .gpkg, names a folder, the file or its folder cannot be written to, or another
+        program holds the file.
     """
     path = Path(path)
     folder = _real(path).parent
@@ -46,16 +48,76 @@ def check_target(path: str | Path, *, overwrite: bool) -> None:
         raise OutputExistsError(f"output {path} exists already; allow it to be overwritten or give another name")
     if path.exists() and not os.access(path, os.W_OK):
         raise LayerError(f"output {path} is read-only; open it for writing or give another name")
+    if path.exists():
+        _refuse_if_held(_real(path))
 
 
 @contextmanager
-def replacing(path: str | Path) -> Iterator[Path]:
-    """Name to write to beside `path`, moved onto it at the end if nothing went wrong.
+def unfinished(path: str | Path) -> Iterator[Path]:
+    """Folder beside `path` for what is not whole yet, held by this run alone until the end.
 
-    The part stands in a folder of its own, made afresh, so that no other file is touched and two runs that write the
-    same output do not meet: the last to end wins. On any failure it is removed and the old file stays as it was. The
-    old file is replaced only while no other program holds it: replacing a SQLite file that is open elsewhere in
-    write-ahead mode can destroy it.
+    It stays only if something was kept in it. A run that was killed leaves it behind; the next one takes it over.
+
+    Raises
+    ------
+    LayerError
+        If another run holds it, or it cannot be made.
+    """
+    target = _real(Path(path))
+    folder = target.with_name(f".{target.name}.unfinished")
+    try:
+        lock = _lock(folder, target)
+    except LayerError:
+        raise
+    except OSError as error:
+        raise LayerError(
+            f"output {target}: {folder.name} cannot be made beside it ({error.strerror}); make room, or write to "
+            "another folder"
+        ) from error
+    try:
+        yield folder
+    finally:
+        (folder / _LOCK).unlink(missing_ok=True)
+        with suppress(OSError):  # something is kept in it
+            folder.rmdir()
+        lock.close()
+
+
+def _lock(folder: Path, target: Path) -> IO[str]:
+    """Make the folder and hold its lock, which the system lets go when this process ends, however that comes about."""
+    while True:
+        folder.mkdir(exist_ok=True)
+        lock = (folder / _LOCK).open("w", encoding="utf-8")
+        if not _is_ours(lock):
+            lock.close()
+            raise LayerError(f"output {target}: another run is making it right now; wait for that, or use another name")
+        with suppress(FileNotFoundError):
+            if (folder / _LOCK).stat().st_ino == os.fstat(lock.fileno()).st_ino:
+                return lock
+        lock.close()  # the run that held it has just ended and removed it
+
+
+def _is_ours(lock: IO[str]) -> bool:
+    """Whether the lock could be had; where the system knows no locks, it counts as ours."""
+    try:
+        import fcntl  # noqa: PLC0415 - not on every system
+    except ImportError:
+        return True
+    try:
+        fcntl.flock(lock, fcntl.LOCK_EX | fcntl.LOCK_NB)
+    except BlockingIOError:
+        return False
+    except OSError:
+        return True  # a network file system without locks
+    return True
+
+
+@contextmanager
+def placing(folder: Path, path: str | Path) -> Iterator[Path]:
+    """Name to write to in `folder`, moved onto `path` at the end if nothing went wrong.
+
+    On any failure the part is removed and the old file stays as it was. The old file is replaced only while no other
+    program holds it: replacing a SQLite file that is open elsewhere in write-ahead mode can destroy it.
 
     Raises
     ------
@@ -64,14 +126,33 @@ def replacing(path: str | Path) -> Iterator[Path]:
         target that is not there.
     """
     target = _real(Path(path))
-    folder = Path(tempfile.mkdtemp(prefix=f".{target.name}.", suffix=".part", dir=target.parent))
     part = folder / target.name
+    _remove(part)  # of a run that was killed
     try:
         yield part
+        _to_disk(part)
         _clear_companions(target)
         _move(part, target)
     finally:
-        shutil.rmtree(folder, ignore_errors=True)
+        _remove(part)
+
+
+@contextmanager
+def replacing(path: str | Path) -> Iterator[Path]:
+    """Name to write to beside `path`, moved onto it if nothing went wrong; see `unfinished` and `placing`."""
+    with unfinished(path) as folder, placing(folder, path) as part:
+        yield part
+
+
+def _remove(part: Path) -> None:
+    for suffix in ("", *_COMPANIONS):
+        part.with_name(part.name + suffix).unlink(missing_ok=True)
+
+
+def _to_disk(part: Path) -> None:
+    """Wait until the system has written a file, so that a power cut after the move finds it whole."""
+    with part.open("rb") as stream:
+        os.fsync(stream.fileno())
 
 
 def _real(path: Path) -> Path:

@@ -1,8 +1,7 @@
-"""One section of coast: its work, and how the results of sections are put together."""
+"""One section of coast: its work, from transects to packed rows of the layers."""
 
-from collections.abc import Sequence
-from dataclasses import dataclass, fields, is_dataclass, replace
-from typing import Any, Final, TypeVar
+from dataclasses import dataclass, fields, replace
+from typing import Final
 
 import numpy as np
 import shapely
@@ -11,7 +10,8 @@ from numpy.typing import NDArray
 from shelfmap.assess import statuses, usable
 from shelfmap.grid import GridSource
 from shelfmap.index import ResonanceIndex, resonance_index
-from shelfmap.profiles import Profiles, distance_along, sample_profiles
+from shelfmap.layers import encode, pack, to_table
+from shelfmap.profiles import END_REASONS, START_REASONS, Profiles, distance_along, lines_along, sample_profiles
 from shelfmap.response import (
     DepthError,
     Friction,
@@ -24,10 +24,17 @@ from shelfmap.response import (
 )
 from shelfmap.settings import Settings
 from shelfmap.shelfbreak import ShelfBreaks, find_shelf_breaks, measure_picked_breaks
-from shelfmap.tables import Screened, waves_of
+from shelfmap.tables import Screened, profile_layer, response_layer, station_columns, transect_columns, waves_of
 from shelfmap.transects import Transects
 
-__all__ = ["CURVE_PERIODS_H", "Section", "sample_section", "screen_section", "stack"]
+__all__ = [
+    "CURVE_PERIODS_H",
+    "Section",
+    "pack_drawn_section",
+    "pack_section",
+    "sample_section",
+    "screen_section",
+]
 
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
@@ -40,7 +47,9 @@ CURVE_LEAST_SHARE: Final = 0.25
 #: Water is sought at least this many cells before a station on land, however little the coast is generalised.
 LEAST_SEEK_CELLS: Final = 2.0
 
-_T = TypeVar("_T")
+#: Lines to be edited begin this far landward of the shoreline, metres, so that they meet it when they come back.
+SETBACK_M: Final = 10.0
+
 #: Distances of the samples, depths, breaks, depth of the deep sea, Coriolis parameter: what the physics is given.
 _Rows = tuple[FloatArray, FloatArray, FloatArray, FloatArray, FloatArray]
 
@@ -107,6 +116,26 @@ def screen_section(section: Section) -> Screened:
     )
 
 
+def pack_section(section: Section) -> bytes:
+    """Screen one section, and give its rows of the layers, ready to be kept and written: see `shelfmap.layers.pack`.
+
+    Table `stations` holds `shelfmap.tables.station_columns`; the others, encoded, are named as their layers.
+    """
+    screened, settings = screen_section(section), section.settings
+    layers = [profile_layer(screened)] if settings.output.profiles else []
+    layers.append(response_layer(screened, settings))
+    return pack(
+        {"stations": to_table(station_columns(screened, settings))} | {layer.name: encode(layer) for layer in layers}
+    )
+
+
+def pack_drawn_section(section: Section) -> bytes:
+    """Sample one section only, and give its rows of `transect_lines`, with the line of each as well-known binary."""
+    profiles = sample_section(section)
+    lines = shapely.to_wkb(_lines_to_edit(section.transects, profiles))
+    return pack({"stations": to_table(transect_columns(section.transects, profiles) | {"line": lines})})
+
+
 def _breaks(section: Section, profiles: Profiles) -> ShelfBreaks:
     """Breaks found, those picked by hand in their place."""
     settings = section.settings.shelf_break
@@ -167,26 +196,17 @@ def _without(index: ResonanceIndex, left_out: BoolArray) -> ResonanceIndex:
     )
 
 
-def stack(parts: Sequence[_T]) -> _T:
-    """Put results of the same kind together, row below row; ragged rows are padded with what means no value."""
-    first = parts[0]
-    joined: dict[str, Any] = {}
-    for field in fields(first):  # type: ignore[arg-type]
-        values = [getattr(part, field.name) for part in parts]
-        if is_dataclass(values[0]):
-            joined[field.name] = stack(values)
-        elif isinstance(values[0], np.ndarray) and field.name != "curve_period_h":
-            joined[field.name] = _stack_rows(values)
-        else:
-            joined[field.name] = values[0]
-    return replace(first, **joined)  # type: ignore[type-var]
+def _lines_to_edit(transects: Transects, profiles: Profiles) -> NDArray[np.object_]:
+    """Line of each transect that comes back as the same transect: from just landward of its shore to past its end.
 
-
-def _stack_rows(arrays: Sequence[NDArray[Any]]) -> NDArray[Any]:
-    if arrays[0].ndim == 1:
-        return np.concatenate(arrays)
-    width = max(array.shape[1] for array in arrays)
-    none = np.nan if arrays[0].dtype.kind in "fc" else 0
-    return np.concatenate(
-        [np.pad(array, ((0, 0), (0, width - array.shape[1])), constant_values=none) for array in arrays]
-    )
+    What a profile ends at (land, missing depth, the grid's edge) lies on the line too, else it would be forgotten;
+    one that ends at the search length ends there.
+    """
+    at_shore = profiles.start_reason == START_REASONS.index("shore")
+    start_m = np.nan_to_num(profiles.shore_m) - SETBACK_M * at_shore
+    searched = profiles.end_reason == END_REASONS.index("search_length")
+    past = np.where(searched, -0.9, 0.5)  # steps past the last sample, less one
+    stop_m = np.nan_to_num(profiles.shore_m) + (profiles.n_samples + past) * profiles.step_m
+    start_m = np.maximum(start_m, np.nanmin(transects.node_m, axis=1))
+    stop_m = np.minimum(stop_m, np.nanmax(transects.node_m, axis=1))
+    return lines_along(transects, start_m, stop_m)

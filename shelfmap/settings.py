@@ -102,9 +102,25 @@ def _as_path(value: object) -> object:
     return value
 
 
+def _as_paths(value: object) -> object:
+    """Refuse what is no name of a file and no list of such names in one sentence."""
+    if isinstance(value, str | Path):
+        return _as_path(value)
+    if not isinstance(value, list | tuple) or not all(isinstance(name, str | Path) for name in value):
+        raise ValueError(f"path = {value!r}: must be the name of a file, in quotes, or a list of such names")
+    if not value:
+        raise ValueError("path = []: the list is empty; name at least one file")
+    names = [str(Path(name)) for name in value if _as_path(name)]
+    twice = next((name for name in names if names.count(name) > 1), None)
+    if twice is not None:
+        raise ValueError(f"path names {twice!r} twice; name each file once, the one to be used first in front")
+    return tuple(value)
+
+
 _S = TypeVar("_S", bound=BaseModel)
 ConstituentName = Annotated[str, BeforeValidator(_constituent_name)]
 FilePath = Annotated[Path, BeforeValidator(_as_path)]
+FilePaths = Annotated[Path | tuple[Path, ...], BeforeValidator(_as_paths)]
 
 
 class _Stage(BaseModel):
@@ -116,7 +132,10 @@ class _Stage(BaseModel):
 class GridSettings(_Stage):
     """Where the depths come from and how to read them."""
 
-    path: FilePath = Field(description="Bathymetry raster, anything GDAL reads; relative to the settings file.")
+    path: FilePaths = Field(
+        description="Bathymetry raster, anything GDAL reads, relative to the settings file; or a list of rasters, the "
+        "first that has a depth gives it: tiles of one grid, or fine ones before the coarse one that covers the most."
+    )
     positive: Literal["auto", "up", "down"] = Field(
         "auto",
         description="Whether values are elevations (up) or depths (down); auto decides from the file, says why.",
@@ -134,6 +153,11 @@ class GridSettings(_Stage):
     )
     nodata: float | None = Field(None, description="Value that means missing, only where the file does not say.")
     void_is_land: bool = Field(False, description="Take missing cells as land: for grids that hold depths only.")
+
+    @property
+    def paths(self) -> tuple[Path, ...]:
+        """The rasters, however many."""
+        return (self.path,) if isinstance(self.path, Path) else self.path
 
 
 class CoastSettings(_Stage):
@@ -187,7 +211,11 @@ class TransectSettings(_Stage):
     spacing_km: float = Field(10.0, ge=0.001, le=1000, description="Distance between stations along the coast, km.")
     length_km: float = Field(600.0, ge=0.005, le=3000, description="How far seaward the shelf break is searched, km.")
     step_km: float | None = Field(
-        None, ge=0.001, le=100, description="Sample spacing along a transect, km; default the grid's own step."
+        None,
+        ge=0.001,
+        le=100,
+        description="Sample spacing along a transect, km; default the grid's own step, of several grids the finest "
+        "one's but at least a quarter of the last one's.",
     )
     file: FilePath | None = Field(None, description="Vector file of transects drawn or edited by hand.")
     layer: str | None = Field(None, description="Layer of that file, where it holds several.")
@@ -397,11 +425,10 @@ def markdown_settings() -> str:
 
     Examples
     --------
-    >>> print("\n".join(markdown_settings().splitlines()[:4]))
+    >>> print("\n".join(markdown_settings().splitlines()[:3]))
     | setting | default | meaning |
     |---|---|---|
     | `title` | `""` | A name for the run. |
-    | `grid.path` | must be given | Bathymetry raster, anything GDAL reads; relative to the settings file. |
     """
     return "\n".join(["| setting | default | meaning |", "|---|---|---|", *_setting_rows(Settings, "")])
 
@@ -428,6 +455,8 @@ def _rooted(settings: _S, folder: Path) -> _S:
             update[name] = _rooted(value, folder)
         elif isinstance(value, Path):
             update[name] = folder / value
+        elif name == "path" and isinstance(value, tuple):
+            update[name] = tuple(folder / path for path in value)
     return settings.model_copy(update=update)
 
 

@@ -1,31 +1,42 @@
-"""Stage results of all transects, put into the columns of the column table: units turned, remarks written."""
+"""Stage results of transects, put into the columns of the column table: units turned, remarks written."""
 
 from collections.abc import Iterator
 from dataclasses import dataclass
-from typing import Any
+from typing import Any, Final
 
 import numpy as np
 import shapely
 from numpy.typing import NDArray
 
-from shelfmap.assess import SHUT_OFF_RATIO, confidences, doubts, sills
-from shelfmap.coast import Coast
-from shelfmap.columns import columns_of
+from shelfmap.assess import SHUT_OFF_RATIO, doubts, sills
 from shelfmap.constants import CONSTITUENTS
 from shelfmap.geodesy import unwrap_lon_deg
 from shelfmap.index import ResonanceIndex, index_class
 from shelfmap.layers import Layer
-from shelfmap.profiles import END_REASONS, Profiles, place_on
+from shelfmap.profiles import END_REASONS, Profiles, lines_along, place_on
 from shelfmap.response import ShelfModes, WaveResponse
 from shelfmap.settings import Settings
 from shelfmap.shelfbreak import ShelfBreaks
-from shelfmap.transects import NODE_M, Transects, coast_piece, crossing_transects
+from shelfmap.transects import Transects
 from shelfmap.words import wave_label
 
-__all__ = ["Screened", "Wave", "result_layers", "transect_columns", "transect_geometry", "waves_of"]
+__all__ = [
+    "WORKING_COLUMNS",
+    "Columns",
+    "Screened",
+    "Wave",
+    "profile_layer",
+    "response_layer",
+    "station_columns",
+    "transect_columns",
+    "waves_of",
+]
 
 FloatArray = NDArray[np.float64]
 Columns = dict[str, NDArray[Any]]
+
+#: Columns of `station_columns` that are in no layer.
+WORKING_COLUMNS: Final = ("line", "shore_lon", "break_lon", "remarks", "n_doubts")
 
 
 @dataclass(frozen=True, slots=True)
@@ -68,84 +79,39 @@ class Screened:
     """(m,) periods of the curve, hours."""
 
 
-def transect_geometry(transects: Transects, profiles: Profiles) -> NDArray[np.object_]:
-    """Line of each transect from its shore to its last sample; a stub of one step where there is no profile."""
-    lines = []
-    for row in range(len(transects)):
-        start_m = np.nan_to_num(profiles.shore_m[row])
-        length_m = max(profiles.length_m[row], profiles.step_m)
-        at_m = start_m + np.linspace(0.0, length_m, int(np.ceil(length_m / NODE_M)) + 1)
-        lon_deg, lat_deg = place_on(transects.rows(row, row + 1), at_m[None, :])
-        lines.append(shapely.linestrings(lon_deg[0], lat_deg[0]))
-    return np.array(lines, dtype=object)
-
-
-def result_layers(screened: Screened, coast: Coast, settings: Settings) -> list[Layer]:
-    """Layers of a run, but for `run` itself.
+def station_columns(screened: Screened, settings: Settings) -> Columns:
+    """Columns of the layers with one row a transect, and what `shelfmap.stations` needs to finish them.
 
     Parameters
     ----------
     screened : Screened
-        All transects of the run.
-    coast : Coast
-        The coast they stand on.
+        Some transects of a run, n of them.
     settings : Settings
-        Which waves, and which tables are wanted.
+        Which waves are wanted.
 
     Returns
     -------
-    list of Layer
-        `coast_index`, `transects`, `shelf_breaks` and, where asked for, `profiles` and `response`.
+    dict of str to (n,) array
+        By name; those of `WORKING_COLUMNS` are in no layer: places with longitudes that do not jump at 180 degrees, the
+        line of each transect as well-known binary, remarks and the number of doubts among them.
     """
     waves = waves_of(settings)
-    labels = [wave.label for wave in waves]
-    break_lon, break_lat = place_on(screened.transects, screened.profiles.shore_m + screened.breaks.break_m)
-    crosses = crossing_transects(
-        np.stack([screened.profiles.shore_lon_deg, screened.profiles.shore_lat_deg], axis=1),
-        np.stack([break_lon, break_lat], axis=1),
-        screened.transects.coast_part,
-    )
-    of_waves = _wave_columns(screened, waves)
-    columns = {
-        **transect_columns(screened.transects, screened.profiles),
+    transects, profiles = screened.transects, screened.profiles
+    break_lon, break_lat = place_on(transects, profiles.shore_m + screened.breaks.break_m)
+    shore_m = np.nan_to_num(profiles.shore_m)
+    # from its shore to its last sample; a stub of one step where there is no profile
+    lines = lines_along(transects, shore_m, shore_m + np.maximum(profiles.length_m, profiles.step_m))
+    return {
+        **transect_columns(transects, profiles),
         **_profile_columns(screened, settings),
         **_break_columns(screened, break_lon, break_lat),
         **_mode_columns(screened),
-        **of_waves,
-        **_remark_columns(screened, waves, crosses, np.isfinite(of_waves["index_max"])),
-        "crosses": crosses,
+        **_wave_columns(screened, waves),
+        **_remark_columns(screened, waves),
+        "line": shapely.to_wkb(lines),
+        "shore_lon": profiles.shore_lon_deg,
+        "break_lon": break_lon,
     }
-    pieces = [coast_piece(coast, screened.transects, row) for row in range(len(screened.transects))]
-    on_coast = np.array([len(piece) > 1 for piece in pieces], dtype=bool)
-    has_break = np.isfinite(screened.breaks.break_m)
-    layers = [
-        _layer(
-            "coast_index",
-            columns,
-            on_coast,
-            np.array([shapely.linestrings(piece) for piece in pieces if len(piece) > 1], dtype=object),
-            labels,
-        ),
-        _layer("transects", columns, slice(None), transect_geometry(screened.transects, screened.profiles), labels),
-        _layer(
-            "shelf_breaks",
-            columns | {"lon_deg": columns["break_lon_deg"], "lat_deg": break_lat},
-            has_break,
-            shapely.points(break_lon[has_break], break_lat[has_break]),
-        ),
-    ]
-    if settings.output.profiles:
-        layers.append(_profile_layer(screened))
-    layers.append(_response_layer(screened, waves))
-    return layers
-
-
-def _layer(
-    name: str, columns: Columns, rows: Any, geometry: NDArray[np.object_] | None, waves: list[str] | None = None
-) -> Layer:
-    """Those of the columns that belong to a layer, some rows of them."""
-    wanted = [column.name for column in columns_of(name, waves or [])]
-    return Layer(name=name, columns={key: columns[key][rows] for key in wanted}, geometry=geometry, waves=waves or [])
 
 
 def _nullable(values: NDArray[Any], missing: NDArray[np.bool_]) -> NDArray[np.object_]:
@@ -255,18 +221,15 @@ def _wave_columns(screened: Screened, waves: tuple[Wave, ...]) -> Columns:
     }
 
 
-def _remark_columns(
-    screened: Screened, waves: tuple[Wave, ...], crosses: NDArray[np.bool_], has_index: NDArray[np.bool_]
-) -> Columns:
+def _remark_columns(screened: Screened, waves: tuple[Wave, ...]) -> Columns:
+    """Remarks on each transect by itself, and how many of them are doubts."""
     profiles, modes = screened.profiles, screened.modes
     n = len(screened.status)
     remarks: list[list[str]] = [[] for _ in range(n)]
     n_doubts = np.zeros(n, dtype=np.int64)
     holds_index = screened.status == "ok"
     error = modes.period_sd_s / modes.node_period_s[:, 0]
-    change = _width_change(screened.transects, np.where(holds_index, screened.breaks.break_m, np.nan))
-    doubtful = doubts(profiles, screened.breaks, crosses, change, modes.kernel_peak_share, error, modes.damped_q[:, 0])
-    for text, holds in doubtful:
+    for text, holds in doubts(profiles, screened.breaks, modes.kernel_peak_share, error, modes.damped_q[:, 0]):
         for row in np.flatnonzero(holds & holds_index):
             remarks[row].append(text[row])
         n_doubts += holds
@@ -288,8 +251,7 @@ def _remark_columns(
         remarks[row].append(
             f"profile ends at {deepest_m:.0f} m, sea beyond taken as {screened.outer_depth_m[row]:.0f} m"
         )
-    notes = np.array(["; ".join(parts) or None for parts in remarks], dtype=object)
-    return {"note": notes, "confidence": confidences(has_index, n_doubts)}
+    return {"remarks": np.array(["; ".join(parts) or None for parts in remarks], dtype=object), "n_doubts": n_doubts}
 
 
 def _wave_remarks(
@@ -324,19 +286,8 @@ def _why_not(screened: Screened) -> Iterator[tuple[int, str]]:
             yield row, f"land {km:.0f} km out"
 
 
-def _width_change(transects: Transects, width_m: FloatArray) -> FloatArray:
-    """Ratio of a shelf's width to the next stations', the larger over the smaller, the largest; NaN without any."""
-    out = np.full(len(width_m), np.nan)
-    same = (transects.coast_part[1:] == transects.coast_part[:-1]) & (transects.coast_part[1:] > 0)
-    with np.errstate(invalid="ignore", divide="ignore"):
-        ratio = np.where(same, width_m[1:] / width_m[:-1], np.nan)
-    ratio = np.fmax(ratio, 1.0 / ratio)
-    out[1:] = ratio
-    out[:-1] = np.fmax(out[:-1], ratio)
-    return out
-
-
-def _profile_layer(screened: Screened) -> Layer:
+def profile_layer(screened: Screened) -> Layer:
+    """Layer `profiles`: a row for each sample of each transect."""
     profiles = screened.profiles
     wet = np.arange(profiles.depth_m.shape[1])[None, :] < profiles.n_samples[:, None]
     row, sample = np.nonzero(wet)
@@ -355,9 +306,9 @@ def _profile_layer(screened: Screened) -> Layer:
     )
 
 
-def _response_layer(screened: Screened, waves: tuple[Wave, ...]) -> Layer:
-    """Waves asked for, then the curve, by transect; transects without a response have no rows."""
-    response = screened.waves
+def response_layer(screened: Screened, settings: Settings) -> Layer:
+    """Layer `response`: waves asked for, then the curve, by transect; without a response there are no rows."""
+    response, waves = screened.waves, waves_of(settings)
     n_waves = len(waves)
     fields = ("gain", "damped_gain", "lag_rad", "edge_ratio")
     values = {name: getattr(response, name) for name in fields} | {"index": screened.index.index}

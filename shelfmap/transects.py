@@ -13,7 +13,7 @@ from shelfmap.errors import TransectError
 from shelfmap.geodesy import distance_bearing, geodesic_nodes, unwrap_along, unwrap_lon_deg
 from shelfmap.settings import CoastSettings, TransectSettings
 
-__all__ = ["Transects", "coast_piece", "crossing_transects", "lay_transects", "transects_from_lines"]
+__all__ = ["Transects", "coast_pieces", "crossing_transects", "lay_transects", "transects_from_lines"]
 
 FloatArray = NDArray[np.float64]
 IntArray = NDArray[np.int64]
@@ -187,15 +187,30 @@ def _in_box(lon_deg: FloatArray, lat_deg: FloatArray, box: tuple[float, float, f
     return np.asarray((lon >= west) & (lon <= east) & (lat_deg >= south) & (lat_deg <= north))
 
 
-def coast_piece(coast: Coast, transects: Transects, row: int) -> FloatArray:
-    """Stretch of coast one station stands for, (k, 2) longitude and latitude in degrees; empty away from the coast."""
-    if transects.coast_part[row] < 1:
-        return np.zeros((0, 2))
-    line = coast.lines[int(transects.coast_part[row]) - 1]
-    start_m, stop_m = max(transects.piece_start_m[row], 0.0), min(transects.piece_stop_m[row], line.length_m)
-    first, last = np.searchsorted(line.along_m, [start_m + 1e-6, stop_m - 1e-6])
-    at_m = np.concatenate([[start_m], line.along_m[first:last], [stop_m]])
-    return np.stack([np.interp(at_m, line.along_m, line.lon_deg), np.interp(at_m, line.along_m, line.lat_deg)], axis=1)
+def coast_pieces(coast: Coast, transects: Transects) -> NDArray[np.object_]:
+    """Stretch of coast each station stands for.
+
+    Returns
+    -------
+    (n,) array of shapely lines
+        Longitude and latitude, degrees, longitudes without jumps; None away from the coast.
+    """
+    pieces = np.full(len(transects), None, dtype=object)
+    for part in np.unique(transects.coast_part[transects.coast_part > 0]).tolist():
+        rows, line = np.flatnonzero(transects.coast_part == part), coast.lines[part - 1]
+        start_m = np.maximum(transects.piece_start_m[rows], 0.0)
+        stop_m = np.minimum(transects.piece_stop_m[rows], line.length_m)
+        first = np.searchsorted(line.along_m, start_m + 1e-6)
+        n_inside = np.maximum(np.searchsorted(line.along_m, stop_m - 1e-6) - first, 0)
+        # of each stretch its start, the vertices of the coast inside it, its end
+        stretch = np.repeat(np.arange(len(rows)), n_inside + 2)
+        begins = np.cumsum(n_inside + 2) - (n_inside + 2)
+        vertex = first[stretch] + np.arange(len(stretch)) - begins[stretch] - 1
+        at_m = line.along_m[np.minimum(vertex, len(line.along_m) - 1)]
+        at_m[begins], at_m[begins + n_inside + 1] = start_m, stop_m
+        lon_deg, lat_deg = (np.interp(at_m, line.along_m, degrees) for degrees in (line.lon_deg, line.lat_deg))
+        pieces[rows] = shapely.linestrings(lon_deg, lat_deg, indices=stretch)
+    return pieces
 
 
 def transects_from_lines(

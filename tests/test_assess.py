@@ -8,7 +8,7 @@ from utils_shelfbreak import bent, profiles_of
 
 from shelfmap import words
 from shelfmap._kernels import tracing
-from shelfmap.assess import LEAST_SAMPLES, confidences, doubts, sills, statuses, usable
+from shelfmap.assess import LEAST_SAMPLES, confidences, doubts, neighbour_doubts, sills, statuses, usable
 from shelfmap.profiles import END_REASONS, START_REASONS
 from shelfmap.settings import ShelfBreakSettings
 from shelfmap.shelfbreak import measure_picked_breaks
@@ -81,8 +81,9 @@ def test_gains_need_a_break_or_the_open_ocean():
 
 
 def remarks(profiles, breaks, crosses=False, width_change=1.0, kernel_share=0.01, period_error=0.01, damped_q=4.0):
-    given = [np.array([value]) for value in (crosses, width_change, kernel_share, period_error, damped_q)]
-    return [text[0] for text, holds in doubts(profiles, breaks, *given) if holds[0]]
+    own = doubts(profiles, breaks, *(np.array([value]) for value in (kernel_share, period_error, damped_q)))
+    of_neighbours = neighbour_doubts(np.array([crosses]), np.array([width_change]))
+    return [text[0] for text, holds in (*own, *of_neighbours) if holds[0]]
 
 
 def test_a_clear_straight_shelf_raises_no_doubt():

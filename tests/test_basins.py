@@ -1,5 +1,7 @@
 """Which water is sea: labels against one whole-grid labelling, whatever the tiles."""
 
+import pickle
+
 import numpy as np
 import pytest
 from scipy import ndimage
@@ -129,3 +131,33 @@ def test_all_land_has_no_sea(write_grid):
     basins, mask = mask_of(open_up(write_grid(scene(lambda x, y: 0 * x + 5))), least_km2=0, least_enclosed_km2=0)
     assert len(basins.areas_m2) == 0
     assert not mask.any()
+
+
+@pytest.mark.parametrize("tile_cells", [8, 50])
+def test_part_of_the_labels_is_enough_for_a_window(write_grid, tile_cells):
+    """What is sent to a worker: the tiles a window meets, over the seam too, and no others."""
+    source = open_up(
+        write_grid(globe(lambda lon, lat: 100 * np.sin(np.radians(7 * lon)) * np.cos(np.radians(9 * lat))))
+    )
+    basins, _ = mask_of(source, least_km2=1e5, least_enclosed_km2=1e6, tile_cells=tile_cells)
+    for window in (Tile(10, 31, 170, 195), Tile(0, 9, -12, 3), Tile(80, 90, 40, 60)):
+        part = pickle.loads(pickle.dumps(basins.near([window])))
+        mask = basins.sea_mask(window)
+        assert 0 < mask.sum() < mask.size
+        assert part.may_hold_shore(window)
+        np.testing.assert_array_equal(part.sea_mask(window), mask)
+        np.testing.assert_array_equal(part.shore_mask(window), mask)
+    with pytest.raises(KeyError):
+        part.sea_mask(Tile(0, 90, 0, 180))
+
+
+def test_windows_all_of_a_kind_hold_no_shore(write_grid):
+    """Sea with missing cells and land with a lake; neither is a shore."""
+    lake = lambda x, y: np.where(np.hypot(x, y + 60) < 10, -50.0, -5.0 * y)  # noqa: E731
+    path = write_grid(scene(lambda x, y: np.where(np.hypot(x, y - 60) < 10, np.nan, lake(x, y))))
+    basins, mask = mask_of(open_up(path), least_km2=500, least_enclosed_km2=1e4, tile_cells=30)
+    for rows, is_sea in (((0, 50), False), ((70, 121), True)):
+        assert basins.shore_mask(Tile(*rows, 0, 121)) is None
+        assert mask[slice(*rows)].any() == is_sea
+    assert basins.shore_mask(Tile(40, 80, 0, 121)) is not None
+    assert not basins.may_hold_shore(Tile(0, 30, 0, 121))

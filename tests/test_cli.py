@@ -18,10 +18,10 @@ from click.testing import CliRunner
 from utils_grid import write_tif
 from utils_pipeline import small_coast
 
-from shelfmap import __version__, pipeline
+from shelfmap import __version__
 from shelfmap.cli import main
 from shelfmap.demo import write_demo
-from shelfmap.layers import read_table
+from shelfmap.vectors import read_table
 
 SETTINGS = """\
 title = "test"
@@ -139,7 +139,7 @@ def test_coast_and_transects_print_their_paths(coast_toml, tmp_path, monkeypatch
     assert result.stderr.startswith("1 stretches of coast, 291 km in all: shoreline at 0 m")
     result = run("transects", "coast.toml", "--output", tmp_path / "t.gpkg")
     assert result.stdout == f"{tmp_path / 't.gpkg'}\n"
-    assert result.stderr == "15 transects, sampled every 4.27 km\n"
+    assert result.stderr == "15 transects\n"
     assert len(read_table(tmp_path / "t.gpkg", "transect_lines")["transect_id"]) == 15
     run("coast", "coast.toml", code=2)
     run("coast", "coast.toml", "--overwrite")
@@ -290,30 +290,38 @@ def test_output_that_is_no_geopackage(coast_toml):
     assert message.endswith("layers are written as GeoPackage: name it out.gpkg")
 
 
-@pytest.mark.parametrize("stage", ["make_coast", "screen_section", "result_layers"])
-def test_interrupted_run_leaves_the_older_output_and_nothing_else(coast_toml, monkeypatch, stage):
-    """Ctrl-C in the coast, in a section, and once the file is about to be written."""
+def stop(*_, **__):
+    raise KeyboardInterrupt
+
+
+@pytest.mark.parametrize("stage", ["laying.open_grid", "laying.make_coast"])
+def test_run_interrupted_early_leaves_the_older_output_and_nothing_else(coast_toml, monkeypatch, stage):
     run("screen", coast_toml)
     out = coast_toml.parent / "out.gpkg"
     before = out.read_bytes()
-
-    def stop(*_, **__):
-        raise KeyboardInterrupt
-
-    monkeypatch.setattr(pipeline, stage, stop)
+    monkeypatch.setattr(f"shelfmap.{stage}", stop)
     result = run("screen", coast_toml, "--overwrite", code=1)
     assert result.stderr.strip() == "Aborted!"
     assert out.read_bytes() == before
     assert files(out.parent) == ["coast.toml", "grid0.tif", "out.gpkg"]
 
 
-def test_interrupt_while_the_file_is_written_leaves_no_part(coast_toml, monkeypatch):
-    def stop(*_):
-        raise KeyboardInterrupt
-
-    monkeypatch.setattr("shelfmap.layers._add_metadata", stop)
-    run("screen", coast_toml, code=1)
-    assert files(coast_toml.parent) == ["coast.toml", "grid0.tif"]
+@pytest.mark.parametrize("stage", ["pipeline.station_layers", "geopackage._add_metadata", "replacement._move"])
+def test_run_interrupted_late_keeps_its_sections_and_goes_on_from_them(coast_toml, monkeypatch, stage):
+    folder, out = coast_toml.parent, coast_toml.parent / "out.gpkg"
+    run("screen", coast_toml)
+    before = out.read_bytes()
+    with monkeypatch.context() as patched:
+        patched.setattr(f"shelfmap.{stage}", stop)
+        told = run("screen", coast_toml, "--overwrite", code=1).stderr
+    assert f"is kept in {folder / '.out.gpkg.unfinished'}: the same run goes on from it" in told
+    assert out.read_bytes() == before
+    assert files(folder) == [".out.gpkg.unfinished", "coast.toml", "grid0.tif", "out.gpkg"]
+    kept = files(folder / ".out.gpkg.unfinished")
+    assert [Path(file).suffix for file in kept] == [".done"]
+    told = run("screen", coast_toml, "--overwrite").stderr
+    assert "1 of 1 sections were finished by an earlier run and are used" in told
+    assert files(folder) == ["coast.toml", "grid0.tif", "out.gpkg"]
 
 
 def test_traceback_is_shown_with_vv_only(tmp_path):
@@ -434,7 +442,7 @@ def runs(pid):
 
 @pytest.mark.skipif(not Path(f"/proc/self/task/{os.getpid()}/children").exists(), reason="asks Linux for the processes")
 @pytest.mark.parametrize(("number", "code"), [(signal.SIGTERM, 143), (signal.SIGKILL, -9)])
-def test_ended_run_leaves_no_worker_and_no_file(tmp_path, number, code):
+def test_ended_run_leaves_no_worker_and_no_output(tmp_path, number, code):
     """However the parent ends, its workers end too."""
     write_demo(tmp_path)
     toml = (tmp_path / "demo.toml").read_text(encoding="utf-8").replace("spacing_km = 20.0", "spacing_km = 1.0")
@@ -455,7 +463,7 @@ def test_ended_run_leaves_no_worker_and_no_file(tmp_path, number, code):
     while any(map(runs, started)) and time.monotonic() < deadline:
         time.sleep(0.05)
     assert not [pid for pid in started if runs(pid)]
-    assert not list(tmp_path.glob("demo.gpkg*"))
+    assert not (tmp_path / "demo.gpkg").exists()
 
 
 def test_module_is_the_command():

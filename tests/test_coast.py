@@ -1,20 +1,25 @@
 """The generalised coast: what is bridged, dropped and kept, at any bearing, place, projection and tiling."""
 
+import multiprocessing
+import pickle
+from concurrent.futures import ProcessPoolExecutor
 from types import SimpleNamespace
 
 import numpy as np
+import pyogrio
 import pytest
 import shapely
+from scipy import ndimage
 from utils_geometry import GEOD, angle_between, lay, open_up, scene, scene_km
 
 from shelfmap import coast as coast_module
-from shelfmap.basins import Tiling
+from shelfmap.basins import Basins, Tiling
 from shelfmap.chains import join_ends
 from shelfmap.coast import CoastLine, coast_from_lines, trace_coast
 from shelfmap.errors import CoastError
 from shelfmap.geodesy import distance_bearing, unwrap_lon_deg
-from shelfmap.grid import open_grid
-from shelfmap.layers import read_vector
+from shelfmap.grid import GridSource, open_grid
+from shelfmap.inputs import make_coast
 from shelfmap.pipeline import screen
 from shelfmap.profiles import place_on
 from shelfmap.rasters import write_geotiff
@@ -22,6 +27,7 @@ from shelfmap.settings import CoastSettings, GridSettings, Settings, ShelfBreakS
 from shelfmap.shelfbreak import find_shelf_breaks
 from shelfmap.synthetic import SyntheticGrid, round_coast, shelf_profile, straight_coast
 from shelfmap.transects import crossing_transects
+from shelfmap.vectors import read_table, read_vector
 
 SHELF = shelf_profile(60e3, 120.0, 1 / 20, 4000.0)
 EARTH_M = 6_371_008.8
@@ -341,6 +347,12 @@ def test_adjoining_polygons_are_one_land_and_their_lakes_are_land(write_grid):
     assert len(coast.islets) == 0
 
 
+def test_land_off_the_grid_is_refused(write_grid):
+    source = open_up(write_grid(scene(beach)))
+    with pytest.raises(CoastError, match=r"all of it is water \(or land of coast\.file\)"):
+        trace_coast(source, CoastSettings(smallest_sea_km2=500), np.array([shapely.box(100, 50, 101, 51)]))
+
+
 @pytest.mark.parametrize("direction", [1, -1])
 def test_coast_lines_are_turned_so_that_the_sea_is_on_the_right(write_grid, direction):
     source = open_up(write_grid(straight_coast(0.0, 10.0, SHELF, lon_deg=180.0, shape=(61, 61))))
@@ -409,6 +421,118 @@ def test_coast_round_the_globe_has_no_seam(write_grid):
         shore = 10 + 5 * np.sin(np.radians(2 * line.lon_deg)) + (20 if line.lat_deg.mean() > 10 else -20)
         assert np.abs(line.lat_deg - shore).max() < 0.3  # a fraction of the 2-degree cells
     assert (laid.profiles.start_reason == 0).all()
+
+
+# ---- tiles anywhere, in any order
+
+
+@pytest.fixture
+def rough_globe(write_grid):
+    """A globe of 2-degree cells in 242 tiles: random lands, lakes and seas, missing patches, ice on both poles."""
+    rng = np.random.default_rng(5)
+    large, small = (
+        ndimage.gaussian_filter(rng.normal(size=(90, 180)), size, mode=("nearest", "wrap")) for size in (9.0, 1.0)
+    )
+    elevation_m = 4000.0 * large / large.std() + 600.0 * small / small.std() - 1000.0
+    elevation_m[:4] = elevation_m[-3:] = 500.0
+    elevation_m[np.roll(ndimage.gaussian_filter(rng.normal(size=(90, 180)), 3), 40) > 0.18] = np.nan
+    return write_grid(
+        SyntheticGrid(
+            elevation_m=elevation_m.clip(-6000, 6000).astype(np.float32),
+            x0=-179.0, y0=-89.0, dx=2.0, dy=2.0, crs="EPSG:4326", description="rough globe",
+        )
+    )  # fmt: skip
+
+
+ROUGH = CoastSettings(generalise_km=200.0, smallest_island_km2=4e5, smallest_sea_km2=2e5)
+
+
+def bits(coast):
+    """Everything a coast holds, as bytes."""
+    lines = [(line.lon_deg.tobytes(), line.lat_deg.tobytes(), line.along_m.tobytes()) for line in coast.lines]
+    return lines, [line.is_closed for line in coast.lines], shapely.to_wkb(coast.islets).tolist()
+
+
+def backwards(function, jobs):
+    """Map that runs all jobs from the last to the first, each sent as to another process, and gives them in order."""
+    sent = [pickle.dumps(job) for job in jobs]
+    done = [pickle.dumps(function(pickle.loads(job))) for job in reversed(sent)]
+    return map(pickle.loads, reversed(done))
+
+
+def test_order_of_the_tiles_does_not_matter(rough_globe):
+    """Bit for bit, with lines, islets and lakes in plenty."""
+    source = open_up(rough_globe)
+    coast = trace_coast(source, ROUGH)
+    assert len(coast.lines) > 3
+    assert len(coast.islets) > 10
+    assert bits(trace_coast(source, ROUGH, mapped=backwards)) == bits(coast)
+
+
+def test_processes_give_the_same_coast_as_one(rough_globe):
+    source = open_up(rough_globe)
+    with ProcessPoolExecutor(2, mp_context=multiprocessing.get_context("spawn")) as pool:
+        spread = trace_coast(source, ROUGH, mapped=pool.map)
+    assert bits(spread) == bits(trace_coast(source, ROUGH))
+
+
+@pytest.mark.parametrize("level_m", [0.0, 123.4])
+def test_tiles_without_a_shore_are_left_out_and_change_nothing(rough_globe, monkeypatch, level_m):
+    """The same bits when every window is read and traced."""
+    source, settings = open_up(rough_globe), ROUGH.model_copy(update={"level_m": level_m})
+    read = []
+    read_many = GridSource.read_many
+
+    def noted(self, windows):
+        windows = list(windows)
+        read.extend(windows)
+        return read_many(self, windows)
+
+    monkeypatch.setattr(GridSource, "read_many", noted)
+    coast = trace_coast(source, settings)
+    few = len(read)
+    monkeypatch.setattr(Basins, "may_hold_shore", lambda self, window: True)
+    monkeypatch.setattr(Basins, "shore_mask", Basins.sea_mask)
+    read.clear()
+    assert bits(trace_coast(source, settings)) == bits(coast)
+    assert len(read) == 2 * 242
+    assert 242 < few < len(read) - 20
+
+
+def test_jobs_are_small_and_made_as_they_are_asked_for(rough_globe):
+    """So that neither the jobs of a globe nor all labels are in one place at once."""
+    sizes = []
+
+    def one_by_one(function, jobs):
+        for job in jobs:
+            sizes.append(len(pickle.dumps(job)))
+            made = len(sizes)
+            yield function(job)
+            assert len(sizes) == made
+
+    trace_coast(open_up(rough_globe), ROUGH, mapped=one_by_one)
+    assert len(sizes) > 2 * 11  # several jobs in each of 11 rows, twice
+    assert max(sizes) < 20_000
+
+
+@pytest.mark.parametrize("drawn", [False, True])
+def test_land_of_a_file_runs_over_the_same_map(rough_globe, tmp_path, drawn):
+    """Both passes; polygons give the same coast wherever their tiles are traced."""
+    content = {"grid": {"path": str(rough_globe), "positive": "up"}, "coast": {"generalise_km": 400.0}}
+    if drawn:
+        land = [shapely.Point(lon, lat).buffer(12) for lon in range(-180, 180, 40) for lat in (-50, 0, 45)]
+        path = tmp_path / "land.gpkg"
+        pyogrio.raw.write(path, shapely.to_wkb(land), [], [], geometry_type="Polygon", crs="EPSG:4326")
+        content["coast"]["file"] = str(path)
+    settings = Settings.from_dict(content | {"output": {"path": str(tmp_path / "out.gpkg")}})
+    source, called = open_up(rough_globe), []
+
+    def noted(function, jobs):
+        called.append(function.__name__)
+        return backwards(function, jobs)
+
+    assert bits(make_coast(source, settings, mapped=noted)) == bits(make_coast(source, settings))
+    assert len(called) == 2
 
 
 # ---- refusals
@@ -482,9 +606,9 @@ def test_coast_round_a_pole_is_closed_and_faces_its_sea(tmp_path, crs, is_island
     (line,) = run.coast.lines
     assert line.is_closed
     assert abs(line.lon_deg[-1] - line.lon_deg[0]) == pytest.approx(360)
-    assert set(run.screened.status) == {"ok"}
+    assert set(run.status) == {"ok"}
     away = 180.0 if (crs == "EPSG:3413") == is_island else 0.0  # from the north pole, and to the south pole, is south
-    off_deg = unwrap_lon_deg(run.screened.transects.bearing_deg - away, 0.0)
+    off_deg = unwrap_lon_deg(read_table(run.path, "transects")["bearing_deg"] - away, 0.0)
     assert np.abs(off_deg).max() < 4  # cells of 10 km on a circle of 100 km
     west, _, east, _ = shapely.bounds(shapely.get_parts(read_vector(run.path, "transects").geometry)).T
     assert west.min() >= -180

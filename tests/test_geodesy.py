@@ -101,3 +101,16 @@ def test_local_projection_keeps_distance_and_bearing_from_its_middle():
     x_m, y_m = local_projection(20.0, 70.0).from_lonlat(lon[0, 0], lat[0, 0])
     assert x_m == pytest.approx(1.5e5, abs=0.01)
     assert y_m == pytest.approx(3e5 * np.cos(np.radians(30)), abs=0.01)
+
+
+@pytest.mark.parametrize(("lon", "lat"), [(20.0, 70.0), (179.9, -45.0), (-180.0, 89.9), (370.0, 0.0)])
+def test_local_plane_is_the_projection_bit_for_bit(lon, lat):
+    """PROJ's own way between the two systems, found by its slow search."""
+    plane = local_projection(lon, lat)
+    slow = Projection(f"+proj=aeqd +lat_0={lat:.6f} +lon_0={lon:.6f} +datum=WGS84 +units=m +no_defs")
+    rng = np.random.default_rng(1)
+    lon_deg, lat_deg = lon + rng.uniform(-9, 9, 500), np.clip(lat + rng.uniform(-6, 6, 500), -90, 90)
+    x_m, y_m = plane.from_lonlat(lon_deg, lat_deg)
+    np.testing.assert_array_equal((x_m, y_m), slow.from_lonlat(lon_deg, lat_deg))
+    np.testing.assert_array_equal(plane.to_lonlat(x_m, y_m), slow.to_lonlat(x_m, y_m))
+    assert np.ptp(x_m) > 1e5 or abs(lat) > 80

@@ -56,7 +56,7 @@ def test_rows_run_north_and_columns_east_whatever_the_file(tmp_path, south_up, e
     assert (source.x0, source.y0, source.dx, source.dy) == pytest.approx((10.0, 40.0, 0.5, 1.0), abs=1e-12)
     assert (source.n_rows, source.n_cols, source.wraps) == (3, 4, False)
     assert_allclose(source.box_deg, (9.75, 39.5, 11.75, 42.5), atol=1e-12)
-    assert source.file.dtype == dtype
+    assert source.dtype == dtype
 
 
 def test_grid_in_memory_is_read_only_float32(tmp_path):

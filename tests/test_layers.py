@@ -13,7 +13,9 @@ from utils_layers import made_up_layer, waves_for
 import shelfmap
 from shelfmap.columns import LAYERS, columns_of
 from shelfmap.errors import LayerError, OutputExistsError
-from shelfmap.layers import Layer, read_table, read_vector, write_layers
+from shelfmap.geopackage import write_layers
+from shelfmap.layers import Layer
+from shelfmap.vectors import read_table, read_vector
 from shelfmap.words import CAUTIONS, ENUMERATIONS
 
 WAVES = ("m2", "k1", "p0_5h")

@@ -1,5 +1,6 @@
 """Whole runs: every layer filled, known answers, the same numbers however the work is shared out, honest failures."""
 
+import multiprocessing
 import os
 from concurrent.futures import BrokenExecutor, Executor, ThreadPoolExecutor
 
@@ -10,19 +11,18 @@ import pytest
 import shapely
 from utils_pipeline import assert_same_results, settings_for, small_coast
 
-from shelfmap import pipeline, sections
+from shelfmap import pipeline
 from shelfmap.columns import columns_of
 from shelfmap.demo import write_demo
 from shelfmap.errors import LayerError, OutputExistsError, SettingsError, ShelfmapError
 from shelfmap.geodesy import distance_bearing
 from shelfmap.grid import open_grid
-from shelfmap.inputs import make_coast, make_transects
-from shelfmap.layers import read_table, read_vector
 from shelfmap.pipeline import screen
-from shelfmap.profiles import Profiles
 from shelfmap.provenance import status_counts
+from shelfmap.sections import pack_section
 from shelfmap.settings import Settings
 from shelfmap.synthetic import step_profile, straight_coast
+from shelfmap.vectors import read_table, read_vector
 from shelfmap.words import STATUSES
 
 LAYERS = ("coast_index", "transects", "shelf_breaks", "profiles", "response", "run")
@@ -91,7 +91,7 @@ def test_run_layer_holds_settings_sources_counts_and_versions(demo):
     assert said["source", "grid"] == demo.source.path
     assert said["source", "grid values"] == "positive up: set by grid.positive"
     counts = {name: int(value) for (topic, name), value in said.items() if topic == "count"}
-    assert counts.pop("transects") == sum(counts.values()) == len(demo.screened.status)
+    assert counts.pop("transects") == sum(counts.values()) == len(demo.status)
     assert {"shelfmap", "python", "numpy", "pyproj"} <= {name for topic, name in said if topic == "version"}
     assert "Not for navigation" in said["caution", "cautions"]
 
@@ -194,10 +194,11 @@ def test_quadratic_drag_damps_more_where_the_tide_is_larger(flat_shelf):
         run = screen(
             flat_shelf(constituents=["M2"], drag=0.0025, offshore_amplitude_m={"M2": amplitude_m}), overwrite=True
         )
-        gains.append(run.screened.waves.damped_gain)
-        assert (read_table(run.path, "transects")["friction_m_s"] == 1e-3).all()  # of all other waves
+        table = read_table(run.path, "transects")
+        gains.append(table["damped_gain_m2"])
+        assert (table["friction_m_s"] == 1e-3).all()  # of all other waves
     assert (gains[1] < 0.9 * gains[0]).all()
-    assert (gains[0] < run.screened.waves.gain).all()
+    assert (gains[0] < table["gain_m2"]).all()
 
 
 def test_tables_not_wanted_are_not_written(tmp_path, write_grid):
@@ -216,7 +217,7 @@ def test_tables_not_wanted_are_not_written(tmp_path, write_grid):
 @pytest.mark.parametrize("workers", [2, 3])
 def test_processes_give_the_same_tables_as_one(three_sections, tmp_path, workers):
     alone = screen(three_sections)
-    assert len(alone.screened.status) > 2 * pipeline.SECTION_STATIONS
+    assert len(alone.status) > 2 * pipeline.SECTION_STATIONS
     shared = screen(at(three_sections, tmp_path / "shared.gpkg"), workers=workers)
     assert_same_results(alone.path, shared.path)
 
@@ -246,38 +247,18 @@ def test_progress_is_told_of_every_section(three_sections):
     assert told == [("sections", done, n) for done in range(1, n + 1)]
 
 
-def test_stack_undoes_the_cutting_into_sections(tmp_path, write_grid):
-    settings = settings_for(write_grid(small_coast()), tmp_path)
-    source = open_grid(settings.grid)
-    coast = make_coast(source, settings)
-    transects = make_transects(source, coast, settings)
-    back = sections.stack([transects.rows(0, 5), transects.rows(5, 6), transects.rows(6, len(transects))])
-    for name in transects.__slots__:
-        np.testing.assert_array_equal(getattr(back, name), getattr(transects, name))
-
-
-def test_stack_fills_short_rows_with_what_means_no_value():
-    def profiles(width, depth_m):
-        one = {name: np.zeros(1) for name in Profiles.__slots__}
-        filled = np.ones((1, width), dtype=bool)
-        return Profiles(**one | {"step_m": 5.0, "depth_m": np.full((1, width), depth_m), "is_filled": filled})
-
-    both = sections.stack([profiles(2, 10.0), profiles(4, 20.0)])
-    np.testing.assert_array_equal(both.depth_m, [[10, 10, np.nan, np.nan], [20, 20, 20, 20]])
-    np.testing.assert_array_equal(both.is_filled, [[1, 1, 0, 0], [1, 1, 1, 1]])
-    assert both.step_m == 5.0
-
-
 # ---- failures
 
 
-def die(_section):
-    """Stands in for a section whose process is killed."""
-    os._exit(9)
+def die(section):
+    """Stands in for a section whose process is killed; the first one is done by this process."""
+    if multiprocessing.parent_process() is not None:
+        os._exit(9)
+    return pack_section(section)
 
 
 def test_dead_worker_ends_in_one_sentence_with_the_cure(three_sections, monkeypatch):
-    monkeypatch.setattr(pipeline, "screen_section", die)
+    monkeypatch.setattr(pipeline, "pack_section", die)
     with pytest.raises(
         ShelfmapError, match=r"^a worker process died .*; run again with fewer workers or a larger"
     ) as e:
@@ -287,7 +268,7 @@ def test_dead_worker_ends_in_one_sentence_with_the_cure(three_sections, monkeypa
 
 
 class Broken(Executor):
-    def map(self, *_):
+    def submit(self, *_):
         raise BrokenExecutor("gone")
 
 
@@ -305,7 +286,7 @@ def test_failed_section_is_raised_and_the_older_output_stays(three_sections, mon
     def stop(_section):
         raise fault
 
-    monkeypatch.setattr(pipeline, "screen_section", stop)
+    monkeypatch.setattr(pipeline, "pack_section", stop)
     with pytest.raises(fault):
         screen(three_sections, overwrite=True)
     assert path.read_bytes() == before

@@ -14,9 +14,9 @@ from scipy.stats import spearmanr
 from utils_grid import DATA
 
 from shelfmap.geodesy import distance_bearing
-from shelfmap.layers import read_table, read_vector
 from shelfmap.pipeline import screen
 from shelfmap.settings import Settings
+from shelfmap.vectors import read_table, read_vector
 from shelfmap.words import STATUSES
 
 pytestmark = pytest.mark.real

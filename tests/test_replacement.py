@@ -3,6 +3,7 @@
 import os
 import sqlite3
 from contextlib import closing
+from functools import partial
 from pathlib import Path
 
 import pytest
@@ -56,17 +57,36 @@ def test_a_failure_leaves_the_old_file_bit_for_bit_and_no_part(tmp_path):
     assert names(tmp_path) == ["a.gpkg"]
 
 
-def test_two_runs_that_write_the_same_file_do_not_meet(tmp_path):
-    """With one part name for both, each removed the other's part and both failed."""
+def test_a_second_run_to_the_same_file_is_refused_and_does_no_harm(tmp_path):
+    """With one part for both, each would remove the other's."""
     target = tmp_path / "a.gpkg"
     with replacing(target) as first:
         first.write_text("first")
-        with replacing(target) as second:
-            second.write_text("second")
-        assert target.read_text() == "second"
-        assert first.read_text() == "first"
+        with pytest.raises(LayerError, match=r"a\.gpkg: another run is making it right now; wait for that"):
+            replace(target)
     assert target.read_text() == "first"
+    replace(target)
+    assert target.read_text() == "new"
     assert names(tmp_path) == ["a.gpkg"]
+
+
+def test_what_a_killed_run_left_is_taken_over(tmp_path):
+    folder = tmp_path / ".a.gpkg.unfinished"
+    folder.mkdir()
+    for name in ("lock", "a.gpkg", "a.gpkg-journal"):
+        (folder / name).write_text("half")
+    with replacing(tmp_path / "a.gpkg") as part:
+        assert names(folder) == ["lock"]
+        part.write_text("new")
+    assert names(tmp_path) == ["a.gpkg"]
+
+
+def test_files_that_are_not_ours_keep_their_folder(tmp_path):
+    folder = tmp_path / ".a.gpkg.unfinished"
+    folder.mkdir()
+    (folder / "mine.txt").write_text("precious")
+    replace(tmp_path / "a.gpkg")
+    assert names(folder) == ["mine.txt"]
 
 
 @pytest.mark.parametrize("name", ["a.gpkg.part.gpkg", "a.gpkg.part", "a.gpkg.part.gpkg-journal", "a.gpkg.bak"])
@@ -95,8 +115,9 @@ def test_a_file_that_another_program_holds_is_not_replaced(tmp_path, mode, readi
             other.execute("BEGIN")
         assert other.execute("SELECT a FROM t").fetchall() == [(1,)]
         before = target.read_bytes()
-        with pytest.raises(LayerError, match=r"a\.gpkg is in use by another program \(.*\); close it there"):
-            replace(target)
+        for attempt in (replace, partial(check_target, overwrite=True)):
+            with pytest.raises(LayerError, match=r"a\.gpkg is in use by another program \(.*\); close it there"):
+                attempt(target)
         assert target.read_bytes() == before
         assert other.execute("SELECT a FROM t").fetchall() == [(1,)]
     assert names(tmp_path) == ["a.gpkg"]

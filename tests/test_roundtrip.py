@@ -8,9 +8,9 @@ from utils_pipeline import SHELF, settings_for, small_coast
 
 from shelfmap.demo import write_demo
 from shelfmap.errors import CoastError, LayerError, SettingsError, ShelfmapWarning, TransectError
-from shelfmap.layers import read_table, read_vector
 from shelfmap.pipeline import screen, write_coast, write_transects
 from shelfmap.settings import Settings
+from shelfmap.vectors import read_table, read_vector
 
 NUMBERS = ("shelf_width_km", "mean_depth_m", "period1_h", "q1", "gain_m2", "damped_gain_m2")
 

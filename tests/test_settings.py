@@ -118,7 +118,11 @@ def test_all_faults_are_named_at_once_each_on_its_line():
 @pytest.mark.parametrize(
     ("tables", "message"),
     [
-        ({"grid": {"path": ["a.tif", "b.tif"]}}, "grid.path = .*: must be the name of a file, in quotes"),
+        ({"grid": {"path": 3}}, "grid.path: path = 3: must be the name of a file, in quotes, or a list of such names"),
+        ({"grid": {"path": ["a.tif", 3]}}, r"path = \['a.tif', 3\]: must be the name of a file, in quotes, or a list"),
+        ({"grid": {"path": []}}, r"path = \[\]: the list is empty; name at least one file"),
+        ({"grid": {"path": ["a.tif", ""]}}, "grid.path: path is empty"),
+        ({"grid": {"path": ["a.tif", "b.tif", "a.tif"]}}, "path names 'a.tif' twice; name each file once"),
         (
             {"grid": {"void_is_land": True}, "coast": {"level_m": 10}},
             "mend\n  grid.void_is_land with coast.level_m = 10",
@@ -241,6 +245,16 @@ def test_any_content_is_either_taken_or_refused_as_settings(content):
     else:
         again = Settings.from_dict(json.loads(found.model_dump_json()))
         assert again == found
+
+
+def test_several_grids_keep_their_order_and_stand_in_the_folder(tmp_path):
+    """From TOML and back from JSON; one file or many, `paths` has them all."""
+    (tmp_path / "a.toml").write_text('[grid]\npath = ["z.tif", "/abs/a.nc", "b/c.tif"]\n', encoding="utf-8")
+    found = Settings.from_toml(tmp_path / "a.toml")
+    names = [path.as_posix() for path in found.grid.paths]
+    assert names == [f"{tmp_path.as_posix()}/z.tif", "/abs/a.nc", f"{tmp_path.as_posix()}/b/c.tif"]
+    assert Settings.from_dict(json.loads(found.model_dump_json())) == found
+    assert read(grid={"path": "one.tif"}).grid.paths == (read(grid={"path": "one.tif"}).grid.path,)
 
 
 def test_null_characters_and_endless_nesting_are_one_sentence(tmp_path):

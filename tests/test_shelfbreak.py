@@ -10,6 +10,7 @@ from shelfmap._kernels import breaks as kernel
 from shelfmap.pipeline import screen
 from shelfmap.settings import Settings, ShelfBreakSettings
 from shelfmap.shelfbreak import ShelfBreaks, find_shelf_breaks, measure_picked_breaks
+from shelfmap.vectors import read_table
 
 STEPS_M = [200.0, 500.0, 1000.0, 2000.0, 5000.0, 10_000.0]
 DEFAULT = ShelfBreakSettings()
@@ -226,7 +227,8 @@ def test_real_shelves_break_at_depths_shelves_have(repository, tmp_path, window)
             "output": {"path": str(tmp_path / "out.gpkg"), "profiles": False, "response_curves": False},
         })
     )  # fmt: skip
-    depth_m = run.screened.breaks.depth_m[run.screened.status == "ok"]
+    table = read_table(run.path, "transects")
+    depth_m = table["break_depth_m"][table["status"] == "ok"]
     assert len(depth_m) > 30
     assert 40 < np.median(depth_m) < 300
     assert depth_m.min() >= 20

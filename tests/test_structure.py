@@ -16,10 +16,11 @@ PACKAGE = Path(shelfmap.__file__).parent
 
 #: Modules from the ground up; a module may import those before it. `_kernels` stands for all compiled loops.
 ORDER = [
-    "errors", "constants", "words", "settings", "geodesy", "_kernels", "vertical", "localfiles", "rasterfile", "grid",
-    "inspection", "rasters", "synthetic", "demo", "basins", "chains", "coast", "transects", "profiles", "shelfbreak",
-    "deepsea", "modes", "response", "index", "assess", "columns", "antimeridian", "replacement", "vectors", "layers",
-    "tables", "inputs", "provenance", "sections", "pipeline", "cli", "__main__",
+    "errors", "workers", "constants", "words", "settings", "geodesy", "_kernels", "vertical", "localfiles",
+    "rasterfile", "lattice", "sheets", "grid", "inspection", "rasters", "synthetic", "demo", "basins", "chains",
+    "closing", "coast", "transects", "profiles", "shelfbreak", "deepsea", "modes", "response", "index", "assess",
+    "columns", "antimeridian", "replacement", "checkpoint", "vectors", "layers", "geopackage", "tables", "stations",
+    "inputs", "provenance", "sections", "laying", "pipeline", "cli", "__main__",
 ]  # fmt: skip
 
 #: Libraries that only these modules import.
@@ -27,16 +28,17 @@ ONLY_HERE = {
     "pyproj": {"geodesy"},
     "numba": {"_kernels"},
     "rasterio": {"rasterfile", "rasters"},
-    "contourpy": {"coast", "chains"},
-    "geopandas": {"layers", "vectors"},
-    "pyogrio": {"layers", "vectors"},
-    "pyarrow": {"layers", "vectors"},
-    "sqlite3": {"layers", "replacement", "vectors"},
+    "contourpy": {"closing"},
+    "geopandas": {"vectors"},
+    "pyogrio": {"geopackage", "vectors"},
+    "pyarrow": {"layers", "geopackage"},
+    "sqlite3": {"geopackage", "replacement"},
     "pydantic": {"settings"},
     "tomllib": {"settings"},
     "click": {"cli"},
-    "concurrent": {"pipeline"},
-    "multiprocessing": {"pipeline"},
+    "concurrent": {"workers", "pipeline"},
+    "multiprocessing": {"workers"},
+    "distributed": {"workers"},
 }
 
 TOP_LEVEL = {"README.md", "DEVELOPERS.md", "CHANGELOG.md", "LICENSE", "pyproject.toml", "shelfmap", "tests"} | {

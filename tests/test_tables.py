@@ -1,18 +1,18 @@
 """Columns of a run: all filled, units turned, remarks and empty values where they belong."""
 
 from dataclasses import replace
+from types import SimpleNamespace
 
 import numpy as np
-import pandas as pd
 import pytest
+from utils_pipeline import layers_of, screened_of
 
 from shelfmap import index, words
 from shelfmap.columns import columns_of
 from shelfmap.demo import write_demo
 from shelfmap.geodesy import distance_bearing
-from shelfmap.pipeline import Run, screen
 from shelfmap.settings import Settings
-from shelfmap.tables import result_layers, waves_of
+from shelfmap.tables import waves_of
 
 
 @pytest.fixture(scope="module")
@@ -21,9 +21,10 @@ def settings(tmp_path_factory) -> Settings:
 
 
 @pytest.fixture(scope="module")
-def run(settings) -> Run:
+def run(settings):
     """The demo, which holds every case; two seconds, and read only."""
-    return screen(settings)
+    coast, screened = screened_of(settings)
+    return SimpleNamespace(coast=coast, screened=screened)
 
 
 @pytest.fixture(scope="module")
@@ -32,7 +33,7 @@ def layers(run, settings):
 
 
 def tables(screened, run, settings):
-    return {layer.name: pd.DataFrame(layer.columns) for layer in result_layers(screened, run.coast, settings)}
+    return layers_of(screened, run.coast, settings)
 
 
 def test_every_column_is_filled_somewhere_and_empty_only_where_that_has_a_meaning(layers, settings):
@@ -200,11 +201,3 @@ def test_the_response_has_a_row_for_each_wave_of_each_transect_computed_and_its_
     assert curve["gain"].notna().all()
     assert curve["index"].isna().all()
     assert (curve["wave"] == "").all()
-
-
-def test_tables_not_asked_for_are_not_made(run, settings):
-    output = settings.output.model_copy(update={"profiles": False, "response_curves": False})
-    screened = replace(run.screened, curve=None)
-    made = tables(screened, run, settings.model_copy(update={"output": output}))
-    assert list(made) == ["coast_index", "transects", "shelf_breaks", "response"]
-    assert "curve" not in set(made["response"]["kind"])

@@ -13,7 +13,7 @@ from shelfmap.coast import Coast, CoastLine
 from shelfmap.errors import TransectError
 from shelfmap.geodesy import distance_bearing
 from shelfmap.settings import CoastSettings, TransectSettings
-from shelfmap.transects import coast_piece, crossing_transects, lay_transects, transects_from_lines
+from shelfmap.transects import coast_pieces, crossing_transects, lay_transects, transects_from_lines
 
 DEGREE_M = 111_319.490793  # of the equator: a pi / 180
 
@@ -86,7 +86,7 @@ def test_pieces_cover_the_coast_once():
     """Pieces meet end to start and sum to the coast; vertices inside a piece are kept."""
     coast = coast_of(([12, 11.9, 11.2, 10], [0, 0.2, -0.1, 0]))
     t = lay_transects(coast, TransectSettings(spacing_km=40), CoastSettings())
-    pieces = [coast_piece(coast, t, row) for row in range(len(t))]
+    pieces = [shapely.get_coordinates(piece) for piece in coast_pieces(coast, t)]
     for one, after in pairwise(pieces):
         np.testing.assert_allclose(one[-1], after[0], atol=1e-9)
     whole = np.concatenate([pieces[0], *[piece[1:] for piece in pieces[1:]]])
@@ -139,9 +139,10 @@ def test_drawn_lines_stand_for_the_coast_halfway_to_their_neighbours():
     np.testing.assert_allclose(t.piece_start_m[1], 0.9 * DEGREE_M - 25e3, atol=1.0)
     assert np.isnan([t.coast_m[3], t.piece_start_m[3], t.piece_stop_m[3]]).all()
     coast = coast_of(EQUATOR)
-    assert len(coast_piece(coast, t, 3)) == 0
+    pieces = coast_pieces(coast, t)
+    assert pieces[3] is None
     # the first would begin 14 km before the coast does
-    np.testing.assert_allclose(coast_piece(coast, t, 0)[0], [12.0, 0.0], atol=1e-9)
+    np.testing.assert_allclose(shapely.get_coordinates(pieces[0])[0], [12.0, 0.0], atol=1e-9)
 
 
 def test_drawn_lines_attach_to_the_nearest_coast_within_reach():

@@ -28,6 +28,7 @@ POLE_SHARE_MIN, POLE_SHARE_MAX = 0.5, 1.6  # a pole further from its node mode b
 NEWTON_TURNS_MAX = 60
 HIGHEST_MU = 1e12  # 1/s^2, far above any wave: ends the search where depths are absurd
 NEWTON_TOLERANCE = 1e-11
+FOLLOW_TOLERANCE = 1e-3
 SAME_POLE = 1e-6
 LEAST_LOSS = 1e-9  # a mode that loses less has no Q that numbers of 16 digits could tell
 FRICTION_SHARES = (0.1, 0.25, 0.5, 0.75, 1.0)
@@ -210,28 +211,40 @@ def find_poles(fine: Cells, coarse: Cells, speed: float, starts: FloatArray, kap
 
 
 @njit(cache=True, error_model="numpy")
+def damped_newton(
+    fine: Cells, coarse: Cells, speed: float, f2: float, friction_m_s: float, start: complex, tolerance: float
+) -> complex:
+    """Newton from `start` for a damped pole; NaN where it leaps, does not settle or settles on pure decay.
+
+    On the coarse cells alone where these are given for the fine ones too.
+    """
+    omega, is_coarse = start, fine.inertia_s2_m.size == coarse.inertia_s2_m.size
+    for _ in range(NEWTON_TURNS_MAX):
+        value, slope = march_damped_pole(coarse, omega, f2, friction_m_s, speed)
+        if not is_coarse:
+            value_f, slope_f = march_damped_pole(fine, omega, f2, friction_m_s, speed)
+            value, slope = value_f + (value_f - value) / 3.0, slope_f + (slope_f - slope) / 3.0
+        if slope == 0.0 or not math.isfinite(abs(slope)):
+            break
+        step = value * inverse(slope)
+        omega -= step
+        if not abs(omega - start) <= FRICTION_LEAP_MAX * abs(start):
+            break
+        if abs(step) <= tolerance * abs(omega):
+            return omega if omega.real > 0.0 else complex(math.nan, math.nan)
+    return complex(math.nan, math.nan)
+
+
+@njit(cache=True, error_model="numpy")
 def damp_pole(fine: Cells, coarse: Cells, speed: float, f2: float, friction_m_s: float, pole: complex) -> complex:
-    """Follow a frictionless pole omega to full friction; NaN where it is lost or turns into pure decay."""
+    """Follow a frictionless pole omega to full friction; NaN where it is lost or turns into pure decay.
+
+    Only the last step has to be exact: those before it, on the coarse cells, lead to the right pole.
+    """
     omega = pole
-    for share in FRICTION_SHARES:
-        last = omega
-        settled = False
-        for _ in range(NEWTON_TURNS_MAX):
-            value_f, slope_f = march_damped_pole(fine, omega, f2, share * friction_m_s, speed)
-            value_c, slope_c = march_damped_pole(coarse, omega, f2, share * friction_m_s, speed)
-            slope = slope_f + (slope_f - slope_c) / 3.0
-            if slope == 0.0 or not math.isfinite(abs(slope)):
-                break
-            step = (value_f + (value_f - value_c) / 3.0) * inverse(slope)
-            omega -= step
-            if not abs(omega - last) <= FRICTION_LEAP_MAX * abs(last):
-                break
-            if abs(step) <= NEWTON_TOLERANCE * abs(omega):
-                settled = omega.real > 0.0
-                break
-        if not settled:
-            return complex(math.nan, math.nan)
-    return omega
+    for share in FRICTION_SHARES[:-1]:
+        omega = damped_newton(coarse, coarse, speed, f2, share * friction_m_s, omega, FOLLOW_TOLERANCE)
+    return damped_newton(fine, coarse, speed, f2, friction_m_s, omega, NEWTON_TOLERANCE)
 
 
 @njit(cache=True, error_model="numpy")

@@ -62,18 +62,20 @@ def locate(index: float, first: int, n: int, period: int) -> tuple[int, float]:
 
 @njit(cache=True)
 def bilinear_cell(
-    depth_m: NDArray[np.float32], row: int, col: int, next_row: int, next_col: int, up: float, right: float
+    depth_m: NDArray[np.float32], row: int, next_row: int, col: int, next_col: int, up: float, right: float
 ) -> float:
     """Weighted mean of four cells without the missing ones; NaN where these carry more than half the weight.
+
+    The depths are flat, row after row: `row` and `next_row` say where in them a row begins.
 
     ``sum(v m w) / sum(m w)`` with m = 1 for a value and 0 for NaN: at a cell's centre the cell's own value
     comes back exactly, whatever its neighbours hold.
     """
     total = 0.0
     weight = 0.0
-    for i, w_row in ((row, 1.0 - up), (next_row, up)):
+    for begin, w_row in ((row, 1.0 - up), (next_row, up)):
         for j, w_col in ((col, 1.0 - right), (next_col, right)):
-            value = float(depth_m[i, j])
+            value = float(depth_m[begin + j])
             w = w_row * w_col
             if w > 0.0 and value == value:  # noqa: PLR0124 - not NaN
                 total += value * w
@@ -110,6 +112,7 @@ def sample_points(
         Filled: metres, NaN unless the state is INSIDE.
     """
     n_rows, n_cols = depth_m.shape
+    flat = depth_m.ravel()
     for k in range(row.size):
         out_depth_m[k] = np.nan
         out_state[k] = OUTSIDE
@@ -118,5 +121,5 @@ def sample_points(
         if i < 0 or j < 0:
             continue
         next_col = j + 1 if j + 1 < n_cols else 0
-        out_depth_m[k] = bilinear_cell(depth_m, i, j, min(i + 1, n_rows - 1), next_col, up, right)
+        out_depth_m[k] = bilinear_cell(flat, i * n_cols, min(i + 1, n_rows - 1) * n_cols, j, next_col, up, right)
         out_state[k] = INSIDE if out_depth_m[k] == out_depth_m[k] else VOID

@@ -23,48 +23,52 @@ _OUTSIDE = -1.0e30
 
 
 class Track(NamedTuple):
-    """A transect on a window of the grid."""
+    """A transect on windows of sheets, those that give depths first in front; a sheet may have several windows."""
 
     depth_m: F32
-    """(rows, cols) window, NaN void."""
-    row0: int
-    """Row of the grid that the window begins with."""
-    col0: int
-    """Column of the grid that the window begins with."""
-    wrap_cols: int
-    """Columns round the globe; 0 where the grid does not close."""
-    node_m: F64
-    """(k,) distance of each node from the station, metres, rising."""
-    node_row: F64
-    """(k,) grid index of each node."""
-    node_col: F64
-    """(k,) grid index of each node."""
+    """Windows one after the other, row by row; NaN void."""
+    layout: I64
+    """(s, 6) of each window: where it begins in `depth_m`, its rows and columns, the row and the column of the sheet
+    that it begins with, columns of the sheet round the globe (0 where it does not close)."""
+    node: F64
+    """(1 + 2 s, k) distance of each node from the station, metres, rising; then its row and its column on the sheet of
+    each window, NaN where that is far."""
 
 
 @njit(cache=True)
 def _depth_at(track: Track, at_m: float) -> float:
-    """Depth on a transect at a distance from its station; NaN in a void, `_OUTSIDE` beyond grid or transect."""
-    depth, node_m = track.depth_m, track.node_m
-    n = node_m.shape[0]
-    if at_m < node_m[0] or at_m > node_m[n - 1]:
+    """Depth on a transect at a distance from its station, from the first sheet that has one there.
+
+    NaN where one or more sheets lie there but none has a depth; `_OUTSIDE` beyond all sheets or the transect.
+    """
+    node, n = track.node, track.node.shape[1]
+    if at_m < node[0, 0] or at_m > node[0, n - 1]:
         return _OUTSIDE
     low, high = 0, n - 1
     while high - low > 1:
         middle = (low + high) // 2
-        if node_m[middle] <= at_m:
+        if node[0, middle] <= at_m:
             low = middle
         else:
             high = middle
-    part = (at_m - node_m[low]) / (node_m[high] - node_m[low])
-    n_rows, n_cols = depth.shape
-    i, up = locate(track.node_row[low] + part * (track.node_row[high] - track.node_row[low]), track.row0, n_rows, 0)
-    j, right = locate(
-        track.node_col[low] + part * (track.node_col[high] - track.node_col[low]), track.col0, n_cols, track.wrap_cols
-    )
-    if i < 0 or j < 0:
-        return _OUTSIDE
-    next_col = j + 1 if j + 1 < n_cols else 0  # on the last column it weighs nothing, or the grid closes
-    return float(bilinear_cell(depth, i, j, min(i + 1, n_rows - 1), next_col, up, right))
+    part = (at_m - node[0, low]) / (node[0, high] - node[0, low])
+    nothing = _OUTSIDE
+    for sheet in range(track.layout.shape[0]):
+        begin, n_rows, n_cols = track.layout[sheet, 0], track.layout[sheet, 1], track.layout[sheet, 2]
+        k = 1 + 2 * sheet
+        row = node[k, low] + part * (node[k, high] - node[k, low])
+        col = node[k + 1, low] + part * (node[k + 1, high] - node[k + 1, low])
+        i, up = locate(row, track.layout[sheet, 3], n_rows, 0)
+        j, right = locate(col, track.layout[sheet, 4], n_cols, track.layout[sheet, 5])
+        if i < 0 or j < 0:
+            continue
+        next_col = j + 1 if j + 1 < n_cols else 0  # on the last column it weighs nothing, or the grid closes
+        south, north = begin + i * n_cols, begin + min(i + 1, n_rows - 1) * n_cols
+        d = float(bilinear_cell(track.depth_m, south, north, j, next_col, up, right))
+        if not np.isnan(d):
+            return d
+        nothing = np.nan
+    return nothing
 
 
 @njit(cache=True)
@@ -85,9 +89,11 @@ def _bisect(track: Track, dry_m: float, wet_m: float, hair_m: float) -> float:
 @njit(cache=True)
 def seek_landward(track: Track, look_m: float, hair_m: float) -> tuple[float, int]:
     """Where the shore lies behind a station in the water; the station itself where the transect meets none."""
-    look_m = min(look_m, -0.25 * track.node_m[0])  # looks, however coarse the grid; none where the transect starts here
+    look_m = min(
+        look_m, -0.25 * track.node[0, 0]
+    )  # looks, however coarse the grid; none where the transect starts here
     at_m = -look_m
-    while look_m > 0.0 and at_m >= track.node_m[0]:
+    while look_m > 0.0 and at_m >= track.node[0, 0]:
         d = _depth_at(track, at_m)
         if d == _OUTSIDE or np.isnan(d):
             break
@@ -150,7 +156,7 @@ def find_shore(track: Track, seek_m: float, look_m: float, short: int, hair_m: f
 @njit(cache=True)
 def sample_seaward(track: Track, shore_m: float, at_shore: bool, step_m: float, out: F64) -> tuple[int, int]:
     """Depths every `step_m` from the shore; how many lie on the transect and in the grid, and why they stop."""
-    last_m = track.node_m[track.node_m.shape[0] - 1]
+    last_m = track.node[0, track.node.shape[1] - 1]
     last_m = min(last_m, shore_m + last_m)  # a shore landward of the station makes no transect longer
     for j in range(out.shape[0]):
         at_m = shore_m + j * step_m
@@ -250,12 +256,8 @@ def mend_gaps(
 @njit(cache=True)
 def trace_rows(
     depth: F32,
-    row0: int,
-    col0: int,
-    wrap_cols: int,
-    node_m: F64,
-    node_row: F64,
-    node_col: F64,
+    layout: I64,
+    node: F64,
     n_nodes: I64,
     step_m: float,
     seek_m: F64,
@@ -272,15 +274,15 @@ def trace_rows(
     out_land_m: F64,
     out_counts: I64,
 ) -> None:
-    """Trace every transect of a window; rows are independent of each other.
+    """Trace every transect on windows of sheets, see `Track`; rows are independent of each other.
 
+    `node` is (n, 1 + 2 s, k), of which the first `n_nodes` of each transect count.
     `out_counts` holds bridged, filled and despiked samples by row; `out_land_m` the middle of the land a profile ends
     at, metres from the shore.
     """
     work = np.empty(out_depth_m.shape[1])
-    for k in range(node_m.shape[0]):
-        nodes = slice(n_nodes[k])
-        track = Track(depth, row0, col0, wrap_cols, node_m[k, nodes], node_row[k, nodes], node_col[k, nodes])
+    for k in range(node.shape[0]):
+        track = Track(depth, layout, node[k, :, : n_nodes[k]])
         shore_m, start = find_shore(track, seek_m[k], 0.5 * step_m, short, hair_m)
         out_shore_m[k], out_start[k] = shore_m, start
         if start > IN_WATER:

@@ -9,15 +9,17 @@ import numpy as np
 import pytest
 
 from shelfmap import pipeline
+from shelfmap.geopackage import GeoPackage
 from shelfmap.grid import open_grid
 from shelfmap.inputs import make_coast, make_transects
-from shelfmap.layers import write_layers
+from shelfmap.laying import Laid
 from shelfmap.pipeline import screen
+from shelfmap.profiles import step_of
 from shelfmap.rasters import write_geotiff
-from shelfmap.sections import sample_section, screen_section, stack
+from shelfmap.sections import pack_section, sample_section
 from shelfmap.settings import Settings
 from shelfmap.synthetic import shelf_profile, straight_coast
-from shelfmap.tables import result_layers
+from shelfmap.vectors import read_table
 
 CELL_DEG = 15 / 3600
 
@@ -57,11 +59,24 @@ def test_stages(settings, capsys, tmp_path):
     source = timed("grid", open_grid, settings.grid)
     coast = timed("coast", make_coast, source, settings)
     transects = timed("transects", make_transects, source, coast, settings)
-    sections = pipeline._sections(source, coast, transects, settings)
+    laid = Laid(
+        source=source,
+        stamps=(),
+        content="",
+        coast=coast,
+        transects=transects,
+        step_m=step_of(source, settings.transects),
+    )
+    sections = list(pipeline._sections(laid, settings))
     timed("profiles", lambda: [sample_section(section) for section in sections])
-    parts = timed("profiles to index", lambda: [screen_section(section) for section in sections])
-    layers = timed("layers", lambda: result_layers(stack(parts), coast, settings))
-    timed("writing", write_layers, tmp_path / "out.gpkg", layers)
+    packed = timed("profiles to rows", lambda: [pack_section(section) for section in sections])
+
+    def write():
+        file = GeoPackage(tmp_path / "out.gpkg", settings.output.crs, tmp_path / "out.gpkg")
+        columns = pipeline._collect(iter(packed), len(packed), file, None)
+        pipeline._finish(file, columns, laid, settings)
+
+    timed("writing", write)
     whole = sum(took.values()) - took["profiles"]
     with capsys.disabled():
         print(f"\n{time.strftime('%F')} {len(transects)} transects, {source.n_rows * source.n_cols:.2g} cells")  # noqa: T201
@@ -77,7 +92,7 @@ def test_two_processes_against_one(settings, capsys):
         start = time.perf_counter()
         run = screen(settings, overwrite=True, workers=workers)
         took.append(time.perf_counter() - start)
-        gains.append(run.screened.waves.damped_gain)
+        gains.append(read_table(run.path, "transects")["damped_gain_m2"])
     np.testing.assert_array_equal(*gains)
     with capsys.disabled():
         print(f"\n{time.strftime('%F')} 1 worker {took[0]:.1f} s, 2 workers {took[1]:.1f} s: {took[0] / took[1]:.2f}x")  # noqa: T201
