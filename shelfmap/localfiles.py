@@ -14,7 +14,7 @@ from pathlib import Path
 from typing import Final
 from xml.etree import ElementTree as ET
 
-__all__ = ["CLOSED", "archive_of", "local_file", "why_refused"]
+__all__ = ["CLOSED", "archive_of", "local_file", "why_refused", "why_unnameable"]
 
 #: Options of GDAL under which it reaches no network, runs no code of a file's, and loads nothing a file names.
 CLOSED: Final[Mapping[str, str]] = {
@@ -43,6 +43,8 @@ _SUBDATASET: Final = re.compile(r'[A-Za-z0-9_]+:(?:\d+:)?(?:"([^"]+)"|([^:]+))(?
 _NO_FILES: Final = ("srs", "sourcesrs", "targetsrs", "layersrs", "gcplist", "description", "unittype", "categorynames")
 _INNER_FILE: Final = ("overview_file", "mask_file")
 
+#: Characters at which pyogrio cuts a path (measured with 0.13).
+_CUTTING: Final = (";", "!", "\n", "\r", "\t")
 _HEAD_BYTES: Final = 4096
 _MOST_XML_BYTES: Final = 100_000_000
 _MOST_MEMBERS: Final = 10_000
@@ -93,6 +95,23 @@ def local_file(path: Path, setting: str) -> tuple[Path | None, str]:
     if _NETWORK.search(text) and not _ARCHIVE.fullmatch(text):
         return None, "network paths are not opened in this version; download the data and name the local file"
     return None, f"no such file; check {setting}, which is relative to the settings file"
+
+
+def why_unnameable(path: Path) -> str | None:
+    """Why the library of vectors takes the name of a file for an address and would cut it; None where it does not.
+
+    Examples
+    --------
+    >>> why_unnameable(Path("/data/a;b.gpkg"))
+    "has ';' in its path, which the library of vectors takes for part of an address; rename the file or folder"
+    """
+    found = next((c for c in _CUTTING if c in str(path.absolute())), None)
+    if found is None:
+        return None
+    return (
+        f"has {found!r} in its path, which the library of vectors takes for part of an address; "
+        "rename the file or folder"
+    )
 
 
 def why_refused(path: Path) -> str | None:

@@ -16,7 +16,7 @@ from numpy.typing import NDArray
 
 from shelfmap.errors import GridError, LayerError, ShelfmapWarning
 from shelfmap.geodesy import Projection
-from shelfmap.localfiles import CLOSED, archive_of, local_file, why_refused
+from shelfmap.localfiles import CLOSED, archive_of, local_file, why_refused, why_unnameable
 
 __all__ = ["VectorData", "read_table", "read_vector"]
 
@@ -131,7 +131,7 @@ def _local_name(path: Path) -> str:
     if file is None:
         raise LayerError(f"vector file {path}: {why}")
     try:
-        refused = why_refused(file)
+        refused = why_unnameable(path) or why_refused(file)
     except OSError as error:
         raise LayerError(f"vector file {path} cannot be opened ({error.strerror}); make it readable") from error
     if refused is not None:

@@ -1,6 +1,8 @@
 """Coasts, transects and breaks drawn by hand, by people and by programs: taken, left out with a word, or refused."""
 
 import json
+import os
+import re
 import sqlite3
 import warnings
 from contextlib import closing
@@ -164,7 +166,7 @@ REFUSED = {
     ),
     "one point of a line": (
         lambda folder: geojson(folder, {"type": "LineString", "coordinates": [[1, 40]]}),
-        "holds no|neither",
+        "cannot be read",
     ),
     "no numbers": (
         lambda folder: geojson(folder, {"type": "LineString", "coordinates": [["a"], []]}),
@@ -257,6 +259,7 @@ def test_a_view_that_never_ends_is_refused(tmp_path):
 
 # ---- names of all kinds
 
+#: A semicolon, an exclamation mark and a line break in file names are refused, see below.
 NAMES = [
     'quo"te',
     "apo'strophe",
@@ -271,7 +274,7 @@ NAMES = [
 @pytest.mark.parametrize("name", NAMES)
 def test_names_come_through_verbatim(tmp_path, name):
     """Title, file, layer, column and attribute of that name; the output stays a sound GeoPackage that holds it."""
-    file_name = name.replace("/", "_").replace("\n", "_")
+    file_name = re.sub(r"[/\n;!]", "_", name)
     folder = tmp_path / f"d {file_name}"
     folder.mkdir()
     collection = {
@@ -310,3 +313,34 @@ def test_names_come_through_verbatim(tmp_path, name):
     for verb in ("coast", "transects"):
         invoke(verb, folder / "s.toml", "-o", folder / f"{verb}.gpkg", codes=(0,))
     invoke("inspect", grid, "--positive", "up", codes=(0,))
+
+
+@pytest.mark.parametrize("name", ["a;b", "a!b", "x.zip!b", "a\nb", "a\tb"])
+def test_file_names_that_would_be_cut_are_refused_before_any_work(tmp_path, name):
+    """The library of vectors would write or read another file."""
+    path = written(tmp_path, [TRANSECT]).rename(tmp_path / f"{name}.gpkg")
+    _, said = screen(tmp_path, "transects", path, codes=(1,))
+    assert "rename the file" in said
+    good = written(tmp_path, [TRANSECT])
+    screen(tmp_path, "transects", good, codes=(0,))
+    before = sorted(tmp_path.iterdir())
+    for verb in ("screen", "coast", "transects"):
+        result = invoke(verb, tmp_path / "s.toml", "-o", tmp_path / f"new {name}.gpkg", codes=(1,))
+        assert "takes for part of an address" in result.stderr
+        assert sorted(tmp_path.iterdir()) == before
+
+
+@pytest.mark.parametrize(
+    "name", ["x" * 300 + ".gpkg", "x" * 210 + ".gpkg", "é" * 120 + ".gpkg", "y/" * 2000 + "x.gpkg"]
+)
+def test_output_names_too_long_are_refused(tmp_path, name):
+    screen(tmp_path, "transects", written(tmp_path, [TRANSECT]), codes=(0,))
+    result = invoke("screen", tmp_path / "s.toml", "-o", tmp_path / name, codes=(1,))
+    assert "too long for the disk" in result.stderr
+
+
+def test_output_that_is_a_pipe_is_refused(tmp_path):
+    screen(tmp_path, "transects", written(tmp_path, [TRANSECT]), codes=(0,))
+    os.mkfifo(tmp_path / "pipe.gpkg")
+    result = invoke("screen", tmp_path / "s.toml", "-o", tmp_path / "pipe.gpkg", "--overwrite", codes=(1,))
+    assert "is a pipe or a device" in result.stderr
