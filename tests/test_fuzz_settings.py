@@ -11,7 +11,7 @@ import pytest
 from hypothesis import HealthCheck, given
 from hypothesis import settings as hypothesis_settings
 from utils_fuzz import assert_plain, assert_sound, from_schema, invoke, mutated, toml_text
-from utils_pipeline import SHELF
+from utils_pipeline import SHELF, small_coast
 
 from shelfmap.errors import SettingsError
 from shelfmap.rasters import write_geotiff
@@ -21,6 +21,8 @@ from shelfmap.synthetic import straight_coast
 SCHEMA = Settings.model_json_schema()
 EXAMPLES = int(os.environ.get("SHELFMAP_FUZZ", "0"))
 BOUNDED = {"deadline": None, "derandomize": not EXAMPLES, "suppress_health_check": list(HealthCheck)}
+
+LEAST_SPACING_KM = 0.5
 
 CONTENTS = mutated(from_schema(SCHEMA, SCHEMA["$defs"]))
 
@@ -48,6 +50,15 @@ def completed(content, grid):
     return content
 
 
+def unhurried(content):
+    """The same with no more than some hundred stations: legal spacings down to 1 m take their time, 2 ms a station."""
+    table = content["transects"]
+    spacing = table.get("spacing_km") if isinstance(table, dict) else None
+    if isinstance(spacing, int | float) and 0.001 <= spacing < LEAST_SPACING_KM:
+        table["spacing_km"] = LEAST_SPACING_KM
+    return content
+
+
 @hypothesis_settings(max_examples=EXAMPLES or 300, **BOUNDED)
 @given(content=CONTENTS)
 def test_settings_are_taken_or_refused_in_plain_words(content):
@@ -68,7 +79,7 @@ def test_settings_are_taken_or_refused_in_plain_words(content):
 @given(content=CONTENTS)
 def test_a_run_ends_in_plain_words_or_with_a_sound_output(content, grid, tmp_path_factory):
     folder = tmp_path_factory.mktemp("run")
-    (folder / "s.toml").write_text(toml_text(completed(content, grid)), encoding="utf-8")
+    (folder / "s.toml").write_text(toml_text(unhurried(completed(content, grid))), encoding="utf-8")
     out = folder / "out.gpkg"
     result = invoke("screen", folder / "s.toml", "--output", out)
     assert sorted(path.name for path in folder.iterdir()) == (["out.gpkg"] * (result.exit_code == 0)) + ["s.toml"]
@@ -78,3 +89,13 @@ def test_a_run_ends_in_plain_words_or_with_a_sound_output(content, grid, tmp_pat
         assert result.stdout == ""
         assert re.search(r"^Error: \S", result.stderr, re.MULTILINE), result.stderr
     shutil.rmtree(folder)
+
+
+def test_more_stations_than_a_run_can_hold_are_refused_with_the_spacing_that_does(tmp_path, write_grid):
+    content = {"grid": {"path": str(write_grid(small_coast())), "positive": "up"}, "transects": {"spacing_km": 0.001}}
+    (tmp_path / "s.toml").write_text(toml_text(content), encoding="utf-8")
+    said = invoke("screen", tmp_path / "s.toml", codes=(1,)).stderr
+    assert "transects.spacing_km = 0.001 would put 2.9e+05 stations on 291 km of coast, of 100000 at most; give" in said
+    content["transects"]["spacing_km"] = 1e-9
+    (tmp_path / "s.toml").write_text(toml_text(content), encoding="utf-8")
+    assert "greater than or equal to 0.001" in invoke("screen", tmp_path / "s.toml", codes=(1,)).stderr
