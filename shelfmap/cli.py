@@ -3,6 +3,7 @@
 import functools
 import json
 import logging
+import os
 import signal
 import sys
 import threading
@@ -124,6 +125,8 @@ def main() -> None:
 
     Screening from gridded depths: not for navigation or any purpose involving safety at sea.
     """
+    # rasters, vectors and projections have a PROJ each, in workers too: all read this when they are loaded
+    os.environ["PROJ_NETWORK"] = "OFF"
 
 
 @main.command(epilog="Example: shelfmap screen coast.toml --output coast.gpkg --workers 2")

@@ -27,6 +27,8 @@ Geometries = NDArray[np.object_]
 _POINT, _LINE, _POLYGON = 0, 1, 2
 #: Names of the column of identities: ours, and what a shapefile leaves of it.
 _ID_NAMES: Final = ("transect_id", "transect_i")
+#: Identities are whole numbers that a shapefile's columns hold exactly.
+_LARGEST_ID: Final = 2**31 - 1
 #: A line that begins deeper than it ends by more than this may have been drawn from the sea to the shore, metres.
 BACKWARD_FALL_M: Final = 20.0
 
@@ -55,8 +57,10 @@ def make_coast(source: GridSource, settings: Settings, *, mapped: Mapped = map) 
     data = read_vector(settings.coast.file, settings.coast.layer)
     kind = shapely.get_dimensions(data.geometry)
     if (kind == _POLYGON).any():
+        _tell_left_out(data, kind != _POLYGON, "polygons, which are taken as land")
         return trace_coast(source, settings.coast, land=data.geometry[kind == _POLYGON], mapped=mapped)
     if (kind == _LINE).any():
+        _tell_left_out(data, kind != _LINE, "lines")
         return coast_from_lines(source, data.geometry[kind == _LINE], str(data.path))
     raise CoastError(f"{data.path}: holds neither lines nor polygons; give the coast as lines, or the land as polygons")
 
@@ -86,11 +90,17 @@ def make_transects(source: GridSource, coast: Coast, settings: Settings) -> Tran
     is_line = shapely.get_dimensions(data.geometry) == _LINE
     if not is_line.any():
         raise TransectError(f"{data.path}: holds no lines; draw each transect from the shore seaward")
+    _tell_left_out(data, ~is_line, "lines")
     lines = _seaward(source, coast, data.geometry[is_line])
     ids = _identities(data)
     return transects_from_lines(
         lines, None if ids is None else _whole_numbers(data, ids)[is_line], coast, settings.transects.spacing_m
     )
+
+
+def _tell_left_out(data: VectorData, is_other: NDArray[np.bool_], used: str) -> None:
+    if is_other.any():
+        _LOG.warning("%s: %d shapes that are no %s are left out", data.path, is_other.sum(), used)
 
 
 def _identities(data: VectorData) -> NDArray[Any] | None:
@@ -99,17 +109,25 @@ def _identities(data: VectorData) -> NDArray[Any] | None:
 
 
 def _whole_numbers(data: VectorData, ids: NDArray[Any]) -> IntArray:
-    """Identities as integers; 0 where a row has none."""
-    try:
-        numbers = np.nan_to_num(ids.astype(float), nan=0.0)
-    except (TypeError, ValueError):
-        numbers = np.full(len(ids), 0.5)
-    if (numbers != np.floor(numbers)).any():
+    """Identities as integers, text that holds such among them; 0 where a row has none."""
+    numbers, strange = np.zeros(len(ids), dtype=np.int64), []
+    for row, given in enumerate(ids.tolist()):
+        try:
+            number = 0.0 if given is None or given == "" else float(given)
+        except (TypeError, ValueError):
+            number = np.inf
+        if np.isnan(number):
+            continue
+        if number != np.floor(number) or abs(number) > _LARGEST_ID:
+            strange.append(str(given)[:30])
+        else:
+            numbers[row] = int(number)
+    if strange:
         raise TransectError(
-            f"{data.path}: the column transect_id holds {ids.dtype} values that are no whole numbers; "
-            "make it an integer column, or delete it to number the transects anew"
+            f"{data.path}: the column transect_id holds {', '.join(map(repr, strange[:3]))}, no whole number up to "
+            f"{_LARGEST_ID}; make it an integer column that holds the transect_id of the transects"
         )
-    return np.asarray(numbers, dtype=np.int64)
+    return numbers
 
 
 def _seaward(source: GridSource, coast: Coast, lines: Geometries) -> Geometries:
@@ -155,6 +173,8 @@ def picked_breaks(settings: Settings, transect_id: IntArray) -> Geometries:
     ------
     SettingsError
         If the file holds other things than points with the transect_id of a transect, one each.
+    TransectError
+        If its column transect_id holds other things than whole numbers.
     LayerError
         If the file cannot be read.
     """
@@ -165,8 +185,10 @@ def picked_breaks(settings: Settings, transect_id: IntArray) -> Geometries:
     column = _identities(data)
     if column is None or (shapely.get_dimensions(data.geometry) != _POINT).any():
         raise SettingsError(f"{data.path}: breaks picked by hand must be points with a column transect_id")
+    if not len(data.geometry):
+        raise SettingsError(f"{data.path}: holds no points; pick breaks, or drop shelf_break.file")
     points, part_of = shapely.get_parts(data.geometry, return_index=True)
-    ids = column[part_of]
+    ids = _whole_numbers(data, column)[part_of]
     known = {int(number): row for row, number in enumerate(transect_id)}
     strangers = sorted({str(number) for number in ids if number not in known})
     if strangers:

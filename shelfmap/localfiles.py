@@ -14,7 +14,7 @@ from pathlib import Path
 from typing import Final
 from xml.etree import ElementTree as ET
 
-__all__ = ["CLOSED", "archive_of", "local_file", "why_refused"]
+__all__ = ["CLOSED", "archive_of", "local_file", "why_refused", "why_unnameable"]
 
 #: Options of GDAL under which it reaches no network, runs no code of a file's, and loads nothing a file names.
 CLOSED: Final[Mapping[str, str]] = {
@@ -35,14 +35,16 @@ _ELSEWHERE: Final = re.compile(r"://|/vsi(?!(?:zip|tar|gzip)/)|^\s*<|^\s*\{|\bPG
 _SERVICE: Final = re.compile(
     rb"<(GDAL_WM|WMS_|WMT_|WMTS|WCS_|OGRWFS|OGROAPIF|OGCAPI|OGRCSW|MRF_META|GDALTileIndex|(\w+:)?\w*Capabilities\b)"
 )
+_VIRTUAL: Final = re.compile(rb"<(VRTDataset|OGRVRTDataSource)", re.IGNORECASE)
 _ROOT: Final = re.compile(rb"(?:\s|<\?.*?\?>|<!--.*?-->)*<([\w:.-]+)", re.DOTALL)
 _JSON_ELSEWHERE: Final = re.compile(rb'"gdal_streamed_alg"|"crs"\s*:\s*\{[^{}]*"(?:link|url)"|"stac_version"')
 #: Elements and attributes of virtual rasters and layers that name a file.
 _FILE_NAMES: Final = ("sourcefilename", "sourcedataset", "srcdatasource")
 _SUBDATASET: Final = re.compile(r'[A-Za-z0-9_]+:(?:\d+:)?(?:"([^"]+)"|([^:]+))(?::.*)?')
 _NO_FILES: Final = ("srs", "sourcesrs", "targetsrs", "layersrs", "gcplist", "description", "unittype", "categorynames")
-_INNER_FILE: Final = ("overview_file", "mask_file")
 
+#: Characters at which pyogrio cuts a path (measured with 0.13).
+_CUTTING: Final = (";", "!", "\n", "\r", "\t")
 _HEAD_BYTES: Final = 4096
 _MOST_XML_BYTES: Final = 100_000_000
 _MOST_MEMBERS: Final = 10_000
@@ -95,6 +97,23 @@ def local_file(path: Path, setting: str) -> tuple[Path | None, str]:
     return None, f"no such file; check {setting}, which is relative to the settings file"
 
 
+def why_unnameable(path: Path) -> str | None:
+    """Why the library of vectors takes the name of a file for an address and would cut it; None where it does not.
+
+    Examples
+    --------
+    >>> why_unnameable(Path("/data/a;b.gpkg"))
+    "has ';' in its path, which the library of vectors takes for part of an address; rename the file or folder"
+    """
+    found = next((c for c in _CUTTING if c in str(path.absolute())), None)
+    if found is None:
+        return None
+    return (
+        f"has {found!r} in its path, which the library of vectors takes for part of an address; "
+        "rename the file or folder"
+    )
+
+
 def why_refused(path: Path) -> str | None:
     """Why a local file is not handed to GDAL, with the cure; None where it may be.
 
@@ -133,10 +152,10 @@ def _why_description(path: Path, head: bytes, level: int) -> str | None:
         return "describes a network service, which is not opened in this version; download the data"
     if start.startswith(b"{") and _holds(path, _JSON_ELSEWHERE):
         return "sends its reader elsewhere for its data or its coordinate system; save it as GeoPackage or GeoTIFF"
+    if _VIRTUAL.search(head):  # anywhere, as GDAL looks for it
+        return _why_virtual(path, level)
     root = _ROOT.match(start)
     name = b"" if root is None else root[1].lower()
-    if name == b"vrtdataset" or name.startswith(b"ogrvrt"):
-        return _why_virtual(path, level)
     if name.startswith((b"gdal", b"ogr")) and b":" not in name:
         return "describes data that lie elsewhere; name the data themselves"
     return None
@@ -177,25 +196,23 @@ def _why_virtual(path: Path, level: int) -> str | None:
     return None
 
 
-def _texts(element: ET.Element) -> Iterator[tuple[str, str, bool]]:
+def _texts(tree: ET.Element) -> Iterator[tuple[str, str, bool]]:
     """Every text and attribute with the lower-case name it stands under, and whether it is relative to the file.
 
     Remarks and coordinate systems, which name no files but hold addresses, are left out.
     """
-    kind = element.tag.lower()
-    attributes = {key.lower(): value for key, value in element.attrib.items()}
-    if kind in _NO_FILES:
-        return
-    is_remark = kind == "mdi" and attributes.get("key", "").lower() not in _INNER_FILE
-    is_relative = attributes.get("relativetovrt", "0").strip() in ("1", "yes", "true")
-    if element.text and not is_remark:
-        yield kind, element.text, is_relative
-    if not is_remark:
+    waiting = [(tree, False)]  # not by calls: a file may nest as deep as it likes
+    while waiting:
+        element, is_remark = waiting.pop()
+        kind = element.tag.lower()
+        attributes = {key.lower(): value for key, value in element.attrib.items()}
+        if kind in _NO_FILES or is_remark:
+            continue
+        if element.text:
+            yield kind, element.text, attributes.get("relativetovrt", "0").strip().lower() in ("1", "yes", "true")
         yield from ((key, value, False) for key, value in attributes.items())
-    if kind == "metadata" and attributes.get("domain", "").lower().startswith("xml:"):
-        return
-    for inner in element:
-        yield from _texts(inner)
+        # metadata of a domain of its own may be sources, overviews or axes
+        waiting.extend((inner, kind == "metadata" and "domain" not in attributes) for inner in element)
 
 
 def _why_named(folder: Path, name: str, is_relative: bool, level: int) -> str | None:

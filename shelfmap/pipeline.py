@@ -23,7 +23,7 @@ from shelfmap.inputs import make_coast, picked_breaks
 from shelfmap.layers import Layer, to_columns, unpack
 from shelfmap.laying import Laid, lay, timed
 from shelfmap.provenance import run_layer, status_counts
-from shelfmap.replacement import check_target, placing
+from shelfmap.replacement import check_name, check_target, placing
 from shelfmap.sections import Section, pack_drawn_section, pack_section
 from shelfmap.settings import Settings
 from shelfmap.stations import station_layers
@@ -207,6 +207,7 @@ def write_transects(settings: Settings, path: Path, *, overwrite: bool = False, 
 
 def _check_output(settings: Settings, path: Path, *, overwrite: bool) -> None:
     """Refuse an output that cannot be written, or that would replace what it is made from."""
+    check_name(path)
     inputs = [
         *(("grid.path", file) for file in settings.grid.paths),
         ("coast.file", settings.coast.file),

@@ -8,17 +8,37 @@ from pathlib import Path
 from typing import IO, Final
 
 from shelfmap.errors import LayerError, OutputExistsError
+from shelfmap.localfiles import why_unnameable
 
-__all__ = ["check_target", "placing", "replacing", "unfinished"]
+__all__ = ["check_name", "check_target", "placing", "replacing", "unfinished"]
 
 #: How long another program may hold the old file before it counts as in use, seconds.
 _PATIENCE_S: Final = 0.5
 
+#: Longest name and path of an output, bytes: parts beside it bear longer names.
+_NAME_BYTES: Final = 200
+_PATH_BYTES: Final = 3000
 #: What SQLite leaves beside a file while it is open or after a crash.
 _COMPANIONS: Final = ("-journal", "-wal", "-shm")
 
 #: Held, by the system's means, by the run that works in a folder.
 _LOCK: Final = "lock"
+
+
+def check_name(path: Path) -> None:
+    """Refuse a name that no disk takes, or that the library of vectors would cut.
+
+    Raises
+    ------
+    LayerError
+        If it does not do.
+    """
+    if len(os.fsencode(path.name)) > _NAME_BYTES or len(os.fsencode(path.absolute())) > _PATH_BYTES:
+        raise LayerError(
+            f"output {path.name[:40]}...: the name is too long for the disk; give one of under {_NAME_BYTES}"
+        )
+    if why := why_unnameable(path):
+        raise LayerError(f"output {path}: {why}")
 
 
 def check_target(path: str | Path, *, overwrite: bool) -> None:
@@ -33,6 +53,7 @@ def check_target(path: str | Path, *, overwrite: bool) -> None:
         program holds the file.
     """
     path = Path(path)
+    check_name(path)
     folder = _real(path).parent
     if path.suffix.lower() != ".gpkg":
         raise LayerError(
@@ -40,6 +61,8 @@ def check_target(path: str | Path, *, overwrite: bool) -> None:
         )
     if path.is_dir():
         raise LayerError(f"output {path} is a folder; give the name of a file in it")
+    if path.exists() and not path.is_file():
+        raise LayerError(f"output {path} is a pipe or a device; give the name of a file")
     if not folder.is_dir():
         raise LayerError(f"output {path}: there is no folder {folder}; make it first or correct the path")
     if not os.access(folder, os.W_OK):

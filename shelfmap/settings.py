@@ -89,6 +89,8 @@ def _as_path(value: object) -> object:
         raise ValueError("path is empty")
     if isinstance(value, str) and "\0" in value:
         raise ValueError("path holds a null character; leave it out")
+    if isinstance(value, str) and any(c in value for c in "\n\r\t"):
+        raise ValueError(f"path {_shown(value)} holds a line break or a tab, which GDAL takes away; rename the file")
     if isinstance(value, str) and (
         len(value.encode("utf-8", "surrogatepass")) > _PATH_BYTES
         or any(len(part.encode("utf-8", "surrogatepass")) > _NAME_BYTES for part in Path(value).parts)

@@ -240,10 +240,14 @@ def transects_from_lines(
     TransectError
         If there is no line with a length among them.
     """
-    usable = [i for i, line in enumerate(lines) if shapely.get_dimensions(line) == 1 and shapely.length(line) > 0]
+    drawn = [i for i, line in enumerate(lines) if shapely.get_dimensions(line) == 1 and shapely.length(line) > 0]
+    nodes_of = {i: _nodes_of(shapely.get_coordinates(lines[i])) for i in drawn}
+    usable = [i for i in drawn if nodes_of[i].shape[1] > 1]  # a line round the globe to its start has no length
     if not usable:
         raise TransectError("the file of transects holds no line with a length; draw each from the shore seaward")
-    nodes = [_nodes_of(shapely.get_coordinates(lines[i])) for i in usable]
+    if len(usable) < len(lines):
+        _LOG.warning("%d of the transects drawn have no length and are left out", len(lines) - len(usable))
+    nodes = [nodes_of[i] for i in usable]
     n, k = len(usable), max(node.shape[1] for node in nodes)
     padded = np.full((3, n, k), np.nan)
     for row, node in enumerate(nodes):
@@ -351,7 +355,12 @@ def _identities(given: IntArray | None, n: int) -> IntArray:
     keep &= given > 0
     out = given.astype(np.int64)
     if not keep.all():
-        _LOG.warning("%d transects without a transect_id of their own were numbered anew", (~keep).sum())
+        repeated = [str(number) for number in np.unique(given[~keep & (given > 0)])[:5]]
+        _LOG.warning(
+            "%d transects without a transect_id of their own were numbered anew%s",
+            (~keep).sum(),
+            f"; these stood more than once: {', '.join(repeated)}" if repeated else "",
+        )
     out[~keep] = max(0, int(given.max(initial=0))) + np.arange(1, (~keep).sum() + 1)
     return out
 

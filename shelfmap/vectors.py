@@ -1,11 +1,12 @@
 """Shapes and columns of any vector file, in longitude and latitude."""
 
+import sqlite3
 import warnings
 from collections.abc import Iterator
-from contextlib import contextmanager
+from contextlib import closing, contextmanager
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Any
+from typing import Any, Final
 
 import numpy as np
 import pyogrio
@@ -15,11 +16,15 @@ from numpy.typing import NDArray
 
 from shelfmap.errors import GridError, LayerError, ShelfmapWarning
 from shelfmap.geodesy import Projection
-from shelfmap.localfiles import CLOSED, archive_of, local_file, why_refused
+from shelfmap.localfiles import CLOSED, archive_of, local_file, why_refused, why_unnameable
 
 __all__ = ["VectorData", "read_table", "read_vector"]
 
 ObjectArray = NDArray[np.object_]
+
+
+#: Longitudes may run on past 180, so far.
+_FARTHEST_LON_DEG: Final = 720.0
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -68,9 +73,11 @@ def read_vector(path: str | Path, layer: str | None = None) -> VectorData:
     path = Path(path)
     name = _local_name(path)
     layer = _choose_layer(path, name, layer)
+    _refuse_endless(path, layer)
     with _readable(path):
         meta, _, wkb, fields = pyogrio.raw.read(name, layer=layer, force_2d=True)
-        geometry: ObjectArray = shapely.from_wkb(wkb)
+        with np.errstate(invalid="ignore"):
+            geometry: ObjectArray = shapely.from_wkb(wkb)
     keep = ~(shapely.is_missing(geometry) | shapely.is_empty(geometry))
     if not keep.all():
         warnings.warn(
@@ -124,7 +131,7 @@ def _local_name(path: Path) -> str:
     if file is None:
         raise LayerError(f"vector file {path}: {why}")
     try:
-        refused = why_refused(file)
+        refused = why_unnameable(path) or why_refused(file)
     except OSError as error:
         raise LayerError(f"vector file {path} cannot be opened ({error.strerror}); make it readable") from error
     if refused is not None:
@@ -156,6 +163,22 @@ def _choose_layer(path: Path, name: str, layer: str | None) -> str:
     return drawn[0]
 
 
+def _refuse_endless(path: Path, layer: str) -> None:
+    """Refuse a view that calls itself: SQLite would make rows of it for ever."""
+    if not path.is_file():  # a folder that is a database, or a file in an archive
+        return
+    with path.open("rb") as stream:
+        if not stream.read(16).startswith(b"SQLite format 3"):
+            return
+    try:
+        with closing(sqlite3.connect(f"{path.absolute().as_uri()}?mode=ro&immutable=1", uri=True)) as database:
+            views = database.execute("SELECT sql FROM sqlite_master WHERE type = 'view' AND sql LIKE '%recursive%'")
+            if views.fetchone() is not None:
+                raise LayerError(f"vector file {path}: a layer is a view that calls itself; save {layer!r} as a table")
+    except sqlite3.Error as error:
+        raise LayerError(f"vector file {path} cannot be read ({error}); write it anew") from error
+
+
 def _require_layer(path: Path, layer: str, known: list[str]) -> None:
     if layer not in known:
         raise LayerError(f"vector file {path} has no layer {layer!r}; its layers are {', '.join(known)}")
@@ -169,6 +192,7 @@ def _to_lonlat(geometry: ObjectArray, crs: str | None, path: Path) -> ObjectArra
     try:
         projection = Projection(crs)
         if projection.is_geographic:
+            _check_degrees(geometry, path)
             return geometry
         moved: ObjectArray = shapely.transform(geometry, projection.to_lonlat, interleaved=False)
     except (GridError, RuntimeError) as error:
@@ -178,6 +202,16 @@ def _to_lonlat(geometry: ObjectArray, crs: str | None, path: Path) -> ObjectArra
             f"vector file {path}: some points lie outside {projection.name}; assign the right system in a GIS"
         )
     return moved
+
+
+def _check_degrees(geometry: ObjectArray, path: Path) -> None:
+    lonlat = shapely.get_coordinates(geometry)
+    # written so that NaN fails too
+    if not ((np.abs(lonlat[:, 0]) <= _FARTHEST_LON_DEG).all() and (np.abs(lonlat[:, 1]) <= 90.0).all()):
+        raise LayerError(
+            f"vector file {path}: some points are no longitude and latitude in degrees; delete them, or assign the "
+            "system the coordinates are in"
+        )
 
 
 @contextmanager
@@ -191,8 +225,8 @@ def _readable(path: Path) -> Iterator[None]:
             yield
     except (RuntimeError, OSError, ValueError, shapely.errors.ShapelyError) as error:
         raise LayerError(
-            f"vector file {path} cannot be read ({_one_line(error)}); give a vector file that GDAL reads, "
-            "such as a GeoPackage"
+            f"vector file {path} cannot be read ({_one_line(error)}); give a vector file that GDAL reads, such as a "
+            "GeoPackage"
         ) from error
     finally:
         pyogrio.set_gdal_config_options(before)

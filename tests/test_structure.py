@@ -32,7 +32,7 @@ ONLY_HERE = {
     "geopandas": {"vectors"},
     "pyogrio": {"geopackage", "vectors"},
     "pyarrow": {"layers", "geopackage"},
-    "sqlite3": {"geopackage", "replacement"},
+    "sqlite3": {"geopackage", "replacement", "vectors"},
     "pydantic": {"settings"},
     "tomllib": {"settings"},
     "click": {"cli"},
