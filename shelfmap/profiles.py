@@ -306,22 +306,25 @@ def _boxes(source: GridSource, col: FloatArray, row: FloatArray) -> FloatArray:
 
 def _groups(source: GridSource, boxes: FloatArray) -> Iterator[tuple[int, int]]:
     """Cut transects into runs of rows whose windows of all sheets together are small enough to read."""
-    first, box = 0, boxes[0]
+    n_cells = _n_cells(source, boxes)
+    first, box, n_read = 0, boxes[0], n_cells[0]
     for k in range(1, len(boxes)):
         wider = np.where(_IS_LEAST, np.fmin(box, boxes[k]), np.fmax(box, boxes[k]))
+        n_wider = _n_cells(source, wider)
         # far apart, as on two islands, they are cheaper to read one by one
-        if _n_cells(source, wider) > min(MOST_CELLS, _n_cells(source, box) + _n_cells(source, boxes[k])):
+        if n_wider > min(MOST_CELLS, n_read + n_cells[k]):
             yield first, k
-            first, box = k, boxes[k]
+            first, box, n_read = k, boxes[k], n_cells[k]
         else:
-            box = wider
+            box, n_read = wider, n_wider
     yield first, len(boxes)
 
 
-def _n_cells(source: GridSource, box: FloatArray) -> float:
-    """Cells in a box of each sheet, all sheets together."""
+def _n_cells(source: GridSource, box: FloatArray) -> FloatArray:
+    """(...) cells in boxes (..., s, 4) of the sheets, all sheets together."""
     widest = np.array([sheet.n_cols for sheet in source.sheets])
-    return float(np.nansum((box[:, 1] - box[:, 0]) * np.minimum(box[:, 3] - box[:, 2], widest)))
+    rows, cols = box[..., 1] - box[..., 0], np.minimum(box[..., 3] - box[..., 2], widest)
+    return np.asarray(np.nansum(rows * cols, axis=-1))
 
 
 def _read_stack(

@@ -18,9 +18,11 @@ __all__ = ["Mapped", "mapping"]
 _Job = TypeVar("_Job")
 _Result = TypeVar("_Result")
 
-#: Jobs handed out ahead of the one whose result is waited for, by worker: enough to keep all busy, few enough that
-#: results waiting for their turn do not fill the memory.
-AHEAD: Final = 16
+#: Jobs that go to a worker together, so that it has work while this process is busy writing.
+TOGETHER: Final = 4
+#: Such parcels handed out ahead of the one waited for, by worker: enough to keep all busy, few enough that results
+#: waiting for their turn do not fill the memory.
+AHEAD: Final = 4
 #: How often a cluster tries a job again whose worker was lost.
 RETRIES: Final = 3
 #: How long a cluster may take to answer at first, seconds.
@@ -78,23 +80,28 @@ def mapping(workers: int = 1, executor: Executor | None = None, scheduler: str |
 
 
 def _ordered(executor: Executor, ahead: int) -> Mapped:
-    """Map over an executor in order, with at most `ahead` jobs handed out and not yet collected."""
+    """Map over an executor in order, with at most `ahead` parcels of jobs handed out and not yet collected."""
 
     def mapped(function: Callable[[_Job], _Result], jobs: Iterable[_Job], /) -> Iterator[_Result]:
         remaining = iter(jobs)
-        waiting: deque[Future[_Result]] = deque(
-            executor.submit(function, job) for job in itertools.islice(remaining, ahead)
+        parcels = iter(lambda: list(itertools.islice(remaining, TOGETHER)), [])
+        waiting: deque[Future[list[_Result]]] = deque(
+            executor.submit(_each, function, parcel) for parcel in itertools.islice(parcels, ahead)
         )
         try:
             while waiting:
-                result = waiting.popleft().result()
-                waiting.extend(executor.submit(function, job) for job in itertools.islice(remaining, 1))
-                yield result
+                results = waiting.popleft().result()
+                waiting.extend(executor.submit(_each, function, parcel) for parcel in itertools.islice(parcels, 1))
+                yield from results
         finally:
             for future in waiting:
                 future.cancel()
 
     return mapped
+
+
+def _each(function: Callable[[_Job], _Result], jobs: list[_Job]) -> list[_Result]:
+    return [function(job) for job in jobs]
 
 
 @contextmanager

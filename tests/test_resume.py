@@ -298,22 +298,24 @@ def test_a_grid_written_to_while_it_is_read_is_refused(settings, monkeypatch):
     assert not settings.output.path.exists()
 
 
-def children_of(pid):
+def workers_of(pid):
+    """Worker processes a run has started, as Linux tells."""
     try:
-        return {int(child) for child in Path(f"/proc/{pid}/task/{pid}/children").read_text(encoding="ascii").split()}
+        children = Path(f"/proc/{pid}/task/{pid}/children").read_text(encoding="ascii").split()
+        return [int(child) for child in children if b"spawn_main" in Path(f"/proc/{child}/cmdline").read_bytes()]
     except OSError:
-        return set()
+        return []
 
 
 @pytest.mark.skipif(not Path(f"/proc/self/task/{os.getpid()}/children").exists(), reason="asks Linux for the processes")
 def test_a_killed_worker_is_one_sentence_and_the_run_goes_on(settings, settings_file, tmp_path):
+    """As soon as there is one: it has not begun then."""
     expected = undisturbed(settings, tmp_path)
     process = start(settings_file, "--workers", "2")
-    started, deadline = set(), time.monotonic() + 30
-    while len(started) < 3 and time.monotonic() < deadline and process.poll() is None:  # two workers and their tracker
-        time.sleep(0.02)
-        started |= children_of(process.pid)
-    os.kill(max(started), signal.SIGKILL)
+    deadline = time.monotonic() + 30
+    while not (workers := workers_of(process.pid)) and time.monotonic() < deadline:
+        time.sleep(0.01)
+    os.kill(workers[0], signal.SIGKILL)
     _, stderr = process.communicate()
     assert process.returncode == 1, stderr
     assert "Error: a worker process died" in stderr

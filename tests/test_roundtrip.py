@@ -118,14 +118,14 @@ def test_lines_sketched_from_land_without_identities_are_numbered(tmp_path, writ
     np.testing.assert_allclose(table["bearing_deg"], 270.0, atol=2.0)  # a geodesic due west bends
 
 
-@pytest.mark.parametrize(
-    ("ids", "fault"), [(["a", "b"], "str|object"), ([1.5, 2.0], "float64")], ids=["text", "fractions"]
-)
+@pytest.mark.parametrize(("ids", "fault"), [(["a", "b"], "'a', 'b'"), ([1.5, 2.0], "'1.5'")], ids=["text", "fractions"])
 def test_identities_that_are_no_whole_numbers_are_refused(tmp_path, write_grid, ids, fault):
     lines = [shapely.LineString([(0.25, lat), (-1.8, lat)]) for lat in (39.5, 40.0)]
     geopandas.GeoDataFrame({"transect_id": ids}, geometry=lines, crs="EPSG:4326").to_file(tmp_path / "lines.gpkg")
     settings = settings_for(write_grid(small_coast()), tmp_path, transects={"file": "lines.gpkg"})
-    with pytest.raises(TransectError, match=rf"transect_id holds ({fault}) values that are no whole numbers; make it"):
+    with pytest.raises(
+        TransectError, match=rf"transect_id holds {fault}, no whole number .*; make it an integer column"
+    ):
         screen(settings)
 
 

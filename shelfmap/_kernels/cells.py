@@ -44,12 +44,16 @@ class Nodes(NamedTuple):
     face_m: FloatArray  # (n,)
 
 
+#: Depths that differ by less than this share are one: bilinear means of equal depths differ by 1e-13.
+EVEN_SHARE = 1e-9
+
+
 @njit(cache=True, error_model="numpy")
 def used_end(x_m: FloatArray, depth_m: FloatArray, outer_m: float) -> tuple[int, int, float, float, bool]:
     """First and last sample of the used part, position and depth of its end, and whether a step follows.
 
-    The end is cut exactly where the depth reaches `outer_m`, else it is the (last) greatest depth. A last
-    sample of -1 means that the profile cannot be used.
+    The end is cut exactly where the depth reaches `outer_m`, else it is the last of the greatest depths, which on an
+    even floor are equal but for rounding. A last sample of -1 means that the profile cannot be used.
     """
     n = 0
     while n < depth_m.size and not math.isnan(depth_m[n]):
@@ -63,18 +67,20 @@ def used_end(x_m: FloatArray, depth_m: FloatArray, outer_m: float) -> tuple[int,
     first = 0
     while first + 1 < n and x_m[first + 1] == x_m[0]:
         first += 1
-    deepest = first
+    deepest, greatest_m = first, 0.0
     for i in range(first, n):
         if depth_m[i] >= outer_m:
             if i == first:
                 return 0, -1, math.nan, math.nan, False
             if x_m[i] == x_m[i - 1]:
-                deepest = i - 1
+                n, greatest_m = i, depth_m[i - 1]  # the step is there
                 break
             share = (outer_m - depth_m[i - 1]) / (depth_m[i] - depth_m[i - 1])
             end_m = x_m[i] if depth_m[i] == outer_m else x_m[i - 1] + share * (x_m[i] - x_m[i - 1])
             return first, i, end_m, outer_m, False
-        if depth_m[i] >= depth_m[deepest]:
+        greatest_m = max(greatest_m, depth_m[i])
+    for i in range(first, n):
+        if depth_m[i] >= (1.0 - EVEN_SHARE) * greatest_m:
             deepest = i
     if x_m[deepest] == x_m[first]:
         return 0, -1, math.nan, math.nan, False

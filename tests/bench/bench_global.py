@@ -86,7 +86,7 @@ def screened(folder: Path, workers: int, **tables: str) -> dict[str, float]:
         stage: float(seconds) for stage, seconds in re.findall(r"^INFO: ([a-z ]+): ([\d.]+) s$", done.stderr, re.M)
     }
     found["whole"] = time.perf_counter() - start
-    found["transects"] = float(re.findall(r"^(\d+) transects: ", done.stderr, re.M)[0])
+    found["stations"] = float(re.findall(r"^(\d+) transects: ", done.stderr, re.M)[0])
     found["peak_mib"] = resource.getrusage(resource.RUSAGE_CHILDREN).ru_maxrss / 1024
     return found
 
@@ -116,7 +116,7 @@ def test_globe(tmp_path_factory, capsys):
         "1 worker / floor": runs[1]["whole"] / sum(floor.values()),
         "2 workers / floor": runs[2]["whole"] / sum(floor.values()),
         "1 / 2 workers": runs[1]["whole"] / runs[2]["whole"],
-        "ms a transect": 1e3 * runs[1]["sections"] / runs[1]["transects"],
-        "ms, few": 1e3 * few["sections"] / few["transects"],
+        "ms a transect": 1e3 * runs[1]["sections"] / runs[1]["stations"],
+        "ms, few": 1e3 * few["sections"] / few["stations"],
     })  # fmt: skip
-    assert runs[1]["transects"] == runs[2]["transects"]
+    assert runs[1]["stations"] == runs[2]["stations"]
