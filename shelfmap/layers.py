@@ -139,13 +139,22 @@ def pack(tables: Mapping[str, pa.Table]) -> bytes:
 
 
 def unpack(data: bytes) -> dict[str, pa.Table]:
-    """Named Arrow tables from bytes made by `pack`, each in memory of its own, so that one can outlive the others."""
+    """Named Arrow tables from bytes made by `pack`, each in memory of its own, so that one can outlive the others.
+
+    Raises
+    ------
+    LayerError
+        If they are other bytes.
+    """
     source = io.BytesIO(data)
     tables = {}
-    while source.tell() < len(data):
-        with pa.ipc.open_stream(pa.PythonFile(source, mode="r")) as stream:
-            table = stream.read_all()
-        tables[table.schema.metadata[b"name"].decode()] = table
+    try:
+        while source.tell() < len(data):
+            with pa.ipc.open_stream(pa.PythonFile(source, mode="r")) as stream:
+                table = stream.read_all()
+            tables[table.schema.metadata[b"name"].decode()] = table
+    except (pa.ArrowException, OSError, KeyError, TypeError, UnicodeError) as error:
+        raise LayerError("kept work was not written by this program; run again with --anew") from error
     return tables
 
 

@@ -108,9 +108,11 @@ def unfinished(path: str | Path) -> Iterator[Path]:
 
 def _lock(folder: Path, target: Path) -> IO[str]:
     """Make the folder and hold its lock, which the system lets go when this process ends, however that comes about."""
+    if folder.is_symlink():
+        raise LayerError(f"output {target}: {folder} is a link to another folder; remove it")
     while True:
         folder.mkdir(exist_ok=True)
-        lock = (folder / _LOCK).open("w", encoding="utf-8")
+        lock = open(folder / _LOCK, "a", encoding="utf-8", opener=_open_no_link)  # noqa: PTH123, SIM115
         if not _is_ours(lock):
             lock.close()
             raise LayerError(f"output {target}: another run is making it right now; wait for that, or use another name")
@@ -118,6 +120,11 @@ def _lock(folder: Path, target: Path) -> IO[str]:
             if (folder / _LOCK).stat().st_ino == os.fstat(lock.fileno()).st_ino:
                 return lock
         lock.close()  # the run that held it has just ended and removed it
+
+
+def _open_no_link(path: str, flags: int) -> int:
+    """Open a file, not what a link leads to: a folder from a stranger may hold links into this user's files."""
+    return os.open(path, flags | getattr(os, "O_NOFOLLOW", 0), 0o666)
 
 
 def _is_ours(lock: IO[str]) -> bool:

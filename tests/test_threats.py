@@ -5,7 +5,9 @@ is meant to happen in each case.
 """
 
 import gzip
+import hashlib
 import os
+import pickle
 import shutil
 import sqlite3
 import struct
@@ -20,6 +22,7 @@ from http.server import BaseHTTPRequestHandler, ThreadingHTTPServer
 from pathlib import Path
 from xml.sax.saxutils import escape
 
+import pyarrow as pa
 import pyogrio
 import pytest
 import rasterio
@@ -28,9 +31,12 @@ from rasterio.transform import Affine
 from test_mutated_grids import SETTINGS, tif
 from test_vector_inputs import TRANSECT, written
 from utils_fuzz import assert_sound, invoke, toml_text
+from utils_pipeline import settings_for
 
-from shelfmap.errors import ShelfmapError
+from shelfmap.errors import LayerError, ShelfmapError
+from shelfmap.layers import pack, unpack
 from shelfmap.localfiles import CLOSED
+from shelfmap.pipeline import screen
 from shelfmap.rasterfile import read_header
 from shelfmap.settings import GridSettings
 from shelfmap.vectors import read_vector
@@ -369,6 +375,7 @@ def test_no_coordinate_system_leads_out(silent, tmp_path, monkeypatch):
         "    result = CliRunner().invoke(main, ['screen', f's{n}.toml', '-o', f'{n}.gpkg'])\n"
         "    assert result.exit_code in (0, 1) and 'Traceback' not in result.stderr, (n, result.output)\n"
         "    assert result.exception is None or isinstance(result.exception, SystemExit), (n, result.exception)\n"
+        "import pyproj.network\nassert not pyproj.network.is_network_enabled()\n"
     )
     subprocess.run([sys.executable, "-W", "ignore", "-c", program], cwd=tmp_path, check=True, timeout=200)
 
@@ -441,6 +448,80 @@ def test_settings_name_no_output_but_a_new_geopackage(tmp_path, out):
     before = sorted(tmp_path.iterdir())
     invoke("screen", write_text(tmp_path / "s.toml", toml_text(content)), codes=(1,))
     assert [path for path in sorted(tmp_path.iterdir()) if path.name != "s.toml"] == before
+
+
+# ---- kept work of a stranger
+
+
+@pytest.fixture
+def stopped(tmp_path):
+    """Settings of a run that was stopped after its only section, and what it kept of that."""
+    settings = settings_for(tif(tmp_path), tmp_path, transects={"spacing_km": 30.0, "length_km": 250.0})
+
+    def stop(*_):
+        raise KeyboardInterrupt
+
+    with pytest.raises(KeyboardInterrupt):
+        screen(settings, progress=stop)
+    [piece] = tmp_path.glob(".out.gpkg.unfinished/*.done")
+    return settings, piece
+
+
+def forge(piece, data):
+    piece.write_bytes(hashlib.sha256(data).digest() + data)
+
+
+class Runs:
+    def __reduce__(self):
+        return os.mkdir, ("RAN",)
+
+
+@pytest.mark.parametrize("data", [b"x", b"x" * 1000, pickle.dumps(Runs()), b"\xff\xff\xff\xff\x10\0\0\0" + bytes(16)])
+def test_forged_kept_work_is_refused_and_runs_no_code(stopped, tmp_path, monkeypatch, data):
+    """With the checksum it should have: that guards against damage only."""
+    monkeypatch.chdir(tmp_path)
+    settings, piece = stopped
+    forge(piece, data)
+    with pytest.raises(LayerError, match="kept work was not written by this program; run again with --anew"):
+        screen(settings)
+    assert not (tmp_path / "RAN").exists()
+    screen(settings, anew=True)
+    assert_sound(tmp_path / "out.gpkg")
+
+
+def test_kept_work_forged_with_care_is_believed(stopped, tmp_path):
+    """What DEVELOPERS.md says is not held off: whoever writes to the folder of the output may as well write there."""
+    settings, piece = stopped
+    stations = unpack(piece.read_bytes()[32:])
+    table = stations["stations"]
+    at = table.column_names.index("shelf_width_km")
+    stations["stations"] = table.set_column(at, "shelf_width_km", pa.array([12.0] * len(table)))
+    forge(piece, pack(stations))
+    screen(settings)
+    assert set(read_vector(tmp_path / "out.gpkg", "transects").columns["shelf_width_km"]) == {12.0}
+
+
+@pytest.mark.parametrize("name", ["lock", "part", "folder"])
+def test_links_in_the_folder_of_kept_work_lead_nowhere(stopped, tmp_path, name):
+    settings, piece = stopped
+    (tmp_path / "mine").mkdir()
+    mine = tmp_path / "mine" / "a.done"
+    mine.write_text("precious", encoding="utf-8")
+    folder = piece.parent
+    if name == "folder":
+        shutil.rmtree(folder)
+        folder.symlink_to(tmp_path / "mine")
+    elif name == "lock":
+        (folder / "lock").symlink_to(mine)
+    else:
+        piece.with_suffix(".part").symlink_to(mine)
+        piece.unlink()
+    if name == "part":
+        screen(settings)
+    else:
+        with pytest.raises(LayerError, match="link"):
+            screen(settings)
+    assert mine.read_text(encoding="utf-8") == "precious"
 
 
 # ---- the whole program, watched
