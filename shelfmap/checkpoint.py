@@ -6,7 +6,7 @@ never taken for this run's.
 
 import hashlib
 import logging
-from collections.abc import Iterable, Iterator
+from collections.abc import Iterable, Iterator, Sequence
 from contextlib import contextmanager, suppress
 from functools import lru_cache
 from pathlib import Path
@@ -39,7 +39,8 @@ class Checkpoint:
 
     def __init__(self, folder: Path) -> None:
         self.folder = folder
-        self._used: set[str] = set()
+        self._ours: set[str] = set()
+        self._is_claimed = False
 
     @classmethod
     @contextmanager
@@ -58,17 +59,19 @@ class Checkpoint:
             try:
                 yield checkpoint
             except BaseException:
-                checkpoint._keep_what_was_used()
+                checkpoint._keep()
                 raise
             checkpoint.clear()
 
-    def has(self, key: str) -> bool:
-        """Whether a piece of work is there; it may turn out damaged."""
-        return self._file(key).exists()
+    def claim(self, keys: Sequence[str]) -> list[bool]:
+        """Say which pieces of work this run is made of; give which of them are there, though one may be damaged."""
+        self._ours.update(keys)
+        self._is_claimed = True
+        return [self._file(key).exists() for key in keys]
 
     def load(self, key: str) -> bytes | None:
         """Piece of work of a key; None where it is not there or not whole."""
-        self._used.add(key)
+        self._ours.add(key)
         try:
             content = self._file(key).read_bytes()
         except OSError:
@@ -95,7 +98,7 @@ class Checkpoint:
                 f"{self.folder}: finished work cannot be kept ({error.strerror}); make room on the disk or write to "
                 "another folder"
             ) from error
-        self._used.add(key)
+        self._ours.add(key)
 
     def clear(self) -> None:
         """Remove all that is kept."""
@@ -108,16 +111,17 @@ class Checkpoint:
     def _files(self) -> list[Path]:
         return [*self.folder.glob(f"*{_SUFFIX}"), *self.folder.glob("*.part")]
 
-    def _keep_what_was_used(self) -> None:
-        """Leave this run's work, say so, and remove what belongs to other settings or grids."""
+    def _keep(self) -> None:
+        """Leave finished work and say so; once this run has said what its own is, remove the rest."""
         with suppress(OSError):
-            kept = [file for file in self._files() if file.suffix == _SUFFIX and file.stem in self._used]
-            for file in set(self._files()) - set(kept):
+            files = self._files()
+            strangers = [file for file in files if file.suffix != _SUFFIX or file.stem not in self._ours]
+            for file in strangers if self._is_claimed else []:
                 file.unlink(missing_ok=True)
-            if kept:
+            if n_kept := len(files) - len(strangers if self._is_claimed else []):
                 _LOG.warning(
                     "finished work (%d pieces) is kept in %s: the same run goes on from it; delete it if unwanted",
-                    len(kept),
+                    n_kept,
                     self.folder,
                 )
 

@@ -266,14 +266,14 @@ def _packed_sections(
     run_key = _run_key(laid, settings)
     sections = list(_sections(laid, settings, picks))
     keys = [_section_key(run_key, section) for section in sections]
-    missing = [section for section, key in zip(sections, keys, strict=True) if not kept.has(key)]
-    if len(missing) < len(sections):
-        n_kept = len(sections) - len(missing)
-        _LOG.warning("%d of %d sections were finished by an earlier run and are used", n_kept, len(sections))
+    is_kept = kept.claim(keys)
+    missing = [section for section, there in zip(sections, is_kept, strict=True) if not there]
+    if any(is_kept):
+        _LOG.warning("%d of %d sections were finished by an earlier run and are used", sum(is_kept), len(sections))
     # the first one here: on a first run it compiles the loops, which processes must not do all at once
     fresh = itertools.chain(map(pack_section, missing[:1]), mapped(pack_section, missing[1:]))
-    for section, key in zip(sections, keys, strict=True):
-        if kept.has(key):
+    for section, key, there in zip(sections, keys, is_kept, strict=True):
+        if there:
             data = kept.load(key) or pack_section(section)  # a kept one may be damaged
         else:
             data = next(fresh)

@@ -91,6 +91,24 @@ def test_finished_sections_are_not_done_again(settings, tmp_path, monkeypatch, s
     assert not list(tmp_path.glob(".*"))
 
 
+@pytest.mark.parametrize("stage", ["laying.make_transects", "pipeline.picked_breaks", "pipeline.unpack"])
+def test_a_run_stopped_twice_loses_nothing(settings, tmp_path, monkeypatch, stage):
+    """The second time before it has come to what the first one finished."""
+    screen_some(settings, monkeypatch, 3)
+    before = kept_in(settings)
+
+    def stop(*_):
+        raise Stopped
+
+    with monkeypatch.context() as patched:
+        patched.setattr(f"shelfmap.{stage}", stop)
+        with pytest.raises(Stopped):
+            screen(settings)
+    assert kept_in(settings) == before
+    screen(settings)
+    assert_same_results(settings.output.path, undisturbed(settings, tmp_path))
+
+
 def test_a_run_by_several_processes_goes_on_from_one_by_one(settings, tmp_path, monkeypatch):
     screen_some(settings, monkeypatch, 1)
     screen(settings, workers=2)
@@ -337,6 +355,6 @@ def test_work_that_cannot_be_kept_is_one_sentence(settings, monkeypatch):
     def full(*_):
         raise OSError(28, "No space left on device")
 
-    monkeypatch.setattr(Path, "write_bytes", full)
+    monkeypatch.setattr(Path, "replace", full)
     with pytest.raises(ShelfmapError, match=r"out\.gpkg.*No space left on device.*make room on the disk"):
         screen(settings)
