@@ -112,7 +112,7 @@ def _lock(folder: Path, target: Path) -> IO[str]:
         raise LayerError(f"output {target}: {folder} is a link to another folder; remove it")
     while True:
         folder.mkdir(exist_ok=True)
-        lock = open(folder / _LOCK, "a", encoding="utf-8", opener=_open_no_link)  # noqa: PTH123, SIM115
+        lock = open(folder / _LOCK, "a", encoding="utf-8", opener=_open_no_link)  # noqa: SIM115
         if not _is_ours(lock):
             lock.close()
             raise LayerError(f"output {target}: another run is making it right now; wait for that, or use another name")
