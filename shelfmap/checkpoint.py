@@ -90,8 +90,7 @@ class Checkpoint:
         part = self._file(key).with_suffix(".part")
         try:
             part.unlink(missing_ok=True)  # of a killed run, or a link that somebody put there
-            with part.open("xb") as file:
-                file.write(hashlib.sha256(data).digest() + data)
+            part.write_bytes(hashlib.sha256(data).digest() + data)
             part.replace(self._file(key))
         except OSError as error:
             raise LayerError(

@@ -48,6 +48,8 @@ _CUTTING: Final = (";", "!", "\n", "\r", "\t")
 _HEAD_BYTES: Final = 4096
 _MOST_XML_BYTES: Final = 100_000_000
 _MOST_MEMBERS: Final = 10_000
+#: Dimensions, variables and attributes of a classic netCDF file: the library sets 3 kB aside for each it promises.
+_MOST_NAMES: Final = 100_000
 #: Virtual files may name virtual files, this deep.
 _MOST_LEVELS: Final = 8
 
@@ -138,6 +140,7 @@ def _why_refused(path: Path, level: int) -> str | None:
         head = stream.read(_HEAD_BYTES)
     return (
         _why_description(path, head, level)
+        or _why_netcdf(path, head)
         or next((why for inner in _members(path, head) if (why := _why_member(*inner))), None)
         or _why_beside(path)
     )
@@ -229,6 +232,45 @@ def _why_named(folder: Path, name: str, is_relative: bool, level: int) -> str | 
         return _why_refused(path, level + 1)
     except (OSError, ValueError) as error:
         return f"cannot be read ({error})"
+
+
+def _why_netcdf(path: Path, head: bytes) -> str | None:
+    """What speaks against a classic netCDF file: it promises more than it can hold, for which memory is set aside."""
+    if head[:4] not in (b"CDF\1", b"CDF\2", b"CDF\5"):
+        return None
+    word = 8 if head[3] == 5 else 4  # bytes of a count
+    promised, size = 0, path.stat().st_size
+    with path.open("rb") as stream:
+
+        def number(n_bytes: int = word) -> int:
+            return int.from_bytes(stream.read(n_bytes), "big")
+
+        def promises() -> range:
+            nonlocal promised
+            number(4)  # says of what there is a list
+            promised += (n := number())
+            return range(n if promised <= _MOST_NAMES else 0)
+
+        def skip(n_bytes: int) -> None:
+            stream.seek(min(stream.tell() - (-n_bytes // 4) * 4, size))
+
+        def attributes() -> None:
+            for _ in promises():
+                skip(number())
+                n_value_bytes = (1, 1, 1, 2, 4, 4, 8, 1, 2, 4, 8, 8)[min(number(4), 11)]
+                skip(number() * n_value_bytes)
+
+        skip(4 + word)
+        for _ in promises():
+            skip(number())
+            number()
+        attributes()
+        for _ in promises():
+            skip(number())
+            skip(number() * word)
+            attributes()
+            skip(4 + word + (4 if head[3] == 1 else 8))
+    return "is damaged: its header promises more than it can hold; copy it anew" if promised > _MOST_NAMES else None
 
 
 def _members(path: Path, head: bytes) -> Iterator[tuple[str, bytes]]:

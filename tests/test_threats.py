@@ -22,13 +22,15 @@ from http.server import BaseHTTPRequestHandler, ThreadingHTTPServer
 from pathlib import Path
 from xml.sax.saxutils import escape
 
+import numpy as np
 import pyarrow as pa
 import pyogrio
 import pytest
 import rasterio
 import shapely
 from rasterio.transform import Affine
-from test_mutated_grids import SETTINGS, tif
+from scipy.io import netcdf_file
+from test_mutated_grids import GOOD, SETTINGS, VALUES, tif
 from test_vector_inputs import TRANSECT, written
 from utils_fuzz import assert_sound, invoke, toml_text
 from utils_pipeline import settings_for
@@ -423,6 +425,27 @@ def test_archives_that_unpack_to_more_than_the_disk_are_not_unpacked(tmp_path):
         archive.writestr("a.tif", bytes(200_000_000))
     refused(read_grid, Path(f"/vsizip/{path}/a.tif"))
     refused(read_vector, path)
+
+
+@pytest.mark.parametrize("version", [1, 2])
+def test_netcdf_that_promises_what_it_cannot_hold_is_refused(tmp_path, version):
+    """Two million attributes in 2 kB: the library would set aside 7 GB for them, and take a quarter of a minute."""
+    path, lon = tmp_path / "g.nc", GOOD.x0 + GOOD.dx * np.arange(VALUES.shape[1])
+    with netcdf_file(path, "w", version=version) as file:
+        for name, values in (("lat", GOOD.y0 + GOOD.dy * np.arange(VALUES.shape[0])), ("lon", lon)):
+            file.createDimension(name, len(values))
+            file.createVariable(name, "f8", (name,))[:] = values
+            file.variables[name].units = "degrees_north" if name == "lat" else "degrees_east"
+        file.createVariable("elevation", "f4", ("lat", "lon"))[:] = VALUES
+        file.variables["elevation"].units = "m"
+    assert read_grid(path).file.n_cols == 30
+    content = path.read_bytes()
+    lists = [at for at in range(0, len(content) - 8, 4) if content[at : at + 8] == bytes([0, 0, 0, 12, 0, 0, 0, 1])]
+    assert len(lists) == 3
+    for at in lists:
+        path.write_bytes(content[: at + 5] + b"\x20" + content[at + 6 :])
+        assert "promises more than it can hold" in refused(read_grid, path)
+        assert "promises more than it can hold" in refused(read_vector, path)
 
 
 # ---- settings of a stranger
