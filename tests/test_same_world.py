@@ -104,6 +104,70 @@ def test_missing_cells_are_missing_however_they_are_told(tmp_path, plain, how):
     assert_same_results(plain["holed"], screened(tmp_path, path, grid=grid))
 
 
+@pytest.mark.real
+@pytest.mark.parametrize("how", ["rows from the south", "float64", "tiled and deflated", "netCDF", "depths"])
+def test_storage_moves_no_number_of_a_real_coast(tmp_path, how):
+    """A crop of the west coast of the United States, 36 to 42 N."""
+    with rasterio.open(DATA / "etopo1_us_west.tif") as grid:
+        values, step = grid.read(1)[::-1][40:101, 50:121].astype(np.float32), 0.1
+    place = {"x0": -127.0, "y0": 36.0, "dx": step, "dy": step}
+    run = {"coast": {"generalise_km": 30.0}, "transects": {"spacing_km": 30.0, "length_km": 200.0}}
+    one = screened(tmp_path, write_tif(tmp_path / "plain.tif", values, **place), "one", **run)
+    assert (read_table(one, "transects")["status"] == "ok").sum() >= 10
+    grid = {"positive": "down"} if how == "depths" else {}
+    if how == "netCDF":
+        lon, lat = (place[o] + step * np.arange(n) for o, n in (("x0", 71), ("y0", 61)))
+        path = write_nc(tmp_path / "other.nc", values, lon, lat)
+    else:
+        given_ = dict(STORED.get(how, {}))
+        stored = (-values if how == "depths" else values).astype(given_.pop("dtype", np.float32))
+        path = write_tif(tmp_path / "other.tif", stored, **place, **given_)
+    assert_same_results(one, screened(tmp_path, path, "two", grid=grid, **run))
+
+
+#: An island at 60 E on a band round the globe, eighths of a degree.
+AROUND_LON, AROUND_LAT = np.arange(0.0, 360.0, 0.125), np.arange(30.0, 50.01, 0.125)
+AROUND_RUN = {"transects": {"spacing_km": 40.0, "length_km": 250.0}, "coast": {"generalise_km": 40.0}}
+
+
+@pytest.fixture(scope="module")
+def around(tmp_path_factory):
+    """Depths of the band from 0 to 360 degrees, and the output of its run."""
+    away_m, _ = distance_bearing(60.0, 40.0, *np.meshgrid(AROUND_LON, AROUND_LAT))
+    values = np.round(-SHELF.depth_at(away_m - 300e3)).astype(np.float32)
+    folder = tmp_path_factory.mktemp("around")
+    return values, screened(folder, write_band(folder / "a.tif", values, 0.0), **AROUND_RUN)
+
+
+def write_band(path, values, x0):
+    return write_tif(path, values, x0=x0, y0=30.0, dx=0.125, dy=0.125)
+
+
+def test_last_column_that_repeats_the_first_moves_no_number(tmp_path, around):
+    values, plain = around
+    path = write_band(tmp_path / "r.tif", np.hstack([values, values[:, :1]]), 0.0)
+    assert_same_results(plain, screened(tmp_path, path, **AROUND_RUN))
+
+
+def test_globe_from_180_west_has_the_same_answers(tmp_path, around):
+    """The coast is closed on maps of tiles that begin elsewhere: stations within a metre, answers within 1e-4."""
+    values, plain = around
+    path = write_band(tmp_path / "t.tif", np.roll(values, 1440, axis=1), -180.0)
+    more = {"width_km": 0.01, "depth_m": 0.015, "relative": 1e-4, "gain": 1e-4}
+    assert assert_stations_alike(plain, screened(tmp_path, path, **AROUND_RUN), **more).max() < 1.0
+
+
+@pytest.mark.parametrize("x0", [-90.0, 60.0], ids=["elsewhere", "seam through the island"])
+def test_globe_that_begins_anywhere_has_like_answers(tmp_path, around, x0):
+    """A closed coast is measured from another of its points, so stations fall between the others: widths within
+    the cell of 14 km, depths within the fall of the shelf over it.
+    """
+    values, plain = around
+    path = write_band(tmp_path / "t.tif", np.roll(values, -round(x0 / 0.125), axis=1), x0)
+    more = {"width_km": 14.0, "depth_m": 21.0, "relative": 0.1, "gain": 0.01}
+    assert assert_stations_alike(plain, screened(tmp_path, path, **AROUND_RUN), **more).max() < 20.1e3
+
+
 def test_water_raised_is_ground_lowered(tmp_path, plain):
     """Whole metres, so that single precision holds the sum as it holds the grid."""
     path = write_tif(tmp_path / "raised.tif", DEPTHS + 7.0, **PLACE)
@@ -192,6 +256,27 @@ def test_a_mirror_image_has_the_same_answers(tmp_path, plain, axis):
 # ---- on other maps and cells: to what a cell explains
 
 
+def assert_stations_alike(path, other, *, width_km, depth_m, relative, gain):
+    """Every station has the status and answers of the nearest one of the other world."""
+    one, two = read_table(path, "transects"), read_table(other, "transects")
+    away_m, _ = distance_bearing(
+        one["lon_deg"][:, None], one["lat_deg"][:, None], two["lon_deg"][None], two["lat_deg"][None]
+    )
+    near = np.argmin(away_m, axis=1)
+    assert (one["status"] == two["status"][near]).all()
+    ok = one["status"] == "ok"
+    assert ok.sum() >= 6
+    for name, absolute, share in (
+        ("shelf_width_km", width_km, 0.0),
+        ("break_depth_m", depth_m, 0.0),
+        ("period1_h", 0.0, relative),
+        ("gain_m2", 0.0, gain),
+        ("index_max", 0.0, 2 * relative),
+    ):
+        np.testing.assert_allclose(two[name][near][ok], one[name][ok], rtol=share, atol=absolute, err_msg=name)
+    return np.min(away_m, axis=1)
+
+
 def of_uniform_coast(path):
     """Medians over the stations of a coast that is the same all along, those near the grid's ends left out."""
     table = read_table(path, "transects")
@@ -209,7 +294,7 @@ MAPS = {
     "polar stereographic south": (-72.0, 170.0, "EPSG:3031", 5000.0, (70, 90)),
     "polar stereographic north": (75.0, -45.0, "EPSG:3413", 5000.0, (70, 90)),
     "finer cells": (40.0, 3.0, "EPSG:4326", 0.03125, (96, 168)),
-    "cells half a cell away": (40.0 + 0.03125, 3.0 + 0.03125, "EPSG:4326", 0.0625, (48, 84)),
+    "cells half a cell away": (40.0, 3.0, "EPSG:4326", 0.0625, (49, 85)),  # odd: a centre where a corner was
 }
 
 
@@ -229,8 +314,11 @@ def test_a_uniform_coast_has_the_same_answers_on_any_map(tmp_path, name):
         path = write_tif(
             tmp_path / f"{number}.tif", grid.elevation_m, x0=grid.x0, y0=grid.y0, dx=grid.dx, dy=grid.dy, crs=grid.crs
         )
-        found.append(of_uniform_coast(screened(tmp_path, path, f"{number}", response={"rotation": False})))
-    one, two = found
+        found.append(screened(tmp_path, path, f"{number}", response={"rotation": False}))
+    # A shelf of 1:667 falls 5.3 m in 3.5 km; the index has the period and the width of the resonance in it.
+    away_m = assert_stations_alike(*found, width_km=3.5, depth_m=5.3, relative=0.04, gain=0.005)
+    assert away_m.max() < 12e3  # a whole spacing: one coast may reach beyond the other
+    one, two = map(of_uniform_coast, found)
     assert two["shelf_width_km"] == pytest.approx(one["shelf_width_km"], abs=3.5)
     assert two["break_depth_m"] == pytest.approx(one["break_depth_m"], abs=30.0)
     assert two["period1_h"] == pytest.approx(one["period1_h"], rel=0.04)
@@ -271,7 +359,11 @@ def test_both_polar_coasts_have_the_same_answers_on_a_map_and_in_degrees(tmp_pat
         "coast": {"generalise_km": 30.0},
         "response": {"rotation": False},
     }
-    tables = [read_table(screened(tmp_path, path, path.stem, **run), "transects") for path in (degrees, on_map)]
+    found = [screened(tmp_path, path, path.stem, **run) for path in (degrees, on_map)]
+    # Half a cell is 4 km, 4 % of the width, in which the shelf falls 6 m. What the gain exceeds 1 by, 0.154, goes with
+    # the square of the width: 8 % of it. Both coasts are rings whose stations begin anywhere: half a spacing apart.
+    assert assert_stations_alike(*found, width_km=4.0, depth_m=6.0, relative=0.04, gain=0.011).max() < 76e3
+    tables = [read_table(path, "transects") for path in found]
     for table in tables:
         assert (table["status"] == "ok").all()
         assert len(table["status"]) == pytest.approx(2 * np.pi * 1200 / 150, abs=2)
