@@ -144,9 +144,11 @@ def write_band(path, values, x0):
 
 
 def test_last_column_that_repeats_the_first_moves_no_number(tmp_path, around):
-    values, plain = around
-    path = write_band(tmp_path / "r.tif", np.hstack([values, values[:, :1]]), 0.0)
-    assert_same_results(plain, screened(tmp_path, path, **AROUND_RUN))
+    """The seam goes through the island."""
+    values = np.roll(around[0], -480, axis=1)
+    one = screened(tmp_path, write_band(tmp_path / "o.tif", values, 60.0), "one", **AROUND_RUN)
+    path = write_band(tmp_path / "r.tif", np.hstack([values, values[:, :1]]), 60.0)
+    assert_same_results(one, screened(tmp_path, path, "two", **AROUND_RUN))
 
 
 def test_globe_from_180_west_has_the_same_answers(tmp_path, around):
@@ -318,6 +320,10 @@ def test_a_uniform_coast_has_the_same_answers_on_any_map(tmp_path, name):
     # A shelf of 1:667 falls 5.3 m in 3.5 km; the index has the period and the width of the resonance in it.
     away_m = assert_stations_alike(*found, width_km=3.5, depth_m=5.3, relative=0.04, gain=0.005)
     assert away_m.max() < 12e3  # a whole spacing: one coast may reach beyond the other
+    for path in found:  # the coast is a meridian, and the cells beside it are those of an even slope
+        table = read_table(path, "transects")
+        across_m, _ = distance_bearing(table["lon_deg"], table["lat_deg"], lon, table["lat_deg"])
+        assert across_m.max() < 0.1  # 0.02 m at most: the shore is read on an even slope
     one, two = map(of_uniform_coast, found)
     assert two["shelf_width_km"] == pytest.approx(one["shelf_width_km"], abs=3.5)
     assert two["break_depth_m"] == pytest.approx(one["break_depth_m"], abs=30.0)
