@@ -2,6 +2,7 @@
 
 __all__ = [
     "CoastError",
+    "FieldError",
     "GridError",
     "LayerError",
     "OutputExistsError",
@@ -35,6 +36,10 @@ class TransectError(ShelfmapError, ValueError):
 
 class ResponseError(ShelfmapError, ValueError):
     """The long-wave response is asked of arrays that do not fit together."""
+
+
+class FieldError(ShelfmapError, ValueError):
+    """A region's 2-D response cannot be computed: its waters, its open edge or its size are not as they must be."""
 
 
 class LayerError(ShelfmapError, OSError):

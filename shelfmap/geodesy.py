@@ -18,6 +18,7 @@ __all__ = [
     "distance_bearing",
     "geodesic_nodes",
     "local_projection",
+    "positions_m",
     "unwrap_along",
     "unwrap_lon_deg",
 ]
@@ -141,6 +142,36 @@ def area_m2(lon_deg: ArrayLike, lat_deg: ArrayLike) -> float:
     """
     area, _ = _GEOD.polygon_area_perimeter(np.asarray(lon_deg, dtype=float), np.asarray(lat_deg, dtype=float))
     return abs(float(area))
+
+
+def positions_m(lon_deg: ArrayLike, lat_deg: ArrayLike) -> FloatArray:
+    """Places of points of the ellipsoid in space: distances that know no seam and no pole.
+
+    Parameters
+    ----------
+    lon_deg, lat_deg : (...) array_like of float
+        Degrees.
+
+    Returns
+    -------
+    (..., 3) array of float
+        Metres from the Earth's centre towards longitude 0, longitude 90 on the equator, and the north pole.
+
+    Examples
+    --------
+    >>> positions_m([0.0, 90.0], [0.0, 0.0]).round(1).tolist()
+    [[6378137.0, 0.0, 0.0], [0.0, 6378137.0, 0.0]]
+    """
+    lon, lat = np.radians(np.asarray(lon_deg, dtype=float)), np.radians(np.asarray(lat_deg, dtype=float))
+    across_m = _GEOD.a / np.sqrt(1.0 - _GEOD.es * np.sin(lat) ** 2)
+    return np.stack(
+        [
+            across_m * np.cos(lat) * np.cos(lon),
+            across_m * np.cos(lat) * np.sin(lon),
+            across_m * (1.0 - _GEOD.es) * np.sin(lat),
+        ],
+        axis=-1,
+    )
 
 
 class Projection:

@@ -10,9 +10,10 @@ import json
 import re
 import tomllib
 from pathlib import Path
-from typing import Annotated, Any, Final, Literal, Self, TypeVar
+from typing import Annotated, Any, Final, Literal, Self, TypeVar, get_args
 
 from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, ValidationError, field_validator, model_validator
+from pydantic.fields import FieldInfo
 
 from shelfmap.constants import CONSTITUENTS
 from shelfmap.errors import SettingsError
@@ -21,6 +22,7 @@ __all__ = [
     "VOID_LAND_M",
     "CoastSettings",
     "DepthErrorSettings",
+    "FieldSettings",
     "GridSettings",
     "OutputSettings",
     "ResponseSettings",
@@ -117,6 +119,14 @@ def _as_paths(value: object) -> object:
     return tuple(value)
 
 
+def _check_box(box: tuple[float, float, float, float]) -> None:
+    west, south, east, north = box
+    if not -90 <= south < north <= 90:
+        raise ValueError(f"box = {list(box)}: south must be below north, both within -90 and 90")
+    if not (-360 <= west <= 360 and -360 <= east <= 360) or west == east:
+        raise ValueError(f"box = {list(box)}: west and east must differ and lie within -360 and 360")
+
+
 _S = TypeVar("_S", bound=BaseModel)
 ConstituentName = Annotated[str, BeforeValidator(_constituent_name)]
 FilePath = Annotated[Path, BeforeValidator(_as_path)]
@@ -197,11 +207,7 @@ class CoastSettings(_Stage):
     @model_validator(mode="after")
     def _box_in_order(self) -> Self:
         if self.box is not None:
-            west, south, east, north = self.box
-            if not -90 <= south < north <= 90:
-                raise ValueError(f"box = {list(self.box)}: south must be below north, both within -90 and 90")
-            if not (-360 <= west <= 360 and -360 <= east <= 360) or west == east:
-                raise ValueError(f"box = {list(self.box)}: west and east must differ and lie within -360 and 360")
+            _check_box(self.box)
         return self
 
 
@@ -346,6 +352,90 @@ class DepthErrorSettings(_Stage):
     )
 
 
+Side = Literal["south", "east", "north", "west"]
+
+
+class FieldSettings(_Stage):
+    """The 2-D response of a region: which waters, where they are open, and what is asked of them.
+
+    Constituents, further periods, rotation and friction are those of the response of the transects.
+    """
+
+    box: tuple[float, float, float, float] | None = Field(
+        None, description="Region: west, south, east, north, degrees; default the whole grid."
+    )
+    file: FilePath | None = Field(None, description="Vector file of polygons: the region is what lies inside.")
+    layer: str | None = Field(None, description="Layer of that file, where it holds several.")
+    cell_km: float | None = Field(
+        None, ge=0.01, le=500, description="Size of the cells, km: means of whole blocks of the grid's; default its own."
+    )
+    open_sides: tuple[Side, ...] | None = Field(
+        None,
+        description="Sides of the box where its water meets the open sea; default every stretch of water at the "
+        "region's edge that gets `open_depth_m` deep.",
+    )
+    open_file: FilePath | None = Field(
+        None, description="Vector file of polygons instead: the region's edge is open inside them."
+    )
+    open_layer: str | None = Field(None, description="Layer of that file, where it holds several.")
+    open_depth_m: float = Field(
+        200.0, ge=0, le=11_000, description="Depth that water at the region's edge must reach somewhere to be open, m."
+    )
+    edge: Literal["radiating", "held"] = Field(
+        "radiating",
+        description="What an open edge does: lets waves out (radiating), or has an elevation of its own (held).",
+    )
+    shallowest_m: float = Field(2.0, ge=0, le=1000, description="Shallower cells are taken as land, m.")
+    least_depth_m: float = Field(
+        10.0,
+        ge=0,
+        le=1000,
+        description="Shallower water that is kept is taken to be this deep, m: channels carry more than a mean depth.",
+    )
+    drag: float | None = Field(
+        2.5e-3,
+        gt=0,
+        le=0.1,
+        description="Quadratic drag coefficient where the tide at the edge is known, from gauges or `edge_tide_m`; "
+        "otherwise, or with none, response.friction_m_s holds. Write drag = false for none.",
+    )
+    edge_tide_m: dict[ConstituentName, Annotated[float, Field(gt=0, le=20)]] = Field(
+        default_factory=dict, description="Amplitude of the tide at the open edge by constituent, m, without gauges."
+    )
+    modes: int = Field(6, ge=0, le=40, description="Natural modes wanted.")
+    mode_period_h: float = Field(
+        12.42, ge=0.02, le=1000, description="Period near which natural modes are looked for, h."
+    )
+    points_file: FilePath | None = Field(
+        None, description="Vector file of points at which gain is given against period; default the gauges."
+    )
+    points_layer: str | None = Field(None, description="Layer of that file, where it holds several.")
+    spectrum_h: tuple[Annotated[float, Field(ge=0.02, le=1000)], Annotated[float, Field(ge=0.02, le=1000)]] | None = (
+        Field(None, description="Shortest and longest period of that curve, h; without it none is made.")
+    )
+    memory_gb: float = Field(4.0, gt=0, le=4096, description="Memory the solution may take, GB.")
+    folder: FilePath | None = Field(
+        None, description="Folder for the maps; default output.path with _field instead of .gpkg."
+    )
+
+    @field_validator("drag", mode="before")
+    @classmethod
+    def _no_drag(cls, value: object) -> object:
+        return None if value is False else value
+
+    @model_validator(mode="after")
+    def _consistent(self) -> Self:
+        if self.box is not None:
+            _check_box(self.box)
+        if self.open_sides is not None and self.open_file is not None:
+            raise ValueError("open_sides and open_file are both given: leave one")
+        if self.open_sides is not None and len(set(self.open_sides)) != len(self.open_sides):
+            raise ValueError(f"open_sides = {list(self.open_sides)}: the same side stands twice")
+        if self.spectrum_h is not None and not self.spectrum_h[0] < self.spectrum_h[1]:
+            raise ValueError(f"spectrum_h = {list(self.spectrum_h)}: the shorter period comes first")
+        return self
+
+
 class OutputSettings(_Stage):
     """What is written, and where."""
 
@@ -365,6 +455,9 @@ class Settings(_Stage):
     shelf_break: ShelfBreakSettings = ShelfBreakSettings()
     response: ResponseSettings = ResponseSettings()
     depth_error: DepthErrorSettings = DepthErrorSettings()
+    field: FieldSettings | None = Field(
+        None, description="Section of the 2-D response; without it there are transects only."
+    )
     output: OutputSettings = OutputSettings()
 
     @model_validator(mode="after")
@@ -436,14 +529,20 @@ def markdown_settings() -> str:
 def _setting_rows(model: type[BaseModel], stem: str) -> list[str]:
     rows = []
     for name, field in model.model_fields.items():
-        inner = field.annotation
-        if isinstance(inner, type) and issubclass(inner, BaseModel):
+        inner = _section(field)
+        if inner is not None:
             rows += _setting_rows(inner, f"{stem}{name}.")
             continue
         default = field.get_default(call_default_factory=True)
         shown = "none" if default is None else f"`{json.dumps(default, default=str)}`"
         rows.append(f"| `{stem}{name}` | {'must be given' if field.is_required() else shown} | {field.description} |")
     return rows
+
+
+def _section(field: FieldInfo) -> type[BaseModel] | None:
+    """Class of a setting that is a section, one that may be left out too; None for a value."""
+    kinds = [kind for kind in (field.annotation, *get_args(field.annotation)) if isinstance(kind, type)]
+    return next((kind for kind in kinds if issubclass(kind, BaseModel)), None)
 
 
 def _rooted(settings: _S, folder: Path) -> _S:
@@ -481,8 +580,8 @@ def _known_names(model: type[BaseModel], loc: tuple[int | str, ...]) -> set[str]
     """Names of the settings at one place of the tree."""
     for part in loc:
         field = model.model_fields.get(str(part))
-        inner = None if field is None else field.annotation
-        if not (isinstance(inner, type) and issubclass(inner, BaseModel)):
+        inner = None if field is None else _section(field)
+        if inner is None:
             return set()
         model = inner
     return set(model.model_fields)

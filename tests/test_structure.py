@@ -18,7 +18,8 @@ PACKAGE = Path(shelfmap.__file__).parent
 ORDER = [
     "errors", "workers", "constants", "words", "settings", "geodesy", "_kernels", "vertical", "localfiles",
     "rasterfile", "lattice", "sheets", "grid", "inspection", "rasters", "synthetic", "demo", "basins", "chains",
-    "closing", "coast", "transects", "profiles", "shelfbreak", "deepsea", "modes", "response", "index", "assess",
+    "closing", "coast", "transects", "profiles", "shelfbreak", "deepsea", "modes", "response", "index", "dissection",
+    "waters", "mesh", "longwave", "freemodes", "edgetide", "field", "assess",
     "columns", "antimeridian", "replacement", "checkpoint", "vectors", "layers", "geopackage", "tables", "stations",
     "inputs", "provenance", "sections", "laying", "pipeline", "cli", "__main__",
 ]  # fmt: skip
