@@ -3,8 +3,8 @@
 The response is linear in the edge tide, so that the response to a handful of shapes, at the gauges, is all it takes.
 The shapes are the leading principal components of a smooth random field along the edge (Gaussian covariance of the
 distance in space), scaled to unit variance; their complex amplitudes and the local error of a gauge are independent
-Gaussians whose sizes make the gauges most likely. Gauges far off weigh less (Huber 1964, Ann. Math. Statist. 35,
-73-101, from memory).
+Gaussians whose sizes make the gauges most likely. Gauges far off weigh less, as errors with Student's t distribution
+of four degrees of freedom want it (Lange, Little & Taylor 1989, J. Am. Stat. Assoc. 84, 881-896, from memory).
 """
 
 from dataclasses import dataclass
@@ -29,18 +29,19 @@ LEAST_SHARE: Final = 1e-4
 MOST_SHAPES: Final = 40
 #: So many nodes of an edge settle the shapes.
 _NODES: Final = 500
-#: Residuals beyond so many local errors weigh less.
-HUBER: Final = 2.0
+#: Degrees of freedom of the distribution of local errors.
+FREEDOM: Final = 4.0
 #: Local error of a gauge: at least this share of the tide at the gauges.
 LEAST_LOCAL: Final = 0.03
 #: A gauge is off if unseen it is predicted worse than this many standard deviations.
 OFF: Final = 3.0
-_TURNS: Final = 30
+_TURNS: Final = 100
 
 
 def edge_shapes(mesh: Mesh) -> FloatArray:
-    """Shapes an edge tide is made of, (k, n), at the nodes of `Mesh.edge_node`: a sum with amplitudes of unit variance
-    has unit variance along the edge, and is smooth over 1200 km.
+    """Shapes an edge tide is made of, (k, n), at the k nodes of `Mesh.edge_node`.
+
+    Their sum with amplitudes of unit variance has unit variance along the edge, and is smooth over 1200 km.
     """
     node = mesh.edge_node
     place = positions_m(mesh.node_lon_deg[node], mesh.node_lat_deg[node])
@@ -69,7 +70,7 @@ class EdgeFit:
     local_sd_m : float
         Local error of a gauge: what the cells do not show, root mean square.
     weight : (g,) array of float
-        Of each gauge, 1 or less; 0 where it has no value.
+        Of each gauge, 1.5 or less; 0 where it has no value.
     fitted, left_out : (g,) array of complex
         Tide at each gauge: fitted to all, and to all others; metres.
     left_out_sd_m : (g,) array of float
@@ -114,7 +115,8 @@ def fit_edge(response: ComplexArray, observed: ComplexArray) -> EdgeFit:
         inverse = np.linalg.inv((x.conj().T * weight) @ x + local_var / tide_var * np.eye(x.shape[1]))
         amplitude = inverse @ (x.conj().T @ (weight * y))
         before = weight
-        weight = np.minimum(1.0, HUBER * np.sqrt(local_var) / np.maximum(abs(y - x @ amplitude), 1e-300))
+        off = abs(y - x @ amplitude) ** 2 / local_var
+        weight = np.asarray((FREEDOM + 2.0) / (FREEDOM + 2.0 * off))  # two real errors in a complex one
         if np.allclose(weight, before, rtol=0, atol=1e-3):
             break
     fitted = response @ amplitude
@@ -125,7 +127,7 @@ def fit_edge(response: ComplexArray, observed: ComplexArray) -> EdgeFit:
     unseen = np.where(is_seen, observed - (observed - fitted) / (1.0 - lever), fitted)
     return EdgeFit(
         amplitude=amplitude,
-        covariance=local_var * inverse,
+        covariance=np.asarray(local_var * inverse, dtype=complex),
         tide_sd_m=float(np.sqrt(tide_var)),
         local_sd_m=float(np.sqrt(local_var)),
         weight=all_weights,
@@ -153,8 +155,9 @@ def _sizes(x: ComplexArray, y: ComplexArray, weight: FloatArray) -> tuple[float,
 
 
 def explained_share(observed: ComplexArray, predicted: ComplexArray) -> float:
-    """Share of the tide's variance that a prediction explains: 1 less the sum of squared vector errors over that of
-    the amplitudes; NaN without gauges that have both.
+    """Share of the tide's variance that a prediction explains; NaN without gauges that have both.
+
+    1 less the sum of squared vector errors over that of squared amplitudes.
 
     Examples
     --------

@@ -25,9 +25,11 @@ from shelfmap.errors import FieldError
 from shelfmap.mesh import Mesh
 
 __all__ = [
+    "Ellipse",
     "Factors",
     "currents",
     "edge_supply",
+    "ellipse",
     "factorise",
     "floored_friction",
     "memory_bytes",
@@ -51,7 +53,9 @@ PIVOT_THRESHOLD: Final = 0.01
 
 def floored_friction(mesh: Mesh, friction_m_s: ArrayLike) -> FloatArray:
     """Rate r / h at which friction slows the water of each cell, (n,), 1/s; see the floors above."""
-    friction = np.maximum(np.broadcast_to(np.asarray(friction_m_s, dtype=float), mesh.depth_m.shape), LEAST_FRICTION_M_S)
+    friction = np.maximum(
+        np.broadcast_to(np.asarray(friction_m_s, dtype=float), mesh.depth_m.shape), LEAST_FRICTION_M_S
+    )
     return np.asarray(friction / np.maximum(mesh.depth_m, FRICTION_FLOOR_M))
 
 
@@ -78,15 +82,15 @@ def wave_matrix(mesh: Mesh, omega: complex, friction_m_s: ArrayLike) -> Any:
         Its product with elevations is the supply of water to the nodes, m3/s.
     """
     s = floored_friction(mesh, friction_m_s) - 1j * omega
-    spread = GRAVITY_M_S2 * mesh.depth_m / (s * s + mesh.coriolis_rad_s**2)
+    spread: ComplexArray = GRAVITY_M_S2 * mesh.depth_m / (s * s + mesh.coriolis_rad_s**2)
     south, product, west = mesh.sides.T
     per_metre = np.stack([west, -product, south], axis=1) / mesh.area_m2[:, None]
     data = np.zeros(len(mesh.indices), dtype=complex)
     add_pixels(
         mesh.corner,
-        -1j * omega * mesh.area_m2,
+        (-1j * omega * mesh.area_m2).astype(complex),
         spread * s,
-        spread * mesh.coriolis_rad_s,
+        spread * mesh.coriolis_rad_s.astype(complex),
         twist_area(mesh) * GRAVITY_M_S2 * mesh.depth_m / s,
         per_metre,
         mesh.indptr,
@@ -149,9 +153,7 @@ def factorise(mesh: Mesh, omega: complex, friction_m_s: ArrayLike) -> Factors:
     if mesh.is_held:
         matrix = matrix[: mesh.n_free, : mesh.n_free]
     try:
-        lu = splu(
-            matrix, permc_spec="NATURAL", diag_pivot_thresh=PIVOT_THRESHOLD, options={"SymmetricMode": True}
-        )
+        lu = splu(matrix, permc_spec="NATURAL", diag_pivot_thresh=PIVOT_THRESHOLD, options={"SymmetricMode": True})
     except RuntimeError as error:
         raise FieldError(
             f"field: the matrix at {2 * np.pi / abs(omega) / 3600:.4g} h has no inverse ({error}); change the period "
@@ -196,6 +198,40 @@ def currents(
     east, north = mesh.gradient(elevation)
     factor, f = -GRAVITY_M_S2 / (s * s + mesh.coriolis_rad_s**2), mesh.coriolis_rad_s
     return factor * (s * east + f * north), factor * (s * north - f * east)
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Ellipse:
+    """The ellipse that a current's tip runs through, n cells."""
+
+    major_m_s: FloatArray
+    """(n,) largest speed, m/s."""
+    minor_m_s: FloatArray
+    """(n,) smallest speed, m/s; negative where the current turns clockwise."""
+    bearing_deg: FloatArray
+    """(n,) compass bearing of the largest speed, from 0 up to 180 degrees."""
+
+
+def ellipse(east: ComplexArray, north: ComplexArray) -> Ellipse:
+    """Ellipse of a current from its east and north part, m/s.
+
+    The sum of two rotary currents, one turning each way (Foreman 1978, Pacific Marine Science Report 78-6, from
+    memory).
+
+    Examples
+    --------
+    >>> flow = ellipse(np.array([1.0 + 0j]), np.array([1.0 + 0j]))
+    >>> flow.major_m_s.round(3), flow.bearing_deg.round(3)
+    (array([1.414]), array([45.]))
+    """
+    # u + i v = left exp(i omega t) + right exp(-i omega t), with time factor exp(-i omega t) for u and v
+    left, right = (np.conj(east) + 1j * np.conj(north)) / 2, (east + 1j * north) / 2
+    inclination = (np.angle(left) + np.angle(right)) / 2
+    return Ellipse(
+        major_m_s=abs(left) + abs(right),
+        minor_m_s=abs(left) - abs(right),
+        bearing_deg=np.mod(90.0 - np.degrees(inclination), 180.0),
+    )
 
 
 def memory_bytes(n_free: int, n_shapes: int = 1) -> float:

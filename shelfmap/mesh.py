@@ -155,10 +155,10 @@ def make_mesh(waters: Waters, *, rotation: bool = True, held: bool = False) -> M
     order = _elimination_order(node_row, node_col, is_free)
     number = np.empty(len(order), dtype=np.int32)
     number[order] = np.arange(len(order), dtype=np.int32)
-    corner, ends = number[corner], number[ends]
+    numbered, ends = number[corner], number[ends]
     edge_node = np.unique(ends)
     indptr, indices = np.zeros(len(order) + 1, np.int32), np.empty(9 * len(order), np.int32)
-    n_entries = meetings(corner, indptr, indices)
+    n_entries = meetings(numbered, indptr, indices)
     south_side, west_side, sides_m2 = _ground(waters, is_wet)
     lon, lat = waters.lonlat_of(node_col[order] - 0.5, node_row[order] - 0.5)
     coriolis = 2.0 * EARTH_ROTATION_RAD_S * np.sin(np.radians(waters.lonlat()[1][is_wet]))
@@ -166,7 +166,7 @@ def make_mesh(waters: Waters, *, rotation: bool = True, held: bool = False) -> M
     across = np.repeat([0, 2, 0, 2], [len(cells) for cells in sides])  # south and north sides run along the south one
     return Mesh(
         cell=np.flatnonzero(is_wet),
-        corner=corner,
+        corner=numbered,
         depth_m=waters.depth_m[is_wet],
         coriolis_rad_s=coriolis * rotation,
         area_m2=south_side[:, 0] * west_side[:, 1] - south_side[:, 1] * west_side[:, 0],

@@ -24,8 +24,9 @@ from shelfmap.response import (
 )
 from shelfmap.settings import Settings
 from shelfmap.shelfbreak import ShelfBreaks, find_shelf_breaks, measure_picked_breaks
-from shelfmap.tables import Screened, profile_layer, response_layer, station_columns, transect_columns, waves_of
+from shelfmap.tables import Screened, profile_layer, response_layer, station_columns, transect_columns
 from shelfmap.transects import Transects
+from shelfmap.waves import waves_of
 
 __all__ = [
     "CURVE_PERIODS_H",

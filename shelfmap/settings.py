@@ -367,7 +367,10 @@ class FieldSettings(_Stage):
     file: FilePath | None = Field(None, description="Vector file of polygons: the region is what lies inside.")
     layer: str | None = Field(None, description="Layer of that file, where it holds several.")
     cell_km: float | None = Field(
-        None, ge=0.01, le=500, description="Size of the cells, km: means of whole blocks of the grid's; default its own."
+        None,
+        ge=0.01,
+        le=500,
+        description="Size of the cells, km: means of whole blocks of the grid's; default its own.",
     )
     open_sides: tuple[Side, ...] | None = Field(
         None,

@@ -11,8 +11,9 @@ from shelfmap.coast import Coast
 from shelfmap.columns import columns_of
 from shelfmap.layers import Layer
 from shelfmap.settings import Settings
-from shelfmap.tables import Columns, waves_of
+from shelfmap.tables import Columns
 from shelfmap.transects import Transects, coast_pieces, crossing_transects
+from shelfmap.waves import waves_of
 
 __all__ = ["station_layers"]
 

@@ -9,7 +9,6 @@ import shapely
 from numpy.typing import NDArray
 
 from shelfmap.assess import SHUT_OFF_RATIO, doubts, sills
-from shelfmap.constants import CONSTITUENTS
 from shelfmap.geodesy import unwrap_lon_deg
 from shelfmap.index import ResonanceIndex, index_class
 from shelfmap.layers import Layer
@@ -18,18 +17,16 @@ from shelfmap.response import ShelfModes, WaveResponse
 from shelfmap.settings import Settings
 from shelfmap.shelfbreak import ShelfBreaks
 from shelfmap.transects import Transects
-from shelfmap.words import wave_label
+from shelfmap.waves import Wave, waves_of
 
 __all__ = [
     "WORKING_COLUMNS",
     "Columns",
     "Screened",
-    "Wave",
     "profile_layer",
     "response_layer",
     "station_columns",
     "transect_columns",
-    "waves_of",
 ]
 
 FloatArray = NDArray[np.float64]
@@ -37,24 +34,6 @@ Columns = dict[str, NDArray[Any]]
 
 #: Columns of `station_columns` that are in no layer.
 WORKING_COLUMNS: Final = ("line", "shore_lon", "break_lon", "remarks", "n_doubts")
-
-
-@dataclass(frozen=True, slots=True)
-class Wave:
-    """A wave asked for."""
-
-    name: str
-    """Constituent, or empty for a further period."""
-    label: str
-    """How columns call it."""
-    period_h: float
-    """Period, hours."""
-
-
-def waves_of(settings: Settings) -> tuple[Wave, ...]:
-    """Waves of a run: constituents in the order asked for, then further periods."""
-    named = [Wave(name, wave_label(name), CONSTITUENTS[name].period_h) for name in settings.response.constituents]
-    return (*named, *(Wave("", wave_label(period), period) for period in settings.response.periods_h))
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -81,8 +81,8 @@ def open_waters(
     is_wet = inside & (depth_m > 0) & (depth_m >= settings.shallowest_m)
     if not is_wet.any():
         raise FieldError(
-            f"field: no water as deep as {settings.shallowest_m:g} m in the region; check field.box, field.shallowest_m "
-            "and grid.positive"
+            f"field: no water as deep as {settings.shallowest_m:g} m in the region; check field.box, "
+            "field.shallowest_m and grid.positive"
         )
     meets_edge = _outer_sides(inside, depth_m) & is_wet
     is_open = _opened(lattice, depth_m, meets_edge, settings, open_area)
@@ -160,7 +160,9 @@ def _window(source: GridSource, box: tuple[float, float, float, float] | None) -
         if row0 < row1 and col0 < col1:
             return row0, row1, col0, min(col1, col0 + source.n_cols)
     covered = ", ".join(f"{edge:g}" for edge in source.box_deg)
-    raise FieldError(f"field.box = {list(box)} lies outside the grid, which covers west, south, east, north = {covered}")
+    raise FieldError(
+        f"field.box = {list(box)} lies outside the grid, which covers west, south, east, north = {covered}"
+    )
 
 
 def _inside(lattice: Lattice, box: tuple[float, float, float, float] | None, region: Geometries | None) -> BoolArray:
@@ -189,9 +191,7 @@ def _outer_sides(inside: BoolArray, depth_m: FloatArray) -> BoolArray:
     """Sides (4, n_rows, n_cols) of the region's cells beyond which the region ends, and the land does not begin."""
     goes_on = np.pad(~inside & ~(depth_m <= 0), 1, constant_values=True)
     n_rows, n_cols = inside.shape
-    return np.array(
-        [inside & goes_on[1 + row : 1 + row + n_rows, 1 + col : 1 + col + n_cols] for row, col in _ACROSS]
-    )
+    return np.array([inside & goes_on[1 + row : 1 + row + n_rows, 1 + col : 1 + col + n_cols] for row, col in _ACROSS])
 
 
 def _opened(
@@ -218,7 +218,7 @@ def _opened(
                     f"{', '.join(side for side, row in zip(SIDES, meets_edge, strict=True) if row.any()) or 'none'}"
                 )
         wanted = np.isin(SIDES, settings.open_sides)
-        return meets_edge & wanted[:, None, None]
+        return np.asarray(meets_edge & wanted[:, None, None])
     stretch, n_stretches = ndimage.label(meets_edge.any(axis=0), structure=np.ones((3, 3)))
     deepest_m = ndimage.maximum(depth_m, stretch, np.arange(1, n_stretches + 1)) if n_stretches else np.empty(0)
     is_deep = np.concatenate([[False], np.asarray(deepest_m) >= settings.open_depth_m])
@@ -244,7 +244,7 @@ def _reached(is_wet: BoolArray, is_open: BoolArray) -> tuple[BoolArray, BoolArra
     """Cells that water reaches from an open side through sides of cells, and the open sides of these."""
     basin, _ = ndimage.label(is_wet)
     reached = np.isin(basin, np.unique(basin[is_open.any(axis=0)])) & is_wet
-    return reached, is_open & reached
+    return reached, np.asarray(is_open & reached)
 
 
 def _remarks(

@@ -37,7 +37,13 @@ class Mapped(Protocol):
 
 
 @contextmanager
-def mapping(workers: int = 1, executor: Executor | None = None, scheduler: str | None = None) -> Iterator[Mapped]:
+def mapping(
+    workers: int = 1,
+    executor: Executor | None = None,
+    scheduler: str | None = None,
+    *,
+    together: int = TOGETHER,
+) -> Iterator[Mapped]:
     """Give the `map` of a run.
 
     Parameters
@@ -61,9 +67,9 @@ def mapping(workers: int = 1, executor: Executor | None = None, scheduler: str |
         raise SettingsError(f"workers = {workers}: at least 1")
     try:
         if executor is not None:
-            yield _ordered(executor, AHEAD * (os.cpu_count() or 1))
+            yield _ordered(executor, AHEAD * (os.cpu_count() or 1), together)
         elif scheduler is not None:
-            with _cluster(scheduler) as mapped:
+            with _cluster(scheduler, together) as mapped:
                 yield mapped
         elif workers == 1:
             yield map
@@ -71,7 +77,7 @@ def mapping(workers: int = 1, executor: Executor | None = None, scheduler: str |
             # workers leave Ctrl-C to this process, which then ends them
             context = multiprocessing.get_context("spawn")
             with ProcessPoolExecutor(workers, mp_context=context, initializer=_obey_parent) as pool:
-                yield _ordered(pool, AHEAD * workers)
+                yield _ordered(pool, AHEAD * workers, together)
     except BrokenExecutor as error:
         raise ShelfmapError(
             f"a worker process died ({error}), most often for want of memory; run again with fewer workers or a larger "
@@ -79,12 +85,12 @@ def mapping(workers: int = 1, executor: Executor | None = None, scheduler: str |
         ) from error
 
 
-def _ordered(executor: Executor, ahead: int) -> Mapped:
+def _ordered(executor: Executor, ahead: int, together: int) -> Mapped:
     """Map over an executor in order, with at most `ahead` parcels of jobs handed out and not yet collected."""
 
     def mapped(function: Callable[[_Job], _Result], jobs: Iterable[_Job], /) -> Iterator[_Result]:
         remaining = iter(jobs)
-        parcels = iter(lambda: list(itertools.islice(remaining, TOGETHER)), [])
+        parcels = iter(lambda: list(itertools.islice(remaining, together)), [])
         waiting: deque[Future[list[_Result]]] = deque(
             executor.submit(_each, function, parcel) for parcel in itertools.islice(parcels, ahead)
         )
@@ -105,7 +111,7 @@ def _each(function: Callable[[_Job], _Result], jobs: list[_Job]) -> list[_Result
 
 
 @contextmanager
-def _cluster(address: str) -> Iterator[Mapped]:
+def _cluster(address: str, together: int) -> Iterator[Mapped]:
     """Map over the workers of a dask.distributed scheduler; jobs of workers that are lost are done again by others."""
     try:
         from distributed import Client  # noqa: PLC0415 - an extra, and slow to import
@@ -125,7 +131,7 @@ def _cluster(address: str) -> Iterator[Mapped]:
         if not n_workers:
             raise SettingsError(f"scheduler {address} has no workers; start some and run again")
         # pure=False: dask would else take equal jobs of two runs for one
-        yield _ordered(client.get_executor(pure=False, retries=RETRIES), AHEAD * n_workers)
+        yield _ordered(client.get_executor(pure=False, retries=RETRIES), AHEAD * n_workers, together)
 
 
 def _obey_parent() -> None:

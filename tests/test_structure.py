@@ -16,10 +16,10 @@ PACKAGE = Path(shelfmap.__file__).parent
 
 #: Modules from the ground up; a module may import those before it. `_kernels` stands for all compiled loops.
 ORDER = [
-    "errors", "workers", "constants", "words", "settings", "geodesy", "_kernels", "vertical", "localfiles",
+    "errors", "workers", "constants", "words", "settings", "waves", "geodesy", "_kernels", "vertical", "localfiles",
     "rasterfile", "lattice", "sheets", "grid", "inspection", "rasters", "synthetic", "demo", "basins", "chains",
-    "closing", "coast", "transects", "profiles", "shelfbreak", "deepsea", "modes", "response", "index", "dissection",
-    "waters", "mesh", "longwave", "freemodes", "edgetide", "field", "assess",
+    "closing", "coast", "transects", "profiles", "shelfbreak", "deepsea", "modes", "response", "index", "gauges",
+    "dissection", "waters", "mesh", "longwave", "freemodes", "edgetide", "field", "assess",
     "columns", "antimeridian", "replacement", "checkpoint", "vectors", "layers", "geopackage", "tables", "stations",
     "inputs", "provenance", "sections", "laying", "pipeline", "cli", "__main__",
 ]  # fmt: skip

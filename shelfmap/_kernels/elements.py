@@ -5,10 +5,15 @@ A pixel has four corners in the order south-west, south-east, north-east, north-
 
 import numpy as np
 from numba import njit
+from numpy.typing import NDArray
+
+ComplexArray = NDArray[np.complex128]
+FloatArray = NDArray[np.float64]
+IntArray = NDArray[np.int32]
 
 
-@njit(cache=True)
-def meetings(corner, indptr, indices):
+@njit(cache=True, error_model="numpy")
+def meetings(corner: IntArray, indptr: IntArray, indices: IntArray) -> int:
     """Fill in the pattern of a matrix in which the corners of a pixel meet; return how many entries it has.
 
     Parameters
@@ -48,8 +53,18 @@ def meetings(corner, indptr, indices):
     return end
 
 
-@njit(cache=True)
-def add_pixels(corner, mass, along, across, twist, metric, indptr, indices, data):
+@njit(cache=True, error_model="numpy")
+def add_pixels(
+    corner: IntArray,
+    mass: ComplexArray,
+    along: ComplexArray,
+    across: ComplexArray,
+    twist: ComplexArray,
+    metric: FloatArray,
+    indptr: IntArray,
+    indices: IntArray,
+    data: ComplexArray,
+) -> None:
     """Add the share of every pixel to a matrix.
 
     Parameters
@@ -92,15 +107,12 @@ def add_pixels(corner, mass, along, across, twist, metric, indptr, indices, data
                 )
                 turned = east[a] * north[b] - north[a] * east[b]
                 data[place] += (
-                    mass[e] * share[a, b]
-                    + along[e] * gradients
-                    + across[e] * turned
-                    + twist[e] * sign[a] * sign[b]
+                    mass[e] * share[a, b] + along[e] * gradients + across[e] * turned + twist[e] * sign[a] * sign[b]
                 )
 
 
-@njit(cache=True)
-def add_sides(ends, weight, indptr, indices, data):
+@njit(cache=True, error_model="numpy")
+def add_sides(ends: IntArray, weight: ComplexArray, indptr: IntArray, indices: IntArray, data: ComplexArray) -> None:
     """Add the share of open sides that let waves out to a matrix.
 
     Parameters
