@@ -82,7 +82,7 @@ def wave_matrix(mesh: Mesh, omega: complex, friction_m_s: ArrayLike) -> Any:
         Its product with elevations is the supply of water to the nodes, m3/s.
     """
     s = floored_friction(mesh, friction_m_s) - 1j * omega
-    spread: ComplexArray = GRAVITY_M_S2 * mesh.depth_m / (s * s + mesh.coriolis_rad_s**2)
+    spread = np.asarray(GRAVITY_M_S2 * mesh.depth_m / (s * s + mesh.coriolis_rad_s**2), dtype=complex)
     south, product, west = mesh.sides.T
     per_metre = np.stack([west, -product, south], axis=1) / mesh.area_m2[:, None]
     data = np.zeros(len(mesh.indices), dtype=complex)

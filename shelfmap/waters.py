@@ -229,7 +229,7 @@ def _opened(
             f"field: no open edge of {settings.open_depth_m:g} m or deeper at the edge of the region ({found}); take a "
             "larger field.box, name the sides in field.open_sides, or lower field.open_depth_m"
         )
-    return is_open
+    return np.asarray(is_open)
 
 
 def _side_middles(lattice: Lattice) -> tuple[FloatArray, FloatArray]:
