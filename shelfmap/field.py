@@ -146,7 +146,7 @@ def solve_field(
     jobs = _Jobs(mesh, shapes, waves, chosen, gauges, cell[in_reach], in_reach)
     friction, remarks = _settled_friction(jobs, settings, mapped)
     done = tuple(mapped(_answer, jobs.of(waves, friction)))
-    modes = free_modes(mesh, friction, chosen.mode_period_h, chosen.modes) if chosen.modes else []
+    modes = free_modes(mesh, friction, chosen.mode_period_h, chosen.modes, mapped=mapped) if chosen.modes else []
     return Field(
         waters=waters,
         mesh=mesh,

@@ -126,6 +126,8 @@ class Factors:
     mesh: Mesh
     supply: Any
     """(n_free, k) sparse: supply to the free nodes from a unit edge tide at each edge node."""
+    matrix: Any
+    """(n_free, n_free) sparse: what was factorised."""
     solve: Callable[..., ComplexArray]
     """Solves for the free nodes: `solve(b)`, or `solve(b, "T")` with the transposed matrix."""
 
@@ -159,7 +161,7 @@ def factorise(mesh: Mesh, omega: complex, friction_m_s: ArrayLike) -> Factors:
             f"field: the matrix at {2 * np.pi / abs(omega) / 3600:.4g} h has no inverse ({error}); change the period "
             "or the friction a little"
         ) from error
-    return Factors(mesh=mesh, supply=supply, solve=lu.solve)
+    return Factors(mesh=mesh, supply=supply, matrix=matrix, solve=lu.solve)
 
 
 def solve_wave(mesh: Mesh, omega: float, friction_m_s: ArrayLike, edge: ComplexArray | None = None) -> ComplexArray:
