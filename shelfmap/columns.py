@@ -123,6 +123,9 @@ class Column:
         return "{wave}" in self.name
 
 
+#: Stage of the columns that the 2-D response adds to layers of transects.
+JOINED: Final = "joining"
+
 _LINES = ("coast_index", "transects")
 _TRANSECTS = ("transects",)
 _BREAKS = ("shelf_breaks",)
@@ -137,6 +140,9 @@ _NO_MODE = "Mode not found or no usable profile: see status."
 _NO_INDEX = "No index at any constituent: see status and note."
 _NO_WAVE_INDEX = "No shelf with a break (see status), no mode that swings, or a wave without a gain: see note."
 _NO_WAVE = "No usable profile (see status), or a wave too slow for the latitude or too short to compute: see note."
+
+_NO_CELL = "No cell of the 2-D region in reach."
+_NO_TIDE = "No cell of the 2-D region in reach, or the tide at its edge is not known."
 
 _Row = tuple[str, Dtype, str, str, str, str]
 
@@ -283,6 +289,21 @@ _TABLE: Final[tuple[tuple[str, tuple[str, ...], tuple[_Row, ...]], ...]] = (
         ("index_{wave}", "float64", "", "Resonance index at {wave}",
          "Tuning x strength at {wave}, the largest over the first three modes.", _NO_WAVE_INDEX),
     )),
+    (JOINED, _LINES, (
+        ("field_ratio", "float64", "", "2-D gain over that of the transect",
+         "Gain in two dimensions over that of the transect, both with friction, at the first wave that has both: 1 "
+         "where the transect's picture holds.",
+         "No cell of the 2-D region in reach, or no gain of the transect."),
+        ("field_gain_{wave}", "float64", "", "2-D gain at {wave}",
+         "Amplitude of {wave} at the shore over that of the same tide all along the region's open edge, in two "
+         "dimensions, with friction.", _NO_CELL),
+        ("field_lag_{wave}_deg", "float64", "deg", "2-D lag at {wave}",
+         "How much later {wave} peaks at the shore than at the region's open edge, -180 to 180.", _NO_CELL),
+        ("field_tide_{wave}_m", "float64", "m", "2-D amplitude of {wave}",
+         "Amplitude of {wave} at the shore, its edge tide fitted to the gauges or given.", _NO_TIDE),
+        ("field_phase_{wave}_deg", "float64", "deg", "2-D phase of {wave}",
+         "Greenwich phase lag of {wave} at the shore, its edge tide fitted to the gauges, 0 to 360.", _NO_TIDE),
+    )),
     ("profiles", ("profiles",), (
         ("distance_km", "float64", "km", "Distance from the shore", "Distance of the sample along the transect.", ""),
         ("lon_deg", "float64", "deg", "Longitude of the sample", "Longitude of the sample.", ""),
@@ -341,7 +362,7 @@ COLUMNS: Final[tuple[Column, ...]] = tuple(
 )
 
 
-def columns_of(layer: str, waves: Sequence[str] = ()) -> tuple[Column, ...]:
+def columns_of(layer: str, waves: Sequence[str] = (), *, with_field: bool = False) -> tuple[Column, ...]:
     """Columns of one layer in order, the templates expanded for each wave.
 
     Parameters
@@ -350,6 +371,8 @@ def columns_of(layer: str, waves: Sequence[str] = ()) -> tuple[Column, ...]:
         One of `LAYERS`.
     waves : sequence of str
         Labels from `shelfmap.words.wave_label`, in the order wanted.
+    with_field : bool
+        Whether the 2-D response is there too, and its columns on the layers of transects.
 
     Raises
     ------
@@ -365,7 +388,7 @@ def columns_of(layer: str, waves: Sequence[str] = ()) -> tuple[Column, ...]:
         raise LayerError(f"layer {layer!r} is unknown; the layers are {', '.join(LAYERS)}")
     if len(set(waves)) != len(waves):
         raise LayerError(f"waves {list(waves)}: the same one stands twice; name each wave once")
-    here = [column for column in COLUMNS if layer in column.layers]
+    here = [column for column in COLUMNS if layer in column.layers and (with_field or column.stage != JOINED)]
     fixed = [column for column in here if not column.is_template]
     titles = {wave: wave_title(wave) for wave in waves}
     expanded = [

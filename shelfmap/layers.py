@@ -48,6 +48,8 @@ class Layer:
         A None or empty member is written as NULL.
     waves : sequence of str
         Labels from `shelfmap.words.wave_label`, for the columns that stand once for each wave.
+    with_field : bool
+        Whether columns of the 2-D response are among them.
 
     Raises
     ------
@@ -59,9 +61,10 @@ class Layer:
     columns: Mapping[str, NDArray[Any]]
     geometry: ObjectArray | None = None
     waves: Sequence[str] = ()
+    with_field: bool = False
 
     def __post_init__(self) -> None:
-        wanted = [column.name for column in columns_of(self.name, self.waves)]
+        wanted = [column.name for column in columns_of(self.name, self.waves, with_field=self.with_field)]
         missing = [name for name in wanted if name not in self.columns]
         extra = [name for name in self.columns if name not in wanted]
         if missing or extra:
@@ -93,7 +96,7 @@ def encode(layer: Layer, projection: Projection | None = None) -> pa.Table:
     LayerError
         If values do not fit the column table, or geometry lies beyond the output's system.
     """
-    columns = columns_of(layer.name, layer.waves)
+    columns = columns_of(layer.name, layer.waves, with_field=layer.with_field)
     arrays = [_array(layer, column) for column in columns]
     fields = [pa.field(column.name, _ARROW_TYPES[column.dtype], metadata=_field_metadata(column)) for column in columns]
     kind = ""

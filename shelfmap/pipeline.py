@@ -16,6 +16,7 @@ from numpy.typing import NDArray
 from shelfmap.checkpoint import Checkpoint, digest
 from shelfmap.coast import Coast
 from shelfmap.errors import LayerError, ShelfmapWarning
+from shelfmap.field import Field
 from shelfmap.geodesy import distance_bearing
 from shelfmap.geopackage import GeoPackage, write_layers
 from shelfmap.grid import GridSource, open_grid
@@ -23,6 +24,7 @@ from shelfmap.inputs import make_coast, picked_breaks
 from shelfmap.layers import Layer, to_columns, unpack
 from shelfmap.laying import Laid, lay, timed
 from shelfmap.provenance import run_layer, status_counts
+from shelfmap.region import solve_region
 from shelfmap.replacement import check_name, check_target, placing
 from shelfmap.sections import Section, pack_drawn_section, pack_section
 from shelfmap.settings import Settings
@@ -126,6 +128,10 @@ def screen(
     with mapping(workers, executor, scheduler) as mapped, Checkpoint.beside(path, anew=anew) as kept:
         laid = lay(settings, mapped, kept)
         picks = picked_breaks(settings, laid.transects.transect_id)
+        field = None
+        if settings.field is not None:
+            with timed("field"):
+                field = solve_region(laid.source, settings, mapped=mapped)
         with placing(kept.folder, path) as part:
             file = GeoPackage(part, settings.output.crs, path)
             with timed("sections"):
@@ -133,7 +139,7 @@ def screen(
                 columns = _collect(packed, _n_sections(laid.transects), file, progress)
             _warn_of_picks(picks, columns, laid.step_m)
             with timed("last layers"):
-                _finish(file, columns, laid, settings)
+                _finish(file, columns, laid, settings, field)
             laid.check_unchanged()
     return Run(path=path, source=laid.source, coast=laid.coast, status=columns["status"], step_m=laid.step_m)
 
@@ -213,6 +219,7 @@ def _check_output(settings: Settings, path: Path, *, overwrite: bool) -> None:
         ("coast.file", settings.coast.file),
         ("transects.file", settings.transects.file),
         ("shelf_break.file", settings.shelf_break.file),
+        ("gauges.file", settings.gauges.file),
     ]
     for name, given in inputs:
         if given is not None and given.exists() and path.exists() and given.samefile(path):
@@ -283,7 +290,9 @@ def _packed_sections(
 
 def _run_key(laid: Laid, settings: Settings) -> str:
     """Hash of all that every section depends on: code, depths, settings."""
-    used = settings.model_dump_json(exclude={"title": True, "output": {"path": True, "crs": True}})
+    used = settings.model_dump_json(
+        exclude={"title": True, "field": True, "gauges": True, "output": {"path": True, "crs": True}}
+    )
     return digest(laid.content, used)
 
 
@@ -307,9 +316,9 @@ def _collect(packed: Iterator[bytes], n_sections: int, file: GeoPackage, progres
     return to_columns(*stations)
 
 
-def _finish(file: GeoPackage, columns: Columns, laid: Laid, settings: Settings) -> None:
+def _finish(file: GeoPackage, columns: Columns, laid: Laid, settings: Settings, field: Field | None) -> None:
     """Write the layers that need all stations, and what the file is."""
-    for layer in station_layers(columns, laid.transects, laid.coast, settings):
+    for layer in station_layers(columns, laid.transects, laid.coast, settings, field):
         file.add_layer(layer)
     file.add_layer(run_layer(settings, laid.source, laid.coast, laid.step_m, columns["status"]))
     counts = ", ".join(f"{count} {status}" for status, count in status_counts(columns["status"]).items())

@@ -23,6 +23,7 @@ __all__ = [
     "CoastSettings",
     "DepthErrorSettings",
     "FieldSettings",
+    "GaugeSettings",
     "GridSettings",
     "OutputSettings",
     "ResponseSettings",
@@ -352,6 +353,39 @@ class DepthErrorSettings(_Stage):
     )
 
 
+class GaugeSettings(_Stage):
+    """Harmonic constants of the tide at gauges: what the file and its columns are called."""
+
+    file: FilePath | None = Field(
+        None, description="CSV table or vector file of points: harmonic constants of tide gauges."
+    )
+    layer: str | None = Field(None, description="Layer of that file, where it holds several.")
+    id_column: str = Field("id", description="Column that names a gauge; rows are numbered where there is none.")
+    lon_column: str = Field("lon", description="Column of longitudes, degrees, in a table without shapes.")
+    lat_column: str = Field("lat", description="Column of latitudes, degrees, in a table without shapes.")
+    amplitude_column: str = Field(
+        "{name}_amp_m", description="Column of amplitudes; {name} stands for the constituent."
+    )
+    phase_column: str = Field(
+        "{name}_phase_deg", description="Column of Greenwich phase lags, degrees; {name} stands for the constituent."
+    )
+    amplitude_unit: Literal["m", "cm", "mm", "ft"] = Field("m", description="Unit of the amplitudes.")
+    reach_km: float = Field(
+        15.0,
+        ge=0,
+        le=1000,
+        description="What lies farther than this from the nearest cell of the 2-D region is not compared with it, km: "
+        "gauges, points, stations.",
+    )
+
+    @field_validator("amplitude_column", "phase_column")
+    @classmethod
+    def _names_the_constituent(cls, value: str) -> str:
+        if value.count("{name}") != 1 or value.replace("{name}", "").count("{"):
+            raise ValueError(f"{_shown(value)} must hold {{name}} once, where the constituent stands")
+        return value
+
+
 Side = Literal["south", "east", "north", "west"]
 
 
@@ -458,6 +492,7 @@ class Settings(_Stage):
     shelf_break: ShelfBreakSettings = ShelfBreakSettings()
     response: ResponseSettings = ResponseSettings()
     depth_error: DepthErrorSettings = DepthErrorSettings()
+    gauges: GaugeSettings = GaugeSettings()
     field: FieldSettings | None = Field(
         None, description="Section of the 2-D response; without it there are transects only."
     )

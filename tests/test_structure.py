@@ -20,8 +20,8 @@ ORDER = [
     "rasterfile", "lattice", "sheets", "grid", "inspection", "rasters", "synthetic", "demo", "basins", "chains",
     "closing", "coast", "transects", "profiles", "shelfbreak", "deepsea", "modes", "response", "index", "gauges",
     "dissection", "waters", "mesh", "longwave", "freemodes", "edgetide", "field", "assess",
-    "columns", "antimeridian", "replacement", "checkpoint", "vectors", "layers", "geopackage", "tables", "stations",
-    "inputs", "provenance", "sections", "laying", "pipeline", "cli", "__main__",
+    "columns", "antimeridian", "replacement", "checkpoint", "vectors", "layers", "geopackage", "tables", "joining",
+    "stations", "inputs", "gaugefile", "region", "provenance", "sections", "laying", "pipeline", "cli", "__main__",
 ]  # fmt: skip
 
 #: Libraries that only these modules import.
