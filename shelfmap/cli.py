@@ -58,7 +58,7 @@ def _spoken(command: _F) -> _F:
             except MemoryError as error:
                 click.echo(
                     f"Error: memory ran out ({_plain(str(error)) or 'no more to be had'}); take a smaller region, "
-                    "a larger transects.spacing_km or transects.step_km",
+                    "a larger transects.spacing_km, transects.step_km or field.cell_km",
                     err=True,
                 )
                 raise click.exceptions.Exit(EXIT_FAILED) from None
@@ -127,6 +127,8 @@ def main() -> None:
     """
     # rasters, vectors and projections have a PROJ each, in workers too: all read this when they are loaded
     os.environ["PROJ_NETWORK"] = "OFF"
+    # the dense blocks of the factors are small: more threads are no faster, and those of several workers crowd each other
+    os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 
 
 @main.command(epilog="Example: shelfmap screen coast.toml --output coast.gpkg --workers 2")
@@ -148,6 +150,54 @@ def screen(settings_file: Path, output: Path | None, as_json: bool, **how: Any) 
         written = settings.output.model_copy(update={"path": output.absolute()})
         settings = settings.model_copy(update={"output": written})
     _screen(settings, as_json=as_json, **how)
+
+
+@main.command(epilog="Example: shelfmap field coast.toml --workers 2")
+@_settings_file
+@click.option("--output", "-o", type=click.Path(path_type=Path), help="Folder to write [default: NAME_field]")
+@_overwrite
+@_workers
+@_scheduler
+@_as_json
+@_spoken
+def field(settings_file: Path, output: Path | None, as_json: bool, **how: Any) -> None:
+    """Solve a region in two dimensions: maps of tides and natural modes, gauges, into one folder.
+
+    The tide at the open edge is fitted to the gauges in gauges.file, where that is given.
+    """
+    from shelfmap.fieldrun import run_field
+    from shelfmap.settings import FieldSettings
+
+    settings = _read(settings_file)
+    chosen = settings.field or FieldSettings()
+    if output is not None:
+        chosen = chosen.model_copy(update={"folder": output.absolute()})
+    run = run_field(settings.model_copy(update={"field": chosen}), **how)
+    summary = run.summary()
+    for line in _field_lines(summary):
+        _say(line)
+    click.echo(json.dumps(summary) if as_json else run.folder)
+
+
+def _field_lines(summary: dict[str, Any]) -> Iterator[str]:
+    """Say what came of a region, a line for each wave, mode and remark."""
+    yield f"{summary['cells']} cells of water, open edge {summary['edge']}"
+    yield from summary["remarks"]
+    for wave in summary["waves"]:
+        name = wave["wave"] or f"{wave['period_h']:g} h"
+        text = f"{name}: largest gain {wave['largest_gain']:.1f} at {wave['largest_lon_deg']:.2f}, "
+        text += f"{wave['largest_lat_deg']:.2f}"
+        if wave["n_gauges"]:
+            text += (
+                f"; {wave['n_gauges']} gauges, {wave['n_off']} off, each explained from the others to "
+                f"{wave['explained_left_out']:.0%}"
+            )
+        yield text
+    for mode in summary["modes"]:
+        yield (
+            f"natural mode {mode['mode']}: {mode['period_h']:.2f} h, Q {mode['q']:.1f}, "
+            f"participation {mode['participation']:.0%}"
+        )
 
 
 @main.command(epilog="Example: shelfmap inspect dem.tif --positive up")

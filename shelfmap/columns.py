@@ -67,6 +67,24 @@ LAYERS: Final[Mapping[str, LayerKind]] = MappingProxyType({
         title="Response by period",
         description="Gain and lag of each transect, one row per wave and per point of its response curve.",
     ),
+    "gauges": LayerKind(
+        title="Tide gauges against the 2-D response",
+        description="Gauges, the tide observed at each, and what the 2-D response makes of it, fitted and left out.",
+        geometry="point",
+    ),
+    "natural_modes": LayerKind(
+        title="Natural modes of the region",
+        description="Free modes that a tide at the open edge drives, each where its water level swings most.",
+        geometry="point",
+    ),
+    "field_waves": LayerKind(
+        title="2-D response by wave",
+        description="What came of each wave: its largest gain, its edge tide, how well gauges are met.",
+    ),
+    "field_curves": LayerKind(
+        title="2-D gain by period",
+        description="Gain and lag against period at gauges or chosen points.",
+    ),
     "coast_lines": LayerKind(
         title="Generalised coast",
         description="The coast that stations stand on, sea on the right hand: to edit and give back.",
@@ -143,6 +161,10 @@ _NO_WAVE = "No usable profile (see status), or a wave too slow for the latitude 
 
 _NO_CELL = "No cell of the 2-D region in reach."
 _NO_TIDE = "No cell of the 2-D region in reach, or the tide at its edge is not known."
+
+_NO_CONSTANT = "Not given for this gauge."
+_NO_FIT = "Out of reach, or no gauge has the constituent."
+_NO_GAUGE = "No gauge in reach has the constituent."
 
 _Row = tuple[str, Dtype, str, str, str, str]
 
@@ -331,6 +353,72 @@ _TABLE: Final[tuple[tuple[str, tuple[str, ...], tuple[_Row, ...]], ...]] = (
         ("index", "float64", "", "Resonance index",
          "Tuning x strength, the largest over the first three modes.",
          "No index for this wave, or a row of the response curve."),
+    )),
+    ("fieldlayers", ("gauges",), (
+        ("gauge", "str", "", "Gauge", "What the gauge is called.", ""),
+        ("lon_deg", "float64", "deg", "Longitude", "Longitude of the gauge.", ""),
+        ("lat_deg", "float64", "deg", "Latitude", "Latitude of the gauge.", ""),
+        ("gauge_use", "str", "", "What came of it", "How the gauge was used, and whether the others bear it out.", ""),
+        ("cell_away_km", "float64", "km", "Distance to its cell",
+         "Distance to the centre of the nearest cell of water, which stands for the gauge.", ""),
+        ("cell_depth_m", "float64", "m", "Depth of its cell", "Depth of that cell, as it was used.", "Out of reach."),
+        ("note", "str", "", "Remarks", "What is odd about the gauge.", "Nothing to remark."),
+        ("observed_{wave}_m", "float64", "m", "Observed amplitude of {wave}", "Amplitude of {wave} as observed.",
+         _NO_CONSTANT),
+        ("observed_{wave}_deg", "float64", "deg", "Observed phase of {wave}",
+         "Greenwich phase lag of {wave} as observed, 0 to 360.", _NO_CONSTANT),
+        ("fitted_{wave}_m", "float64", "m", "Fitted amplitude of {wave}",
+         "Amplitude of {wave} with the edge tide fitted to all gauges.", _NO_FIT),
+        ("fitted_{wave}_deg", "float64", "deg", "Fitted phase of {wave}",
+         "Greenwich phase lag of {wave} with the edge tide fitted to all gauges, 0 to 360.", _NO_FIT),
+        ("left_out_{wave}_m", "float64", "m", "Predicted amplitude of {wave}",
+         "Amplitude of {wave} with the edge tide fitted to all other gauges.", _NO_FIT),
+        ("left_out_{wave}_deg", "float64", "deg", "Predicted phase of {wave}",
+         "Greenwich phase lag of {wave} with the edge tide fitted to all other gauges, 0 to 360.", _NO_FIT),
+        ("left_out_error_{wave}_m", "float64", "m", "Error of prediction of {wave}",
+         "Length of the difference of the observed vector of {wave} and the one predicted from the other gauges.",
+         "The gauge does not have it, or there was no fit."),
+        ("expected_error_{wave}_m", "float64", "m", "Expected error of {wave}",
+         "One standard deviation of that difference, local error included.", _NO_FIT),
+    )),
+    ("fieldlayers", ("natural_modes",), (
+        ("mode", "int64", "", "Mode", "Number of the mode, 1 the one that an edge tide drives most.", ""),
+        ("period_h", "float64", "h", "Natural period", "Period of the mode, with friction.", ""),
+        ("q", "float64", "", "Q", "Quality factor: its swing falls by e in Q / pi periods.", ""),
+        ("response", "float64", "", "Response",
+         "Root mean square over the region of what the mode adds to a unit edge tide at its own period.", ""),
+        ("largest", "float64", "", "Largest swing", "The largest of that, at this point.", ""),
+        ("participation", "float64", "", "Participation", "Response over that of mode 1.", ""),
+        ("map", "str", "", "Map", "Name of its map.", "No maps were written."),
+    )),
+    ("fieldlayers", ("field_waves",), (
+        ("wave", "str", "", "Constituent", "Name of the constituent; no letters for other periods.", ""),
+        ("period_h", "float64", "h", "Wave period", "Period of the wave.", ""),
+        ("largest_gain", "float64", "", "Largest gain", "Largest amplitude over that of the same tide all along the "
+         "open edge.", ""),
+        ("largest_lon_deg", "float64", "deg", "Longitude of it", "Longitude of the cell with the largest gain.", ""),
+        ("largest_lat_deg", "float64", "deg", "Latitude of it", "Latitude of the cell with the largest gain.", ""),
+        ("edge_tide_m", "float64", "m", "Size of the edge tide",
+         "Standard deviation of the edge tide that makes the gauges most likely.", _NO_GAUGE),
+        ("local_error_m", "float64", "m", "Local error",
+         "Root mean square of what gauges show and cells do not.", _NO_GAUGE),
+        ("n_gauges", "int64", "", "Gauges fitted", "Gauges in reach that have the constituent.", ""),
+        ("n_off", "int64", "", "Gauges off", "Those of them that the others do not bear out.", ""),
+        ("explained_fitted", "float64", "", "Explained, fitted",
+         "Share of the tide at the gauges that the fit explains.", _NO_GAUGE),
+        ("explained_left_out", "float64", "", "Explained, left out",
+         "The same share, each gauge predicted from all others.", _NO_GAUGE),
+        ("map", "str", "", "Map", "Name of its map.", "No maps were written."),
+    )),
+    ("fieldlayers", ("field_curves",), (
+        ("point", "str", "", "Point", "Gauge, or number of the chosen point.", ""),
+        ("lon_deg", "float64", "deg", "Longitude", "Longitude of the point.", ""),
+        ("lat_deg", "float64", "deg", "Latitude", "Latitude of the point.", ""),
+        ("period_h", "float64", "h", "Wave period", "Period of the wave.", ""),
+        ("gain", "float64", "", "2-D gain", "Amplitude over that of the same tide all along the open edge.",
+         "No cell of the region in reach."),
+        ("lag_deg", "float64", "deg", "2-D lag",
+         "How much later the wave peaks than at the open edge, -180 to 180.", "No cell of the region in reach."),
     )),
     ("coast", ("coast_lines",), (
         ("coast_part", "int64", "", "Part of the coast", "Number of the stretch of coast, 1 the longest.", ""),

@@ -21,7 +21,7 @@ from shelfmap.waters import Waters
 from shelfmap.waves import Wave, waves_of
 from shelfmap.workers import Mapped
 
-__all__ = ["CellWave", "Field", "Spectrum", "nearest_cells", "solve_field"]
+__all__ = ["CellWave", "Field", "Points", "Spectrum", "nearest_cells", "solve_field"]
 
 _LOG = logging.getLogger(__name__)
 
@@ -73,15 +73,27 @@ class CellWave:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+class Points:
+    """Places where a curve of gain against period is wanted."""
+
+    name: NDArray[np.object_]
+    """(q,) what each is called."""
+    lon_deg: FloatArray
+    """(q,) longitude, degrees."""
+    lat_deg: FloatArray
+    """(q,) latitude, degrees."""
+
+
+@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
 class Spectrum:
     """Response at points against period: gain over a unit edge tide."""
 
+    points: Points
+    """The q points."""
     period_h: FloatArray
     """(p,) periods, hours."""
     unit: ComplexArray
-    """(p, q) elevation over the edge tide at each point."""
-    cell: IntArray
-    """(q,) cell of each point; -1 where none is in reach, and its values are NaN."""
+    """(p, q) elevation over the edge tide at each point; NaN where no cell is in reach."""
 
 
 @dataclass(frozen=True, slots=True, kw_only=True, eq=False)
@@ -114,7 +126,7 @@ def solve_field(
     settings: Settings,
     gauges: Gauges | None = None,
     *,
-    points_lonlat: FloatArray | None = None,
+    points: Points | None = None,
     mapped: Mapped = map,
 ) -> Field:
     """Response of the waters of a region to every wave asked for.
@@ -127,8 +139,8 @@ def solve_field(
         Of which `response` names the waves, rotation and friction, and `field` says the rest.
     gauges : Gauges, optional
         Tide at gauges; the edge tide of each constituent that they have is fitted to them.
-    points_lonlat : (q, 2) array of float, optional
-        Where gain against period is wanted, degrees.
+    points : Points, optional
+        Where gain against period is wanted.
     mapped : Mapped
         Runs over the waves.
 
@@ -156,7 +168,7 @@ def solve_field(
         gauges=gauges,
         gauge_cell=np.where(in_reach, cell, -1),
         gauge_away_m=away_m,
-        spectrum=_spectrum(mesh, friction, chosen, points_lonlat, settings.gauges.reach_km * 1e3, mapped),
+        spectrum=_spectrum(mesh, friction, chosen, points, settings.gauges.reach_km * 1e3, mapped),
         remarks=(*waters.remarks, *remarks),
     )
 
@@ -309,16 +321,15 @@ def _spectrum(
     mesh: Mesh,
     friction: FloatArray,
     chosen: FieldSettings,
-    points_lonlat: FloatArray | None,
+    points: Points | None,
     reach_m: float,
     mapped: Mapped,
 ) -> Spectrum | None:
     """Curves of gain against period at points, as far as they are in reach of the water."""
-    if chosen.spectrum_h is None or points_lonlat is None or not len(points_lonlat):
+    if chosen.spectrum_h is None or points is None:
         return None
     period_h = np.geomspace(*chosen.spectrum_h, CURVE_POINTS)
-    cell, away_m = nearest_cells(mesh, points_lonlat[:, 0], points_lonlat[:, 1])
+    cell, away_m = nearest_cells(mesh, points.lon_deg, points.lat_deg)
     jobs = (_PeriodJob(mesh=mesh, period_h=float(period), friction=friction, cell=cell) for period in period_h)
     unit = np.stack(list(mapped(_at_points, jobs)))
-    in_reach = away_m <= reach_m
-    return Spectrum(period_h=period_h, unit=np.where(in_reach, unit, np.nan), cell=np.where(in_reach, cell, -1))
+    return Spectrum(points=points, period_h=period_h, unit=np.where(away_m <= reach_m, unit, np.nan))

@@ -138,14 +138,14 @@ def _numbers(columns: Columns, path: Path, setting: str, name: str) -> FloatArra
         raise SettingsError(
             f"{path}: no column {name!r}; {hint}its columns are {', '.join(columns)}: name it in {setting}"
         )
-    numbers = pd.to_numeric(pd.Series(columns[own]), errors="coerce").to_numpy(dtype=float)
+    numbers = np.asarray(pd.to_numeric(pd.Series(columns[own]), errors="coerce"), dtype=float)
     is_text = np.isnan(numbers) & ~pd.isna(columns[own]) & (np.char.strip(columns[own].astype(str)) != "")
     _refuse(path, own, columns[own], is_text | np.isinf(numbers), "a number, or nothing")
     return numbers
 
 
 def _amplitudes(columns: Columns, path: Path, name: str, metres: float) -> FloatArray:
-    values: FloatArray = _numbers(columns, path, "gauges.amplitude_column", name) * metres
+    values = np.asarray(_numbers(columns, path, "gauges.amplitude_column", name) * metres)
     allowed = f"metres from 0 to {_HIGHEST_M:g}, or nothing; check gauges.amplitude_unit"
     _refuse(path, name, values, (values < 0) | (values > _HIGHEST_M), allowed)
     return values

@@ -17,6 +17,7 @@ from shelfmap.checkpoint import Checkpoint, digest
 from shelfmap.coast import Coast
 from shelfmap.errors import LayerError, ShelfmapWarning
 from shelfmap.field import Field
+from shelfmap.fieldlayers import field_layers
 from shelfmap.geodesy import distance_bearing
 from shelfmap.geopackage import GeoPackage, write_layers
 from shelfmap.grid import GridSource, open_grid
@@ -131,7 +132,7 @@ def screen(
         field = None
         if settings.field is not None:
             with timed("field"):
-                field = solve_region(laid.source, settings, mapped=mapped)
+                field = solve_region(laid.source, _without_modes(settings), mapped=mapped)
         with placing(kept.folder, path) as part:
             file = GeoPackage(part, settings.output.crs, path)
             with timed("sections"):
@@ -142,6 +143,12 @@ def screen(
                 _finish(file, columns, laid, settings, field)
             laid.check_unchanged()
     return Run(path=path, source=laid.source, coast=laid.coast, status=columns["status"], step_m=laid.step_m)
+
+
+def _without_modes(settings: Settings) -> Settings:
+    """Same settings, but for what transects do not need of a region."""
+    less = {"modes": 0, "spectrum_h": None}
+    return settings.model_copy(update={"field": settings.field and settings.field.model_copy(update=less)})
 
 
 def write_coast(settings: Settings, path: Path, *, overwrite: bool = False, workers: int = 1) -> Coast:
@@ -320,7 +327,9 @@ def _finish(file: GeoPackage, columns: Columns, laid: Laid, settings: Settings, 
     """Write the layers that need all stations, and what the file is."""
     for layer in station_layers(columns, laid.transects, laid.coast, settings, field):
         file.add_layer(layer)
-    file.add_layer(run_layer(settings, laid.source, laid.coast, laid.step_m, columns["status"]))
+    for layer in [] if field is None else field_layers(field):
+        file.add_layer(layer)
+    file.add_layer(run_layer(settings, laid.source, laid.coast, laid.step_m, columns["status"], field))
     counts = ", ".join(f"{count} {status}" for status, count in status_counts(columns["status"]).items())
     file.finish(
         title=settings.title,

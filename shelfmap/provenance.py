@@ -11,12 +11,13 @@ from numpy.typing import NDArray
 
 from shelfmap import __version__
 from shelfmap.coast import Coast
+from shelfmap.field import Field
 from shelfmap.grid import GridSource
 from shelfmap.layers import Layer
 from shelfmap.settings import Settings
 from shelfmap.words import CAUTIONS, STATUSES
 
-__all__ = ["run_layer", "status_counts"]
+__all__ = ["field_run_layer", "run_layer", "status_counts"]
 
 _LIBRARIES: Final = ("numpy", "scipy", "numba", "shapely", "rasterio", "pyogrio", "pyproj", "contourpy")
 
@@ -34,7 +35,12 @@ def status_counts(status: NDArray[np.object_]) -> dict[str, int]:
 
 
 def run_layer(
-    settings: Settings, source: GridSource, coast: Coast, step_m: float, status: NDArray[np.object_]
+    settings: Settings,
+    source: GridSource,
+    coast: Coast,
+    step_m: float,
+    status: NDArray[np.object_],
+    field: Field | None = None,
 ) -> Layer:
     """Layer `run`: everything one needs to say where an output comes from, and to make it again.
 
@@ -50,17 +56,41 @@ def run_layer(
         Sample spacing along the transects, metres.
     status : (n,) array of str
         Status of each transect.
+    field : Field, optional
+        The 2-D response that was joined to them.
     """
     counts = status_counts(status)
+    return _layer(
+        settings,
+        source,
+        {"sample spacing [km]": f"{step_m / 1e3:.3f}", "coast": coast.source} | _field_rows(field),
+        {"transects": str(len(status))} | {word: str(counts.get(word, 0)) for word in STATUSES},
+    )
+
+
+def field_run_layer(settings: Settings, source: GridSource, field: Field) -> Layer:
+    """Layer `run` of a region: where its maps come from, and what was done to its water."""
+    counts = {
+        "cells": str(len(field.mesh.cell)),
+        "unknowns": str(field.mesh.n_free),
+        "natural modes": str(len(field.modes)),
+        "gauges in reach": str(int((field.gauge_cell >= 0).sum())),
+    }
+    return _layer(settings, source, _field_rows(field), counts)
+
+
+def _field_rows(field: Field | None) -> dict[str, str]:
+    if field is None:
+        return {}
+    return {f"2-D response, remark {number}": remark for number, remark in enumerate(field.remarks, start=1)}
+
+
+def _layer(settings: Settings, source: GridSource, sources: Mapping[str, str], counts: Mapping[str, str]) -> Layer:
     topics: dict[str, Mapping[str, str | None]] = {
         "caution": {"cautions": CAUTIONS},
         "setting": dict(_flat(settings.model_dump(mode="json"))),
-        "source": _grid_rows(source)
-        | {
-            "sample spacing [km]": f"{step_m / 1e3:.3f}",
-            "coast": coast.source,
-        },
-        "count": {"transects": str(len(status))} | {word: str(counts.get(word, 0)) for word in STATUSES},
+        "source": _grid_rows(source) | dict(sources),
+        "count": counts,
         "version": {"shelfmap": __version__, "python": platform.python_version()}
         | {name: importlib.metadata.version(name) for name in _LIBRARIES},
     }

@@ -14,7 +14,7 @@ from rasterio.io import MemoryFile
 
 from shelfmap.errors import GridError, OutputExistsError
 
-__all__ = ["replace_file", "write_geotiff"]
+__all__ = ["check_raster_target", "crs_of", "replace_file", "write_geotiff"]
 
 #: Predictor of the deflate compression by kind of number: differences for whole numbers, byte planes for reals.
 _PREDICTOR = {"int16": 2, "float32": 3}
@@ -87,11 +87,8 @@ def write_geotiff(  # noqa: PLR0913 - a raster's place is five numbers, and each
             f"x0 = {x0}, y0 = {y0}, dx = {dx}, dy = {dy}: all must be finite and the cell sides above 0; "
             "give the array with its first row in the south"
         )
-    try:
-        system = CRS.from_user_input(crs)
-    except CRSError as error:
-        raise GridError(f"coordinate system {crs!r} is unknown to GDAL; give one as EPSG:n or WKT") from error
-    _check_target(path, overwrite=overwrite)
+    system = crs_of(crs)
+    check_raster_target(path, overwrite=overwrite)
     n_rows, n_cols = elevation.shape
     # in memory first: a full disk is then an ordinary error of writing bytes, never a file that looks finished
     with MemoryFile() as memory:
@@ -132,8 +129,30 @@ def _fits(value: float, dtype: np.dtype[Any]) -> bool:
     return float(value).is_integer() and limits.min <= value <= limits.max
 
 
-def _check_target(path: Path, *, overwrite: bool) -> None:
-    """Refuse a target that cannot or must not be written, before any work is done."""
+def crs_of(crs: str) -> CRS:
+    """Coordinate system as GDAL knows it.
+
+    Raises
+    ------
+    GridError
+        If GDAL does not know it.
+    """
+    try:
+        return CRS.from_user_input(crs)
+    except CRSError as error:
+        raise GridError(f"coordinate system {crs!r} is unknown to GDAL; give one as EPSG:n or WKT") from error
+
+
+def check_raster_target(path: Path, *, overwrite: bool) -> None:
+    """Refuse a target that cannot or must not be written, before any work is done.
+
+    Raises
+    ------
+    GridError
+        If it is a folder, or its folder does not exist.
+    OutputExistsError
+        If it exists and may not be replaced.
+    """
     if path.is_dir():
         raise GridError(f"{path} is a folder; give the name of a file in it")
     if not path.parent.is_dir():

@@ -5,8 +5,9 @@ import shapely
 from numpy.typing import NDArray
 
 from shelfmap.errors import FieldError
-from shelfmap.field import Field, solve_field
+from shelfmap.field import Field, Points, solve_field
 from shelfmap.gaugefile import read_gauges
+from shelfmap.gauges import Gauges
 from shelfmap.grid import GridSource
 from shelfmap.settings import FieldSettings, Settings
 from shelfmap.vectors import read_vector
@@ -48,12 +49,18 @@ def solve_region(source: GridSource, settings: Settings, *, mapped: Mapped = map
     )
     names = [wave.name for wave in waves_of(settings) if wave.name]
     gauges = None if settings.gauges.file is None else read_gauges(settings.gauges, names)
-    points = _drawn(chosen, "points_file", _POINT)
-    if points is not None:
-        points_lonlat = shapely.get_coordinates(points)
-    else:
-        points_lonlat = None if gauges is None else np.stack([gauges.lon_deg, gauges.lat_deg], axis=1)
-    return solve_field(waters, settings, gauges, points_lonlat=points_lonlat, mapped=mapped)
+    return solve_field(waters, settings, gauges, points=_points(chosen, gauges), mapped=mapped)
+
+
+def _points(chosen: FieldSettings, gauges: Gauges | None) -> Points | None:
+    """Points of the settings' file, numbered, or else the gauges."""
+    drawn = _drawn(chosen, "points_file", _POINT)
+    if drawn is not None:
+        names = np.array([str(number) for number in range(1, len(drawn) + 1)], dtype=object)
+        return Points(name=names, lon_deg=shapely.get_x(drawn), lat_deg=shapely.get_y(drawn))
+    if gauges is None:
+        return None
+    return Points(name=gauges.name, lon_deg=gauges.lon_deg, lat_deg=gauges.lat_deg)
 
 
 def _drawn(chosen: FieldSettings, name: str, kind: int) -> NDArray[np.object_] | None:

@@ -15,6 +15,7 @@ __all__ = [
     "CONFIDENCES",
     "END_REASONS",
     "ENUMERATIONS",
+    "GAUGE_USES",
     "INDEX_CLASSES",
     "RESPONSE_KINDS",
     "STATUSES",
@@ -68,6 +69,13 @@ RESPONSE_KINDS: Final[Mapping[str, str]] = MappingProxyType({
     "curve": "A point of the response curve, gain against period.",
 })  # fmt: skip
 
+GAUGE_USES: Final[Mapping[str, str]] = MappingProxyType({
+    "fitted": "The edge tide is fitted to it, and the other gauges bear it out.",
+    "off": "The edge tide is fitted to it, but the other gauges say otherwise: see note.",
+    "no_value": "It has no amplitude and phase of a wave asked for.",
+    "out_of_reach": "No cell of water of the region is near enough.",
+})  # fmt: skip
+
 #: Words a text column may hold, by column name, each with its meaning.
 ENUMERATIONS: Final[Mapping[str, Mapping[str, str]]] = MappingProxyType({
     "status": STATUSES,
@@ -75,6 +83,7 @@ ENUMERATIONS: Final[Mapping[str, Mapping[str, str]]] = MappingProxyType({
     "confidence": CONFIDENCES,
     "index_class": INDEX_CLASSES,
     "kind": RESPONSE_KINDS,
+    "gauge_use": GAUGE_USES,
 })  # fmt: skip
 
 
