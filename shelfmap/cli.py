@@ -127,7 +127,7 @@ def main() -> None:
     """
     # rasters, vectors and projections have a PROJ each, in workers too: all read this when they are loaded
     os.environ["PROJ_NETWORK"] = "OFF"
-    # the dense blocks of the factors are small: more threads are no faster, and those of several workers crowd each other
+    # the dense blocks of a matrix's factors are small: more threads are no faster, and workers would crowd each other
     os.environ.setdefault("OPENBLAS_NUM_THREADS", "1")
 
 
@@ -198,6 +198,32 @@ def _field_lines(summary: dict[str, Any]) -> Iterator[str]:
             f"natural mode {mode['mode']}: {mode['period_h']:.2f} h, Q {mode['q']:.1f}, "
             f"participation {mode['participation']:.0%}"
         )
+
+
+@main.command(epilog="Example: shelfmap compare coast.toml --within 30")
+@_settings_file
+@click.option(
+    "--within",
+    "within_km",
+    default=50.0,
+    show_default=True,
+    type=click.FloatRange(0, 1000),
+    help="How far from a gauge a transect may be, km.",
+)
+@_overwrite
+@_as_json
+@_spoken
+def compare(settings_file: Path, within_km: float, overwrite: bool, as_json: bool) -> None:
+    """Put gauges beside the transects and the 2-D response that were computed there.
+
+    Reads the output of 'shelfmap screen' and the gauges of the settings; writes a table and a figure beside it.
+    """
+    from shelfmap.comparing import write_comparison
+
+    comparison, paths = write_comparison(_read(settings_file), within_km=within_km, overwrite=overwrite)
+    for line in comparison.lines():
+        _say(line)
+    click.echo(json.dumps(comparison.summary()) if as_json else "\n".join(map(str, paths)))
 
 
 @main.command(epilog="Example: shelfmap inspect dem.tif --positive up")

@@ -363,6 +363,8 @@ _TABLE: Final[tuple[tuple[str, tuple[str, ...], tuple[_Row, ...]], ...]] = (
          "Distance to the centre of the nearest cell of water, which stands for the gauge.", ""),
         ("cell_depth_m", "float64", "m", "Depth of its cell", "Depth of that cell, as it was used.", "Out of reach."),
         ("note", "str", "", "Remarks", "What is odd about the gauge.", "Nothing to remark."),
+        ("field_gain_{wave}", "float64", "", "2-D gain at {wave}",
+         "Amplitude of {wave} at its cell over that of the same tide all along the region's open edge.", _NO_CELL),
         ("observed_{wave}_m", "float64", "m", "Observed amplitude of {wave}", "Amplitude of {wave} as observed.",
          _NO_CONSTANT),
         ("observed_{wave}_deg", "float64", "deg", "Observed phase of {wave}",

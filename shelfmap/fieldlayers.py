@@ -68,6 +68,8 @@ def _gauge_layer(field: Field, gauges: Gauges) -> Layer:
     use = np.where(in_reach, "no_value", "out_of_reach").astype(object)
     waves = [done for done in field.waves if done.wave.name in gauges.constituents]
     for done in waves:
+        unit = abs(done.unit[np.maximum(field.gauge_cell, 0)])
+        columns[f"field_gain_{done.wave.label}"] = np.where(in_reach, unit, np.nan)
         columns |= _constants(done, gauges, in_reach)
         for row, (is_off, why) in _judged(done, gauges, in_reach).items():
             if why:

@@ -1,5 +1,6 @@
 """A run of the 2-D response alone: from the settings to a folder of maps and layers."""
 
+import math
 import os
 import tempfile
 from collections.abc import Iterator, Mapping
@@ -160,4 +161,7 @@ def _rows(columns: Mapping[str, NDArray[Any]]) -> list[dict[str, Any]]:
     """Rows of a layer, numbers as JSON has them: None for none."""
     names = list(columns)
     rows = zip(*(columns[name].tolist() for name in names), strict=True)
-    return [{n: None if v != v else v for n, v in zip(names, row, strict=True)} for row in rows]
+    return [
+        {n: None if isinstance(v, float) and math.isnan(v) else v for n, v in zip(names, row, strict=True)}
+        for row in rows
+    ]

@@ -18,7 +18,7 @@ from shelfmap.errors import GridError, LayerError, ShelfmapWarning
 from shelfmap.geodesy import Projection
 from shelfmap.localfiles import CLOSED, archive_of, local_file, why_refused, why_unnameable
 
-__all__ = ["VectorData", "read_table", "read_vector"]
+__all__ = ["VectorData", "layers_in", "read_table", "read_vector"]
 
 ObjectArray = NDArray[np.object_]
 
@@ -119,6 +119,18 @@ def read_table(path: str | Path, layer: str) -> dict[str, NDArray[Any]]:
     with _readable(path):
         meta, _, _, fields = pyogrio.raw.read(name, layer=layer, read_geometry=False)
     return {str(name): values for name, values in zip(meta["fields"], fields, strict=True)}
+
+
+def layers_in(path: str | Path) -> list[str]:
+    """Names of the layers and tables of a file.
+
+    Raises
+    ------
+    LayerError
+        If the file cannot be read.
+    """
+    path = Path(path)
+    return list(_layers_of(path, _local_name(path)))
 
 
 def _local_name(path: Path) -> str:

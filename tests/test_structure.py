@@ -21,7 +21,7 @@ ORDER = [
     "closing", "coast", "transects", "profiles", "shelfbreak", "deepsea", "modes", "response", "index", "gauges",
     "dissection", "waters", "mesh", "longwave", "freemodes", "edgetide", "field", "assess",
     "columns", "antimeridian", "replacement", "checkpoint", "vectors", "layers", "geopackage", "tables", "joining",
-    "stations", "inputs", "gaugefile", "region", "fieldlayers", "fieldmaps", "provenance", "sections", "laying", "pipeline", "fieldrun", "cli", "__main__",
+    "stations", "inputs", "gaugefile", "region", "fieldlayers", "fieldmaps", "compare", "figures", "comparing", "provenance", "sections", "laying", "pipeline", "fieldrun", "cli", "__main__",
 ]  # fmt: skip
 
 #: Libraries that only these modules import.
@@ -37,6 +37,7 @@ ONLY_HERE = {
     "pydantic": {"settings"},
     "tomllib": {"settings"},
     "click": {"cli"},
+    "matplotlib": {"figures"},
     "concurrent": {"workers", "pipeline"},
     "multiprocessing": {"workers"},
     "distributed": {"workers"},
