@@ -47,9 +47,13 @@ def comparison_figure(comparison: Comparison, title: str) -> bytes:
 
 def _scatter(panel: Any, computed: Any, observed: Any, rho: float | None) -> None:
     both = np.isfinite(computed) & np.isfinite(observed)
+    if not both.any():
+        panel.text(0.5, 0.5, "no gauge has one", ha="center", va="center", transform=panel.transAxes)
+        panel.set(xticks=[], yticks=[])
+        return
     panel.scatter(computed[both], observed[both], **_DOTS)
     panel.set_xlim(left=0)
     panel.set_ylim(bottom=0)
-    said = "none" if not both.any() else "too few" if rho is None else f"rank correlation {rho:.2f}"
+    said = "too few to rank" if rho is None else f"rank correlation {rho:.2f}"
     panel.set_title(f"{said}, {int(both.sum())} gauges", fontsize="medium")
     panel.grid(linewidth=0.3)
