@@ -499,6 +499,13 @@ class Settings(_Stage):
     output: OutputSettings = OutputSettings()
 
     @model_validator(mode="after")
+    def _edge_tide_asked_for(self) -> Self:
+        given = set(self.field.edge_tide_m) if self.field is not None else set()
+        if strangers := given - set(self.response.constituents):
+            raise ValueError(f"field.edge_tide_m names {sorted(strangers)}, not among response.constituents")
+        return self
+
+    @model_validator(mode="after")
     def _void_below_shoreline(self) -> Self:
         if self.grid.void_is_land and self.coast.level_m >= VOID_LAND_M:
             raise ValueError(

@@ -57,6 +57,28 @@ def read(**tables):
         ("depth_error", "fixed_m", [0, 1000], [-1, 1001]),
         ("depth_error", "per_depth", [0, 1], [-0.1, 1.1]),
         ("depth_error", "correlation_km", [0.1, 2000], [0, 2001]),
+        ("gauges", "amplitude_column", ["{name}_amp", "H_{name}"], ["amp", "{name}{name}", "{name}{x}", 3]),
+        ("gauges", "phase_column", ["{name}_phase", "g_{name}"], ["phase", "{name}{name}", 3]),
+        ("gauges", "amplitude_unit", ["m", "cm", "mm", "ft"], ["metres", 1]),
+        ("gauges", "reach_km", [0, 1000], [-1, 1001]),
+        (
+            "field",
+            "box",
+            [[-10, 35, -5, 45], [170, -50, -170, -40]],
+            [[1, 2, 3], [0, 5, 1, 5], [3, 0, 3, 1], [0, 0, 400, 1]],
+        ),
+        ("field", "cell_km", [0.01, 500], [0, -1, 501]),
+        ("field", "open_sides", [["south"], ["east", "north"], []], [["up"], ["south", "south"], "south"]),
+        ("field", "open_depth_m", [0, 11_000], [-1, 11_001]),
+        ("field", "edge", ["radiating", "held"], ["open", 1]),
+        ("field", "shallowest_m", [0, 1000], [-1, 1001]),
+        ("field", "least_depth_m", [0, 1000], [-1, 1001]),
+        ("field", "drag", [False, 1e-4, 0.1], [0, True, -1, 0.2]),
+        ("field", "edge_tide_m", [{}, {"M2": 0.5}, {"m2": 20}], [{"M2": 0}, {"M9": 1}, {"Q1": 1}, 1]),
+        ("field", "modes", [0, 40], [-1, 41, 1.5]),
+        ("field", "mode_period_h", [0.02, 1000], [0.01, 1001]),
+        ("field", "spectrum_h", [[1, 30], [0.02, 1000]], [[30, 1], [1, 1], [1], [0, 5], 3]),
+        ("field", "memory_gb", [0.5, 4096], [0, -1, 5000]),
         ("output", "profiles", [True, False], [3]),
         ("output", "response_curves", [True, False], [3]),
         ("output", "crs", ["EPSG:3035"], [4326]),
@@ -78,7 +100,10 @@ def test_all_keys_are_tried_above_or_are_files_and_names():
         for mark in test_every_key_has_its_bounds_and_says_which_key_broke_them.pytestmark
         for args in mark.args[1]
     }
-    rest = {f"{table}.{key}" for table in ("coast", "transects", "shelf_break") for key in ("file", "layer")}
+    drawn = ("coast", "transects", "shelf_break", "gauges", "field")
+    rest = {f"{table}.{key}" for table in drawn for key in ("file", "layer")}
+    rest |= {f"field.{what}_{key}" for what in ("open", "points") for key in ("file", "layer")} | {"field.folder"}
+    rest |= {f"gauges.{key}_column" for key in ("id", "lon", "lat")}
     rest |= {"title", "grid.path", "grid.crs", "grid.variable", "response.drag", "response.offshore_amplitude_m"}
     assert tried | rest == {line.split("`")[1] for line in markdown_settings().splitlines()[2:]}
 

@@ -38,7 +38,7 @@ ONLY_HERE = {
     "tomllib": {"settings"},
     "click": {"cli"},
     "matplotlib": {"figures"},
-    "concurrent": {"workers", "pipeline"},
+    "concurrent": {"workers", "pipeline", "fieldrun"},
     "multiprocessing": {"workers"},
     "distributed": {"workers"},
 }
