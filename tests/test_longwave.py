@@ -3,6 +3,7 @@
 import subprocess
 import sys
 from dataclasses import replace
+from functools import cache
 from pathlib import Path
 
 import numpy as np
@@ -10,7 +11,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 from scipy.integrate import solve_ivp
-from scipy.interpolate import RectBivariateSpline
+from scipy.interpolate import RectBivariateSpline, griddata
 from scipy.optimize import root
 from scipy.sparse.linalg import eigsh
 from utils_field import (
@@ -28,6 +29,7 @@ from utils_field import (
 
 from shelfmap import longwave
 from shelfmap import mesh as mesh_module
+from shelfmap.geodesy import Projection, unwrap_lon_deg
 from shelfmap.longwave import currents, edge_supply, factorise, memory_bytes, solve_wave, twist_area, wave_matrix
 from shelfmap.mesh import TWIST, make_mesh
 from shelfmap.response import Friction, coriolis_rad_s, wave_response
@@ -145,7 +147,8 @@ def askew_sea(kind, n):
     if kind != "disc":
         along, across = turned(x, y)
         facing = np.where(abs(along) > abs(across), np.sign(along), 1j * np.sign(across)) * np.exp(1j * turn)
-    return basin, x, y, (facing / abs(facing))[basin.mesh.edge_node]
+    facing = facing[basin.mesh.edge_node]
+    return basin, x, y, facing / abs(facing)
 
 
 @pytest.mark.parametrize("kind", ["disc", 0.0, 10.0, 20.0, 30.0, 45.0])
@@ -582,6 +585,78 @@ def test_a_basin_behind_a_diagonal_contact_stays_still():
     western = np.s_[:, :5]
     assert abs(solved(sealed)[western]).max() == 0.0
     assert abs(solved(opened)[western]).max() > 0.1
+
+
+# ---- one sea on different maps
+
+
+@cache
+def gulf_on(crs, cell_km, lon_deg, lat_deg, held):
+    """Elevations at 40 places of one gulf, drawn on a map in cells of about so many km.
+
+    Half axes of 350 and 250 km, a bank in it, open where it is cut off in the south-east.
+    """
+    plane = Projection(f"+proj=laea +lat_0={lat_deg} +lon_0={lon_deg} +ellps=WGS84 +units=m")
+    onto = Projection(crs)
+    rim = 400e3 * np.exp(2j * np.pi * np.arange(64) / 64)
+    rim_lon, rim_lat = plane.to_lonlat(rim.real, rim.imag)
+    x, y = onto.from_lonlat(unwrap_lon_deg(rim_lon, lon_deg), rim_lat)
+    shape = 800.0 / cell_km
+    if onto.is_geographic:
+        dx, dy = np.ptp(x) / round(shape), np.ptp(y) / round(shape)
+    else:
+        dx = dy = cell_km * 1e3
+    n_cols, n_rows = (int(np.ptp(axis) / step) + 1 for axis, step in ((x, dx), (y, dy)))
+    place = {"crs": crs, "x0": float(x.min()), "y0": float(y.min()), "dx": float(dx), "dy": float(dy)}
+    lon, lat = waters_of(np.ones((n_rows, n_cols)), **place).lonlat()
+    east, north = plane.from_lonlat(lon, lat)
+    wet = (east / 350e3) ** 2 + (north / 250e3) ** 2 < 1
+    beyond = east - north > 200e3
+    depth = 450 - 300 * np.exp(-((east + 150e3) ** 2 + (north - 50e3) ** 2) / 80e3**2) + (east - north) / 3e3
+    open_water = np.pad(wet & beyond, 1)
+    wet &= ~beyond
+    steps = ((1, 0), (0, -1), (-1, 0), (0, 1))
+    is_open = np.array([wet & np.roll(open_water, step, (0, 1))[1:-1, 1:-1] for step in steps])
+    mesh = make_mesh(waters_of(np.where(wet, depth, np.nan), is_open, **place), held=held)
+    node_x, node_y = plane.from_lonlat(mesh.node_lon_deg, mesh.node_lat_deg)
+    edge = 1 + (node_x + 1j * node_y)[mesh.edge_node] / 2e6
+    got = solve_wave(mesh, M2, 1e-3, edge)
+    at = np.random.default_rng(4).uniform(-1, 1, (400, 2)) * [300e3, 200e3]
+    at = at[((at / [310e3, 210e3]) ** 2).sum(axis=1) < 1]
+    at = at[at[:, 0] - at[:, 1] < 150e3][:40]
+    return griddata(np.stack([node_x, node_y], axis=1), got, at)
+
+
+MAPS = {
+    "geographic": (3.0, 54.0, "EPSG:4326"),
+    "utm": (3.0, 54.0, "EPSG:32631"),
+    "conic": (3.0, 54.0, "+proj=lcc +lat_1=35 +lat_2=65 +lat_0=50 +lon_0=-25 +ellps=WGS84"),
+    "oblique": (3.0, 54.0, "+proj=omerc +lat_0=54 +lonc=3 +alpha=35 +ellps=WGS84"),
+    "southern": (150.0, -40.0, "EPSG:4326"),
+    "across 180": (180.0, 60.0, "EPSG:4326"),
+    "across 180 from the west": (-180.0, 60.0, "EPSG:4326"),
+    "across 180, projected": (180.0, 60.0, "EPSG:3571"),
+    "beside the pole": (30.0, 84.0, "EPSG:4326"),
+    "on the pole": (30.0, 89.0, "EPSG:3413"),
+}
+
+
+@pytest.mark.parametrize("held", [True, False])
+@pytest.mark.parametrize("name", MAPS)
+def test_one_sea_on_any_map(name, held):
+    """Against the same gulf on an equal-area map round itself.
+
+    Coasts and the edge are stairs, other ones on each map: first order in the cells.
+    """
+    lon, lat, crs = MAPS[name]
+    around = f"+proj=laea +lat_0={lat} +lon_0={lon} +ellps=WGS84 +units=m"
+    apart = []
+    for cell_km in (20.0, 5.0):
+        plain, other = (gulf_on(on_map, cell_km, lon, lat, held) for on_map in (around, crs))
+        assert abs(plain).max() > 1.1 * abs(plain).min()
+        apart.append(abs(other - plain).max() / abs(plain).max())
+    assert apart[0] < 0.05
+    assert apart[1] < min(0.015, 0.65 * apart[0])
 
 
 # ---- memory
