@@ -102,24 +102,26 @@ def test_the_last_line_parts_a_coast_in_two(seed):
     assert n_last == (col == last_col).sum()  # all of one column of the wider direction
     rest = order[:-n_last]
     assert not neighbours(row, col)[rest[col[rest] < last_col]][:, rest[col[rest] > last_col]].nnz
-    assert 0.35 < (col < last_col).mean() < 0.6
+    assert 0.3 < (col < last_col).mean() < 0.7
 
 
 @pytest.mark.parametrize("seed", [1, 2])
 def test_coasts_fill_in_less_than_in_the_orders_scipy_has(seed):
-    """By a third and more of COLAMD, which is its default; and no more than minimum degree by a tenth."""
-    mask = coast_mask(seed, (150, 200))
+    """Some 50,000 unknowns: a fifth below COLAMD, its default.
+
+    Minimum degree has up to a fifth fewer here; from 130,000 on it has more, a fifth on a coast like this one.
+    """
+    mask = coast_mask(seed, (250, 320))
     mesh = plane_basin(np.where(mask, 50.0, np.nan), 5e3, open_sides=["east"], held=False).mesh
     matrix = wave_matrix(mesh, 1.4e-4, 1e-3)
     ours = fill(matrix, np.arange(mesh.n_nodes))  # the mesh is in that order
     default = splu(matrix)
-    print(seed, ours, fill(matrix), default.L.nnz + default.U.nnz)
-    assert ours < 0.67 * (default.L.nnz + default.U.nnz)
-    assert ours < 1.1 * fill(matrix)
+    assert ours < 0.8 * (default.L.nnz + default.U.nnz)
+    assert ours < 1.2 * fill(matrix)
 
 
 def test_entries_grow_as_n_log_n_on_squares():
-    """Quadrupled unknowns: 31 log2 n entries and their constant; far below the n^1.5 of rows one after the other."""
+    """Quadrupled unknowns add 15 or so entries each; in rows one after the other they would double them."""
     per_node = []
     for n in (50, 100, 200):
         row, col = (axis.ravel().astype(np.int32) for axis in np.mgrid[:n, :n])
@@ -127,5 +129,4 @@ def test_entries_grow_as_n_log_n_on_squares():
         mesh_pattern = sparse.kron(*[sparse.diags([1.0, 2.0, 1.0], [-1, 0, 1], (n, n))] * 2).tocsc()
         mesh_pattern += 30 * sparse.eye(n * n)
         per_node.append(fill(mesh_pattern.tocsc(), order) / n**2)
-    print(per_node, np.diff(per_node))
-    assert (np.diff(per_node) < 19).all()
+    assert (np.diff(per_node) < 17).all()
