@@ -51,7 +51,9 @@ PIVOT_THRESHOLD: Final = 0.01
 
 def floored_friction(mesh: Mesh, friction_m_s: ArrayLike) -> FloatArray:
     """Rate r / h at which friction slows the water of each cell, (n,), 1/s; see the floors above."""
-    friction = np.maximum(np.broadcast_to(np.asarray(friction_m_s, dtype=float), mesh.depth_m.shape), LEAST_FRICTION_M_S)
+    friction = np.maximum(
+        np.broadcast_to(np.asarray(friction_m_s, dtype=float), mesh.depth_m.shape), LEAST_FRICTION_M_S
+    )
     return np.asarray(friction / np.maximum(mesh.depth_m, FRICTION_FLOOR_M))
 
 
@@ -149,9 +151,7 @@ def factorise(mesh: Mesh, omega: complex, friction_m_s: ArrayLike) -> Factors:
     if mesh.is_held:
         matrix = matrix[: mesh.n_free, : mesh.n_free]
     try:
-        lu = splu(
-            matrix, permc_spec="NATURAL", diag_pivot_thresh=PIVOT_THRESHOLD, options={"SymmetricMode": True}
-        )
+        lu = splu(matrix, permc_spec="NATURAL", diag_pivot_thresh=PIVOT_THRESHOLD, options={"SymmetricMode": True})
     except RuntimeError as error:
         raise FieldError(
             f"field: the matrix at {2 * np.pi / abs(omega) / 3600:.4g} h has no inverse ({error}); change the period "

@@ -190,7 +190,7 @@ def make_mesh(waters: Waters, *, rotation: bool = True, held: bool = False) -> M
 
 def _corners(
     is_wet: BoolArray, row: NDArray[np.int64], col: NDArray[np.int64]
-) -> tuple[NDArray[np.int64], IntArray, IntArray]:
+) -> tuple[IntArray, IntArray, IntArray]:
     """Nodes of each wet cell (n, 4), and row and column of each node; a node stands at the south-west of its cell.
 
     Where two cells touch at a corner and no other water does, the northern one takes a node of its own.
@@ -203,7 +203,7 @@ def _corners(
     )
     first = np.cumsum(is_node).reshape(is_node.shape) - 1
     second = is_node.sum() + np.cumsum(touches).reshape(is_node.shape) - 1
-    corner = np.empty((len(row), 4), dtype=np.int64)
+    corner = np.empty((len(row), 4), dtype=np.int32)
     for place, (north, east) in enumerate(_PLACES):
         at = row + north, col + east
         corner[:, place] = np.where(touches[at] & (north == 0), second[at], first[at])

@@ -92,10 +92,7 @@ def add_pixels(corner, mass, along, across, twist, metric, indptr, indices, data
                 )
                 turned = east[a] * north[b] - north[a] * east[b]
                 data[place] += (
-                    mass[e] * share[a, b]
-                    + along[e] * gradients
-                    + across[e] * turned
-                    + twist[e] * sign[a] * sign[b]
+                    mass[e] * share[a, b] + along[e] * gradients + across[e] * turned + twist[e] * sign[a] * sign[b]
                 )
 
 
