@@ -235,6 +235,7 @@ def _opened(
     open_area: Geometries | None,
 ) -> BoolArray:
     """Those of the sides at the region's edge that are open."""
+    is_open: BoolArray
     if open_area is not None:
         lon, lat = _side_middles(lattice)
         is_open = meets_edge & _within(open_area, lon, lat)

@@ -552,6 +552,15 @@ def test_linear_in_the_edge_tide_and_the_transposed_solve():
     assert felt @ tides == pytest.approx(many[17], rel=1e-9)
 
 
+def test_an_edge_supplies_what_it_lets_out():
+    """Node by node: the matrix less that of the same waters closed is the supply of the edge tide."""
+    still, closed = (plane_basin(rough(4), 20e3, open_sides=s, held=False).mesh for s in (["east", "north"], []))
+    assert (still.corner == closed.corner).all()
+    matrix = wave_matrix(still, M2, 1e-3)
+    let_out = (matrix - wave_matrix(closed, M2, 1e-3)).toarray()[:, still.edge_node]
+    assert abs(edge_supply(still, matrix).toarray() - let_out).max() < 1e-12 * abs(let_out).max()
+
+
 @pytest.mark.parametrize("held", [False, True])
 def test_the_order_of_elimination_moves_nothing(monkeypatch, held):
     depth = rough(11, (30, 40))
