@@ -16,7 +16,7 @@ IntArray = NDArray[np.int32]
 #: Regions of so few nodes are not cut further.
 _LEAF: Final = 60
 #: Share of a region's nodes on either side of the middle among which the shortest cut is looked for.
-_SLACK: Final = 0.1
+_SLACK: Final = 0.2
 
 
 def dissected(row: IntArray, col: IntArray) -> IntArray:
@@ -58,7 +58,7 @@ def dissected(row: IntArray, col: IntArray) -> IntArray:
 
 
 def _shortest_cut(line: IntArray) -> int:
-    """Line with the fewest nodes of those that leave at least two fifths on either side, or else the middle one."""
+    """Line with the fewest nodes of those that leave at least three tenths on either side, or else the middle one."""
     first = int(line.min())
     count = np.bincount(line - first)
     before = np.cumsum(count) - count

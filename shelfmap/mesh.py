@@ -5,6 +5,7 @@ from typing import Final
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy import ndimage
 
 from shelfmap._kernels.elements import meetings
 from shelfmap.constants import EARTH_ROTATION_RAD_S
@@ -65,7 +66,7 @@ class Mesh:
     side_cell : (l,) array of int32
         Its cell, as a place in `cell`.
     side_m : (l,) array of float
-        Its length.
+        Its length along the edge, in which the stairs of an edge askew to the rows are smoothed.
     indptr, indices : arrays of int32
         Pattern of the matrix of all nodes, compressed by columns.
     """
@@ -164,6 +165,8 @@ def make_mesh(waters: Waters, *, rotation: bool = True, held: bool = False) -> M
     coriolis = 2.0 * EARTH_ROTATION_RAD_S * np.sin(np.radians(waters.lonlat()[1][is_wet]))
     side_cell = np.concatenate(sides).astype(np.int32)
     across = np.repeat([0, 2, 0, 2], [len(cells) for cells in sides])  # south and north sides run along the south one
+    counted = _straightened(waters, row, col, sides_m2)
+    counts = np.concatenate([share[cells] for share, cells in zip(counted, sides, strict=True)])
     return Mesh(
         cell=np.flatnonzero(is_wet),
         corner=numbered,
@@ -179,15 +182,13 @@ def make_mesh(waters: Waters, *, rotation: bool = True, held: bool = False) -> M
         edge_node=edge_node,
         side_ends=np.searchsorted(edge_node, ends).astype(np.int32),
         side_cell=side_cell,
-        side_m=np.sqrt(sides_m2[side_cell, across]),
+        side_m=np.sqrt(sides_m2[side_cell, across]) * counts,
         indptr=indptr,
         indices=indices[:n_entries].copy(),
     )
 
 
-def _corners(
-    is_wet: BoolArray, row: NDArray[np.int64], col: NDArray[np.int64]
-) -> tuple[NDArray[np.int64], IntArray, IntArray]:
+def _corners(is_wet: BoolArray, row: NDArray[np.int64], col: NDArray[np.int64]) -> tuple[IntArray, IntArray, IntArray]:
     """Nodes of each wet cell (n, 4), and row and column of each node; a node stands at the south-west of its cell.
 
     Where two cells touch at a corner and no other water does, the northern one takes a node of its own.
@@ -200,7 +201,7 @@ def _corners(
     )
     first = np.cumsum(is_node).reshape(is_node.shape) - 1
     second = is_node.sum() + np.cumsum(touches).reshape(is_node.shape) - 1
-    corner = np.empty((len(row), 4), dtype=np.int64)
+    corner = np.empty((len(row), 4), dtype=np.int32)
     for place, (north, east) in enumerate(_PLACES):
         at = row + north, col + east
         corner[:, place] = np.where(touches[at] & (north == 0), second[at], first[at])
@@ -208,6 +209,27 @@ def _corners(
         np.concatenate(pair).astype(np.int32) for pair in zip(np.nonzero(is_node), np.nonzero(touches), strict=True)
     )
     return corner, rows, cols
+
+
+def _straightened(
+    waters: Waters, row: NDArray[np.int64], col: NDArray[np.int64], sides_m2: FloatArray
+) -> list[FloatArray]:
+    """Share of the length of the south, east, north and west side of each cell that counts where it is open.
+
+    The stairs of an edge askew to the rows are longer than it, up to 1.4 times, and would let waves out too easily. So
+    a side counts as the cosine of the angle between it and the edge among the cells two rows and columns round it.
+    """
+    south, east, north, west = waters.is_open.astype(float)
+    eastward, northward = (
+        ndimage.uniform_filter(facing, 5, mode="constant")[row, col] * np.sqrt(length_m2)
+        for facing, length_m2 in ((east - west, sides_m2[:, 2]), (north - south, sides_m2[:, 0]))
+    )
+    length = np.hypot(eastward, northward)
+    has_direction = length > 1e-6 * np.sqrt(sides_m2[:, 0])  # not so on a spit with edges on both sides
+    return [
+        np.clip(np.divide(part, length, out=np.ones_like(length), where=has_direction), 0.0, 1.0)
+        for part in (-northward, eastward, northward, -eastward)
+    ]
 
 
 def _elimination_order(row: IntArray, col: IntArray, is_free: BoolArray) -> NDArray[np.int64]:

@@ -20,6 +20,10 @@ __all__ = ["SIDES", "Waters", "open_waters"]
 BoolArray = NDArray[np.bool_]
 FloatArray = NDArray[np.float64]
 Geometries = NDArray[np.object_]
+#: West, south, east, north, degrees.
+Box = tuple[float, float, float, float]
+#: Rows and columns: row0, row1, col0, col1.
+Window = tuple[int, int, int, int]
 
 #: Sides of a cell, in the order of every array with one row a side.
 SIDES: Final = ("south", "east", "north", "west")
@@ -76,7 +80,7 @@ def open_waters(
         If the region does not meet the grid, holds no water, or no water of it meets an open edge; or is too large.
     """
     blocks = _blocks(source, settings.cell_km)
-    lattice, depth_m = _read(source, settings.box, blocks)
+    lattice, depth_m = _read(source, _window_of(source, settings.box, region, blocks), blocks)
     inside = _inside(lattice, settings.box, region)
     is_wet = inside & (depth_m > 0) & (depth_m >= settings.shallowest_m)
     if not is_wet.any():
@@ -101,11 +105,9 @@ def _blocks(source: GridSource, cell_km: float | None) -> tuple[int, int]:
     return max(1, round(cell_km * 1e3 / source.step_y_m)), max(1, round(cell_km * 1e3 / source.step_x_m))
 
 
-def _read(
-    source: GridSource, box: tuple[float, float, float, float] | None, blocks: tuple[int, int]
-) -> tuple[Lattice, FloatArray]:
-    """Lattice and depths of the box, means over blocks; a cell is water where at least half of its block is."""
-    row0, row1, col0, col1 = _window(source, box)
+def _read(source: GridSource, window: Window, blocks: tuple[int, int]) -> tuple[Lattice, FloatArray]:
+    """Lattice and depths of a window, means over blocks; a cell is water where at least half of its block is."""
+    row0, row1, col0, col1 = window
     rows, cols = blocks
     n_rows, n_cols = (row1 - row0) // rows, (col1 - col0) // cols
     if n_rows < 1 or n_cols < 1:
@@ -133,13 +135,40 @@ def _read(
         return lattice, depth_m
     wet_m = np.where(depth_m > 0, depth_m, 0.0).reshape(n_rows, rows, n_cols, cols)
     n_wet = (wet_m > 0).sum(axis=(1, 3))
-    return lattice, np.where(2 * n_wet >= rows * cols, wet_m.sum(axis=(1, 3)) / np.maximum(n_wet, 1), 0.0)
+    mean_m = np.where(2 * n_wet >= rows * cols, wet_m.sum(axis=(1, 3)) / np.maximum(n_wet, 1), 0.0)
+    is_unknown = np.isnan(depth_m).reshape(n_rows, rows, n_cols, cols).all(axis=(1, 3))
+    return lattice, np.where(is_unknown, np.nan, mean_m)
 
 
-def _window(source: GridSource, box: tuple[float, float, float, float] | None) -> tuple[int, int, int, int]:
-    """Rows and columns of the grid whose centres a box holds: row0, row1, col0, col1."""
-    if box is None:
+def _window_of(source: GridSource, box: Box | None, region: Geometries | None, blocks: tuple[int, int]) -> Window:
+    """Rows and columns of the grid to read: those of the box, or of the polygons and a cell round them."""
+    if box is not None:
+        return _window(source, box, "field.box")
+    if region is None:
         return 0, source.n_rows, 0, source.n_cols
+    row0, row1, col0, col1 = _window(source, _bounds(region), "the box of field.file's polygons")
+    rows, cols = blocks
+    row0, row1 = max(0, row0 - rows), min(source.n_rows, row1 + rows)
+    if source.wraps:
+        return row0, row1, col0 - cols, min(col1 + cols, col0 - cols + source.n_cols)
+    return row0, row1, max(0, col0 - cols), min(source.n_cols, col1 + cols)
+
+
+def _bounds(polygons: Geometries) -> Box:
+    """West, south, east, north of polygons, the shorter way round the globe; east above west."""
+    west, south, east, north = shapely.bounds(shapely.get_parts(polygons)).T
+    order = np.argsort(west % 360.0)
+    start, width = (west % 360.0)[order], (east - west)[order]
+    end = np.maximum.accumulate(start + width)
+    gap = np.append(start[1:], start[0] + 360.0) - end
+    widest = int(np.argmax(gap))  # the polygons begin beyond the widest gap
+    first = start[(widest + 1) % len(start)]
+    last = end[-1] if widest == len(start) - 1 else max(end[-1], end[widest] + 360.0)
+    return float(first), float(south.min()), float(last), float(north.max())
+
+
+def _window(source: GridSource, box: Box, name: str) -> Window:
+    """Rows and columns of the grid whose centres a box holds."""
     west, south, east, north = box
     east = east if east > west else east + 360.0
     across, along = np.linspace(west, east, 200), np.linspace(south, north, 200)
@@ -147,8 +176,10 @@ def _window(source: GridSource, box: tuple[float, float, float, float] | None) -
         np.concatenate([across, across, np.full(200, west), np.full(200, east)]),
         np.concatenate([np.full(200, south), np.full(200, north), along, along]),
     )
-    if source.is_geographic:  # east of the first column, however far round the globe
-        first, _ = source.index_of(west, south)
+    if source.is_geographic:  # on the turn of the globe on which the box has most of the grid
+        turns = (west + 360.0 * np.arange(-3, 4) - source.x0) / source.dx
+        n_held = np.minimum(turns + (east - west) / source.dx, source.n_cols - 1.0) - np.maximum(turns, 0.0)
+        first = source.index_of(west, south)[0] if source.wraps else turns[np.argmax(n_held)]
         col = np.array([first, first + (east - west) / source.dx])
     col, row = col[np.isfinite(col)], row[np.isfinite(row)]
     if len(col) and len(row):
@@ -161,11 +192,12 @@ def _window(source: GridSource, box: tuple[float, float, float, float] | None) -
             return row0, row1, col0, min(col1, col0 + source.n_cols)
     covered = ", ".join(f"{edge:g}" for edge in source.box_deg)
     raise FieldError(
-        f"field.box = {list(box)} lies outside the grid, which covers west, south, east, north = {covered}"
+        f"{name} = {[round(edge, 6) for edge in box]} holds no centre of a cell of the grid, which covers "
+        f"west, south, east, north = {covered}"
     )
 
 
-def _inside(lattice: Lattice, box: tuple[float, float, float, float] | None, region: Geometries | None) -> BoolArray:
+def _inside(lattice: Lattice, box: Box | None, region: Geometries | None) -> BoolArray:
     """Which cells belong to the region."""
     lon, lat = lattice.lonlat_of(*np.meshgrid(np.arange(lattice.n_cols), np.arange(lattice.n_rows)))
     inside = np.ones(lon.shape, dtype=bool)
@@ -184,7 +216,8 @@ def _inside(lattice: Lattice, box: tuple[float, float, float, float] | None, reg
 def _within(polygons: Geometries, lon: FloatArray, lat: FloatArray) -> BoolArray:
     """Whether points lie in any of the polygons, whatever turn of the globe these are drawn on."""
     held = shapely.union_all(polygons)
-    return np.asarray(sum(shapely.contains_xy(held, lon + turn, lat) for turn in (-360.0, 0.0, 360.0)), dtype=bool)
+    is_held: BoolArray = np.any([shapely.contains_xy(held, lon + turn, lat) for turn in (-360.0, 0.0, 360.0)], axis=0)
+    return is_held
 
 
 def _outer_sides(inside: BoolArray, depth_m: FloatArray) -> BoolArray:
@@ -202,6 +235,7 @@ def _opened(
     open_area: Geometries | None,
 ) -> BoolArray:
     """Those of the sides at the region's edge that are open."""
+    is_open: BoolArray
     if open_area is not None:
         lon, lat = _side_middles(lattice)
         is_open = meets_edge & _within(open_area, lon, lat)
@@ -252,7 +286,7 @@ def _remarks(
 ) -> tuple[str, ...]:
     """What was left out or changed, with its number of cells."""
     is_kept = ~np.isnan(waters.depth_m)
-    counts: Sequence[tuple[int, str]] = (
+    remarks: Sequence[tuple[int, str]] = (
         (
             int((inside & (depth_m > 0) & ~is_wet).sum()),
             f"cells shallower than field.shallowest_m = {settings.shallowest_m:g} m taken as land",
@@ -260,8 +294,8 @@ def _remarks(
         (int((is_wet & ~is_kept).sum()), "cells of water that does not reach the open edge left out"),
         (
             int((is_kept & (depth_m < settings.least_depth_m)).sum()),
-            f"cells taken to be field.least_depth_m = {settings.least_depth_m:g} m deep",
+            f"cells of {int(is_kept.sum())} taken to be field.least_depth_m = {settings.least_depth_m:g} m deep",
         ),
         (int((inside & np.isnan(depth_m)).sum()), "cells without a depth taken as land"),
     )
-    return tuple(f"{count} of {int(is_kept.sum())} {what}" for count, what in counts if count)
+    return tuple(f"{count} {what}" for count, what in remarks if count)
