@@ -17,11 +17,12 @@ PACKAGE = Path(shelfmap.__file__).parent
 #: Modules from the ground up; a module may import those before it. `_kernels` stands for all compiled loops.
 ORDER = [
     "errors", "workers", "constants", "words", "settings", "waves", "geodesy", "_kernels", "vertical", "localfiles",
-    "rasterfile", "lattice", "sheets", "grid", "inspection", "rasters", "cog", "synthetic", "demo", "basins", "chains",
-    "closing", "coast", "transects", "profiles", "shelfbreak", "deepsea", "modes", "response", "index", "gauges",
-    "dissection", "waters", "mesh", "longwave", "freemodes", "edgetide", "field", "assess",
-    "columns", "antimeridian", "replacement", "checkpoint", "vectors", "layers", "geopackage", "tables", "joining",
-    "stations", "inputs", "gaugefile", "region", "fieldlayers", "fieldmaps", "compare", "figures", "comparing", "provenance", "sections", "laying", "pipeline", "fieldrun", "cli", "__main__",
+    "rasterfile", "lattice", "sheets", "grid", "inspection", "rasters", "cog", "synthetic", "demo", "basins",
+    "chains", "closing", "coast", "transects", "profiles", "shelfbreak", "deepsea", "modes", "response", "index",
+    "gauges", "dissection", "waters", "mesh", "longwave", "freemodes", "edgetide", "field", "assess", "columns",
+    "antimeridian", "replacement", "checkpoint", "vectors", "layers", "geopackage", "tables", "joining", "stations",
+    "inputs", "gaugefile", "region", "fieldlayers", "fieldmaps", "compare", "figures", "comparing", "provenance",
+    "sections", "laying", "pipeline", "fieldrun", "cli", "__main__",
 ]  # fmt: skip
 
 #: Libraries that only these modules import.

@@ -80,9 +80,9 @@ def shares():
 
 
 def test_print_the_table(shares):
-    print("\nwindow                gauges  M2 explained at the half left out: median (least, largest of 10)")
+    print("\nwindow                gauges  M2 explained at the half left out: median (least, largest of 10)")  # noqa: T201
     for window, (values, count) in shares.items():
-        print(f"{window:20s} {count:7d}  {np.median(values):.2f} ({min(values):.2f}, {max(values):.2f})")
+        print(f"{window:20s} {count:7d}  {np.median(values):.2f} ({min(values):.2f}, {max(values):.2f})")  # noqa: T201
 
 
 @pytest.mark.parametrize("window", WANTED)
