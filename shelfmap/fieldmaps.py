@@ -8,11 +8,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from shelfmap import __version__
-from shelfmap.cog import Band, write_cog
 from shelfmap.field import CellWave, Field
 from shelfmap.fieldlayers import map_name, mode_map_name
 from shelfmap.freemodes import FreeMode
 from shelfmap.longwave import currents, ellipse
+from shelfmap.rasters import Band, write_cog
 from shelfmap.settings import FieldSettings, Settings
 from shelfmap.waves import waves_of
 from shelfmap.words import CAUTIONS
@@ -51,19 +51,23 @@ def write_maps(field: Field, folder: Path, title: str) -> list[Path]:
         If one cannot be written.
     """
     common = {"cautions": CAUTIONS, "software": f"shelfmap {__version__}", "title": title}
-    written = [write_cog(folder / DEPTH_MAP, _ground(field), field.waters, tags=common)]
+    written = [_write(folder / DEPTH_MAP, _ground(field), field, common)]
     for done in field.waves:
         tags = common | {"wave": done.wave.name or "period", "period_h": f"{done.wave.period_h:.8g}"}
-        written.append(write_cog(folder / map_name(done.wave), list(_wave_bands(field, done)), field.waters, tags=tags))
+        written.append(_write(folder / map_name(done.wave), list(_wave_bands(field, done)), field, tags))
     for number, mode in enumerate(field.modes, start=1):
         tags = common | {
             "period_h": f"{mode.period_h:.6g}",
             "q": f"{mode.q:.6g}",
             "participation": f"{mode.participation:.6g}",
         }
-        path = folder / mode_map_name(number)
-        written.append(write_cog(path, list(_mode_bands(field, mode)), field.waters, tags=tags))
+        written.append(_write(folder / mode_map_name(number), list(_mode_bands(field, mode)), field, tags))
     return written
+
+
+def _write(path: Path, bands: list[Band], field: Field, tags: dict[str, str]) -> Path:
+    waters = field.waters
+    return write_cog(path, bands, x0=waters.x0, y0=waters.y0, dx=waters.dx, dy=waters.dy, crs=waters.crs_wkt, tags=tags)
 
 
 def _ground(field: Field) -> list[Band]:
@@ -111,7 +115,7 @@ def _mode_bands(field: Field, mode: FreeMode) -> Iterator[Band]:
 
 
 def _band(field: Field, name: str, unit: str, meaning: str, values: Any) -> Band:
-    return Band(name=name, unit=unit, meaning=meaning, values=field.on_map(values))
+    return Band(name=name, unit=unit, description=meaning, values=field.on_map(values).astype(np.float32))
 
 
 def _lag_deg(values: ComplexArray) -> FloatArray:

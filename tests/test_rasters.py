@@ -65,7 +65,7 @@ def test_same_call_gives_same_bytes_and_leaves_nothing_beside(tmp_path):
     [
         (RAMP[0], {}, r"shape \(4,\): wanted \(n_rows, n_cols\)"),
         (RAMP[:0], {}, r"shape \(0, 4\): wanted"),
-        (RAMP.astype(float), {}, "array of float64: only float32 and int16 are stored; convert it"),
+        (RAMP.astype(float), {}, "array of float64: stored is int16 or float32 only; convert it"),
         (np.array([[np.inf]], dtype=np.float32), {}, "infinite values; put NaN"),
         (RAMP, {"nodata": -99999}, "nodata = -99999 does not fit int16"),
         (RAMP, {"nodata": np.nan}, "nodata = nan does not fit int16"),

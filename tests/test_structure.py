@@ -17,7 +17,7 @@ PACKAGE = Path(shelfmap.__file__).parent
 #: Modules from the ground up; a module may import those before it. `_kernels` stands for all compiled loops.
 ORDER = [
     "errors", "workers", "constants", "words", "settings", "waves", "geodesy", "_kernels", "vertical", "localfiles",
-    "rasterfile", "lattice", "sheets", "grid", "inspection", "rasters", "cog", "synthetic", "demo", "basins",
+    "rasterfile", "lattice", "sheets", "grid", "inspection", "rasters", "synthetic", "demo", "basins",
     "chains", "closing", "coast", "transects", "profiles", "shelfbreak", "deepsea", "modes", "response", "index",
     "gauges", "dissection", "waters", "mesh", "longwave", "freemodes", "edgetide", "field", "assess", "columns",
     "antimeridian", "replacement", "checkpoint", "vectors", "layers", "geopackage", "tables", "joining", "stations",
@@ -29,7 +29,7 @@ ORDER = [
 ONLY_HERE = {
     "pyproj": {"geodesy"},
     "numba": {"_kernels"},
-    "rasterio": {"rasterfile", "rasters", "cog"},
+    "rasterio": {"rasterfile", "rasters"},
     "contourpy": {"closing"},
     "geopandas": {"vectors"},
     "pyogrio": {"geopackage", "vectors"},
