@@ -73,25 +73,21 @@ _ISLANDS: Final = (
 )
 _VOID: Final = _Lobe((-462.0, 205.0), (-430.0, 228.0), 24.0, 17.0, 0.0)
 
-#: Tide a straight wall would have, amplitude [m] and Greenwich phase lag [deg] at the middle; the lag grows down
-#: the coast at the pace of a long wave in the deep sea.
-_WALL_TIDE: Final = {"M2": (0.45, 95.0), "S2": (0.18, 123.0)}
-_LAG_DEG_PER_KM: Final = 0.04
-
-#: Gauges: name, place (along, off the smooth coast) [km], invented gain of M2 and S2 over the wall tide, lag [deg].
+#: Gauges: name, place (along, off the smooth coast) [km], amplitude [m] and Greenwich phase lag [deg] of M2 and of S2,
+#: from the 2-D response of this coast to an invented tide offshore; 3 % of noise, and at Torvane a clock an hour slow.
 _GAUGES: Final = (
-    ("Velmarrow", -620.0, 3.0, 3.7, 108.0),
-    ("Oskeld", -540.0, 3.0, 3.8, 106.0),
-    ("Tarrowin", -410.0, 3.0, 3.7, 104.0),
-    ("Brellane", -320.0, 3.0, 3.1, 92.0),
-    ("Isle Quorrin", -247.0, 148.0, 1.7, 62.0),
-    ("Pelskar", -150.0, 3.0, 1.35, 28.0),
-    ("Mirrowen", -18.0, -100.0, 1.9, 40.0),
-    ("Torvane", -20.0, -238.0, 2.2, 48.0),
-    ("Ambrist", 67.0, 3.0, 1.3, 27.0),
-    ("Keldrosk", 205.0, 3.0, 1.1, 21.0),
-    ("Skarn Vey", 370.0, 3.0, 1.03, 19.0),
-    ("Lanvossel", 610.0, 3.0, 1.1, 21.0),
+    ("Velmarrow", -620.0, 3.0, 2.769, 145.7, 1.007, 177.6),
+    ("Oskeld", -540.0, 3.0, 2.539, 155.8, 1.085, 195.4),
+    ("Tarrowin", -410.0, 3.0, 1.869, 153.9, 0.738, 190.0),
+    ("Brellane", -320.0, 3.0, 1.057, 138.0, 0.385, 169.5),
+    ("Isle Quorrin", -247.0, 148.0, 0.621, 95.6, 0.225, 123.5),
+    ("Pelskar", -150.0, 3.0, 0.968, 113.1, 0.339, 147.2),
+    ("Mirrowen", -18.0, -100.0, 2.193, 190.4, 0.761, 230.4),
+    ("Torvane", -20.0, -238.0, 3.291, 215.6, 1.133, 257.5),
+    ("Ambrist", 67.0, 3.0, 0.448, 86.2, 0.181, 109.0),
+    ("Keldrosk", 205.0, 3.0, 0.501, 80.9, 0.177, 104.5),
+    ("Skarn Vey", 370.0, 3.0, 0.441, 78.6, 0.168, 106.3),
+    ("Lanvossel", 610.0, 3.0, 0.386, 86.5, 0.152, 114.4),
 )
 
 _SETTINGS: Final = """\
@@ -131,6 +127,17 @@ deep_m = 4000.0
 fixed_m = 5.0               # 0.5 and 0.012 for a survey to Order 2 of IHO S-44
 per_depth = 0.12
 correlation_km = 20.0
+
+[gauges]                    # for "shelfmap field" and "shelfmap compare": harmonic constants of tide gauges
+file = "{gauges}"
+amplitude_column = "{{name}}_amp_m"   # what your table calls them; {{name}} stands for the constituent
+phase_column = "{{name}}_phase_deg"   # Greenwich phase lag, degrees
+
+# Take away the "# " below, and "shelfmap screen" gives transects the gain of the region in two dimensions too.
+# [field]
+# cell_km = 10.0            # means over blocks of cells; without it the grid's own
+# drag = 2.5e-3             # friction follows from the currents of the tide fitted to the gauges
+# modes = 6                 # natural modes that "shelfmap field" looks for
 
 [output]
 path = "demo.gpkg"
@@ -197,17 +204,16 @@ def demo_gauges() -> dict[str, list[str] | list[float]]:
     -------
     dict of str to list
         ``id``, ``name``, ``lon`` and ``lat`` (degrees), ``source``, and for M2 and S2 the amplitude ``_amp_m``
-        (metres) and Greenwich phase lag ``_phase_deg`` (degrees, 0 to 360): the tide at a straight wall times an
-        invented gain like that of a shelf of that width.
+        (metres) and Greenwich phase lag ``_phase_deg`` (degrees, 0 to 360): made from the 2-D response of this coast.
 
     Examples
     --------
     >>> gauges = demo_gauges()
     >>> gauges["name"][0], gauges["M2_amp_m"][0], gauges["M2_phase_deg"][0]
-    ('Velmarrow', 1.665, 178.2)
+    ('Velmarrow', 2.769, 145.7)
     """
     names, *numbers = zip(*_GAUGES, strict=True)
-    along_km, sea_km, gain, lag_deg = (np.array(column) for column in numbers)
+    along_km, sea_km, *constants = (np.array(column) for column in numbers)
     lon, lat = _lonlat_from_scene(along_km, sea_km + _coast_km(along_km))
     columns: dict[str, list[str] | list[float]] = {
         "id": [f"D{number:02d}" for number in range(1, len(names) + 1)],
@@ -216,21 +222,21 @@ def demo_gauges() -> dict[str, list[str] | list[float]]:
         "lat": lat.round(3).tolist(),
         "source": ["invented"] * len(names),
     }
-    for wave, (wall_m, wall_deg) in _WALL_TIDE.items():
-        columns[f"{wave}_amp_m"] = (wall_m * gain).round(3).tolist()
-        columns[f"{wave}_phase_deg"] = ((wall_deg + lag_deg + _LAG_DEG_PER_KM * along_km) % 360.0).round(1).tolist()
+    for wave, amplitude_m, phase_deg in zip(("M2", "S2"), constants[::2], constants[1::2], strict=True):
+        columns[f"{wave}_amp_m"] = amplitude_m.tolist()
+        columns[f"{wave}_phase_deg"] = phase_deg.tolist()
     return columns
 
 
-def demo_settings(grid: str = "demo.tif") -> str:
-    """Text of the demo's settings, TOML, for a grid named relative to the settings file.
+def demo_settings(grid: str = "demo.tif", gauges: str = "demo_gauges.csv") -> str:
+    """Text of the demo's settings, TOML, for a grid and gauges named relative to the settings file.
 
     Examples
     --------
     >>> demo_settings().splitlines()[2]
     'title = "Invented demo coast"'
     """
-    return _SETTINGS.format(grid=grid)
+    return _SETTINGS.format(grid=grid, gauges=gauges)
 
 
 def write_demo(folder: str | Path, *, overwrite: bool = False) -> list[Path]:
