@@ -193,10 +193,10 @@ def _check_size(mesh: Mesh, chosen: FieldSettings, n_shapes: int) -> None:
     if needed_gb <= chosen.memory_gb:
         return
     cell_km = np.sqrt(mesh.area_m2.mean()) / 1e3
-    fits = cell_km * np.sqrt(1.1 * needed_gb / chosen.memory_gb)
+    fits = cell_km * np.ceil(np.sqrt(1.1 * needed_gb / chosen.memory_gb))  # cells are joined in whole numbers
     raise FieldError(
         f"field: {mesh.n_free:,} unknowns in cells of {cell_km:.3g} km would take about {needed_gb:.1f} GB, more than "
-        f"field.memory_gb = {chosen.memory_gb:g}; set field.cell_km = {fits:.2g}, take a smaller field.box, "
+        f"field.memory_gb = {chosen.memory_gb:g}; set field.cell_km = {fits:.3g}, take a smaller field.box, "
         "or allow more"
     )
 
