@@ -14,7 +14,7 @@ from shelfmap.errors import FieldError
 from shelfmap.freemodes import FreeMode, free_modes
 from shelfmap.gauges import Gauges
 from shelfmap.geodesy import positions_m
-from shelfmap.longwave import currents, factorise, memory_bytes
+from shelfmap.longwave import currents, factorise, floored_friction, memory_bytes
 from shelfmap.mesh import Mesh, make_mesh
 from shelfmap.settings import FieldSettings, Settings
 from shelfmap.waters import Waters
@@ -37,6 +37,9 @@ BACKGROUND_M_S: Final = 0.1
 #: most so many times.
 FRICTION_CHANGE: Final = 0.02
 MOST_TURNS: Final = 25
+#: Where the wave is as slow as the Earth turns, and friction weak, the current is a small difference of large numbers:
+#: it is left empty where |s^2 + f^2| is below this share of the square of the wave's frequency.
+NEAR_INERTIAL: Final = 0.03
 #: Points of a curve of gain against period.
 CURVE_POINTS: Final = 60
 #: Unit of `memory_gb`.
@@ -55,7 +58,7 @@ class CellWave:
         Elevation over the same edge tide all along the open edge: over its elevation where it is held, over twice the
         wave coming in where it lets waves out.
     unit_east, unit_north : (n,) array
-        Current in answer to an edge tide of 1 m, m/s.
+        Current in answer to an edge tide of 1 m, m/s; NaN near the latitude where the wave is inertial.
     tide, tide_east, tide_north : (n,) array, optional
         Elevation, metres, its angle the Greenwich phase lag, and current, m/s, of the tide itself, where it is known.
     fit : EdgeFit, optional
@@ -271,8 +274,11 @@ def _answer(job: _Job) -> CellWave:
 
 
 def _in_cells(mesh: Mesh, elevation: ComplexArray, omega: float, friction: FloatArray) -> tuple[ComplexArray, ...]:
-    """Elevation at the centres of the cells, and east and north part of the current there."""
-    return elevation[mesh.corner].mean(axis=1), *currents(mesh, elevation, omega, friction)
+    """Elevation at the centres of the cells, and east and north part of the current there, where it can be told."""
+    s = floored_friction(mesh, friction) - 1j * omega
+    is_inertial = abs(s * s + mesh.coriolis_rad_s**2) < NEAR_INERTIAL * omega**2
+    flow = (np.where(is_inertial, np.nan, part) for part in currents(mesh, elevation, omega, friction))
+    return elevation[mesh.corner].mean(axis=1), *flow
 
 
 def _settled_friction(jobs: _Jobs, settings: Settings, mapped: Mapped) -> tuple[FloatArray, list[str]]:
@@ -288,7 +294,7 @@ def _settled_friction(jobs: _Jobs, settings: Settings, mapped: Mapped) -> tuple[
         speed = np.full(len(friction), BACKGROUND_M_S**2)
         for done in mapped(_answer, jobs.of(known, friction)):
             if done.tide_east is not None and done.tide_north is not None:
-                speed += abs(done.tide_east) ** 2 + abs(done.tide_north) ** 2
+                speed += np.nan_to_num(abs(done.tide_east) ** 2 + abs(done.tide_north) ** 2)
         wanted = LORENTZ * jobs.chosen.drag * np.sqrt(speed)
         change = float(np.sqrt(np.mean(np.log(wanted / friction) ** 2)))
         friction = np.sqrt(friction * wanted)

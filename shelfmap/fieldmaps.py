@@ -22,6 +22,8 @@ __all__ = ["map_names", "write_maps"]
 ComplexArray = NDArray[np.complex128]
 FloatArray = NDArray[np.float64]
 
+#: Said of currents.
+_INERTIAL: Final = "; empty where the wave is as slow as the Earth turns there."
 #: Map of the depths and the friction that were used.
 DEPTH_MAP: Final = "field_depth.tif"
 
@@ -87,7 +89,9 @@ def _wave_bands(field: Field, done: CellWave) -> Iterator[Band]:
     flow = ellipse(done.unit_east, done.unit_north)
     yield _band(field, "gain", "", f"Amplitude over {over}.", abs(done.unit))
     yield _band(field, "lag_deg", "deg", "How much later it peaks than the edge tide.", _lag_deg(done.unit))
-    yield _band(field, "current_per_m", "s-1", "Largest current speed for an edge tide of 1 m.", flow.major_m_s)
+    yield _band(
+        field, "current_per_m", "s-1", f"Largest current speed for an edge tide of 1 m{_INERTIAL}", flow.major_m_s
+    )
     if done.tide is None or done.tide_east is None or done.tide_north is None:
         return
     source = "fitted to gauges" if done.fit is not None else "as given"
@@ -96,7 +100,7 @@ def _wave_bands(field: Field, done: CellWave) -> Iterator[Band]:
     if done.fit is not None:
         phase_deg = np.mod(np.degrees(np.angle(done.tide)), 360.0)
         yield _band(field, "phase_deg", "deg", "Greenwich phase lag, 0 to 360.", phase_deg)
-    yield _band(field, "major_m_s", "m s-1", "Largest speed of the current.", flow.major_m_s)
+    yield _band(field, "major_m_s", "m s-1", f"Largest speed of the current{_INERTIAL}", flow.major_m_s)
     yield _band(
         field, "minor_m_s", "m s-1", "Smallest speed; negative where the current turns clockwise.", flow.minor_m_s
     )
