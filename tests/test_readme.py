@@ -102,11 +102,13 @@ def test_verbs_in_the_text_exist():
 
 def test_settings_example_is_valid(tmp_path):
     """The settings of the real coast are accepted as they stand."""
-    (example,) = fenced("toml")
+    example, region = fenced("toml")
     (tmp_path / "coast.toml").write_text(example, encoding="utf-8")
     settings = Settings.from_toml(tmp_path / "coast.toml")
     assert settings.grid.path == tmp_path / "dem.tif"
     assert settings.response.periods_h == (0.5, 2.0)
+    (tmp_path / "coast.toml").write_text(example + region, encoding="utf-8")
+    assert Settings.from_toml(tmp_path / "coast.toml").field.modes == 6
 
 
 def test_python_example_runs(tmp_path, monkeypatch, capsys):
