@@ -10,24 +10,35 @@ __version__ = "0.1.0"
 __all__ = [
     "DepthError",
     "Friction",
+    "Gauges",
     "Settings",
     "__version__",
+    "compare",
     "coriolis_rad_s",
     "deep_end",
     "find_shelf_breaks",
     "lay_transects",
     "open_grid",
+    "open_waters",
+    "read_gauges",
     "read_table",
     "resonance_index",
+    "run_field",
     "sample_profiles",
     "screen",
     "shelf_modes",
+    "solve_field",
     "trace_coast",
     "wave_response",
 ]
 
 if TYPE_CHECKING:
     from shelfmap.coast import trace_coast
+    from shelfmap.comparison import compare
+    from shelfmap.field import solve_field
+    from shelfmap.fieldrun import run_field
+    from shelfmap.gaugefile import read_gauges
+    from shelfmap.gauges import Gauges
     from shelfmap.grid import open_grid
     from shelfmap.index import resonance_index
     from shelfmap.pipeline import screen
@@ -37,21 +48,28 @@ if TYPE_CHECKING:
     from shelfmap.shelfbreak import find_shelf_breaks
     from shelfmap.transects import lay_transects
     from shelfmap.vectors import read_table
+    from shelfmap.waters import open_waters
 else:
     _HOMES = {
         "DepthError": "response",
         "Friction": "response",
+        "Gauges": "gauges",
         "Settings": "settings",
+        "compare": "comparison",
         "coriolis_rad_s": "response",
         "deep_end": "response",
         "find_shelf_breaks": "shelfbreak",
         "lay_transects": "transects",
         "open_grid": "grid",
+        "open_waters": "waters",
+        "read_gauges": "gaugefile",
         "read_table": "vectors",
         "resonance_index": "index",
+        "run_field": "fieldrun",
         "sample_profiles": "profiles",
         "screen": "pipeline",
         "shelf_modes": "response",
+        "solve_field": "field",
         "trace_coast": "coast",
         "wave_response": "response",
     }

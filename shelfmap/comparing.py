@@ -4,7 +4,7 @@ from pathlib import Path
 
 import pandas as pd
 
-from shelfmap.compare import Comparison, compare
+from shelfmap.comparison import Comparison, compare
 from shelfmap.errors import OutputExistsError
 from shelfmap.figures import comparison_figure
 from shelfmap.rasters import replace_file

@@ -7,7 +7,7 @@ from typing import Any, Final
 import numpy as np
 from matplotlib.figure import Figure
 
-from shelfmap.compare import Comparison, WaveScore
+from shelfmap.comparison import Comparison, WaveScore
 
 __all__ = ["comparison_figure"]
 

@@ -21,7 +21,7 @@ ORDER = [
     "chains", "closing", "coast", "transects", "profiles", "shelfbreak", "deepsea", "modes", "response", "index",
     "gauges", "dissection", "waters", "mesh", "longwave", "freemodes", "edgetide", "field", "assess", "columns",
     "antimeridian", "replacement", "checkpoint", "vectors", "layers", "geopackage", "tables", "joining", "stations",
-    "inputs", "gaugefile", "region", "fieldlayers", "fieldmaps", "compare", "figures", "comparing", "provenance",
+    "inputs", "gaugefile", "region", "fieldlayers", "fieldmaps", "comparison", "figures", "comparing", "provenance",
     "sections", "laying", "pipeline", "fieldrun", "cli", "__main__",
 ]  # fmt: skip
 
