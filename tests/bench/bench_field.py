@@ -208,7 +208,7 @@ def test_memory_and_growth(region, capsys):
     assert found[-1]["peak_gib"] < 4.0
     assert exponent <= 1.35
     assert min(factors) >= 1.0
-    assert max(factors) <= 1.7
+    assert max(factors) <= 1.6
 
 
 def test_further_periods(capsys):
