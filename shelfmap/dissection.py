@@ -14,7 +14,7 @@ __all__ = ["dissected"]
 IntArray = NDArray[np.int32]
 
 #: Regions of so few nodes are not cut further.
-_LEAF: Final = 60
+_LEAF: Final = 30
 #: Share of a region's nodes on either side of the middle among which the shortest cut is looked for.
 _SLACK: Final = 0.2
 
@@ -47,7 +47,7 @@ def dissected(row: IntArray, col: IntArray) -> IntArray:
             parts.append(nodes)
             continue
         rows, cols = row[nodes], col[nodes]
-        line = rows if np.ptp(rows) > np.ptp(cols) else cols
+        line = rows if rows.max() - rows.min() > cols.max() - cols.min() else cols
         if line.min() == line.max():
             parts.append(nodes)
             continue
