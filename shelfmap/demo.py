@@ -132,6 +132,9 @@ fixed_m = 5.0               # 0.5 and 0.012 for a survey to Order 2 of IHO S-44
 per_depth = 0.12
 correlation_km = 20.0
 
+[gauges]
+file = "{gauges}"   # harmonic constants: amplitude and Greenwich phase lag by constituent
+
 [output]
 path = "demo.gpkg"
 crs = "EPSG:4326"
@@ -222,15 +225,15 @@ def demo_gauges() -> dict[str, list[str] | list[float]]:
     return columns
 
 
-def demo_settings(grid: str = "demo.tif") -> str:
-    """Text of the demo's settings, TOML, for a grid named relative to the settings file.
+def demo_settings(grid: str = "demo.tif", gauges: str = "demo_gauges.csv") -> str:
+    """Text of the demo's settings, TOML, for a grid and gauges named relative to the settings file.
 
     Examples
     --------
     >>> demo_settings().splitlines()[2]
     'title = "Invented demo coast"'
     """
-    return _SETTINGS.format(grid=grid)
+    return _SETTINGS.format(grid=grid, gauges=gauges)
 
 
 def write_demo(folder: str | Path, *, overwrite: bool = False) -> list[Path]:

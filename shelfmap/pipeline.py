@@ -213,6 +213,7 @@ def _check_output(settings: Settings, path: Path, *, overwrite: bool) -> None:
         ("coast.file", settings.coast.file),
         ("transects.file", settings.transects.file),
         ("shelf_break.file", settings.shelf_break.file),
+        ("gauges.file", settings.gauges.file),
     ]
     for name, given in inputs:
         if given is not None and given.exists() and path.exists() and given.samefile(path):

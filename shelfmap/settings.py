@@ -12,7 +12,16 @@ import tomllib
 from pathlib import Path
 from typing import Annotated, Any, Final, Literal, Self, TypeVar
 
-from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, ValidationError, field_validator, model_validator
+from pydantic import (
+    AfterValidator,
+    BaseModel,
+    BeforeValidator,
+    ConfigDict,
+    Field,
+    ValidationError,
+    field_validator,
+    model_validator,
+)
 
 from shelfmap.constants import CONSTITUENTS
 from shelfmap.errors import SettingsError
@@ -21,6 +30,7 @@ __all__ = [
     "VOID_LAND_M",
     "CoastSettings",
     "DepthErrorSettings",
+    "GaugeSettings",
     "GridSettings",
     "OutputSettings",
     "ResponseSettings",
@@ -117,9 +127,18 @@ def _as_paths(value: object) -> object:
     return tuple(value)
 
 
+def _with_name(value: str) -> str:
+    """Refuse names of columns that do not hold the place of the constituent once."""
+    if value.count("{name}") != 1:
+        raise ValueError(f'{_shown(value)}: must hold {{name}} once, which stands for the constituent: "{{name}}_amp"')
+    return value
+
+
 _S = TypeVar("_S", bound=BaseModel)
 ConstituentName = Annotated[str, BeforeValidator(_constituent_name)]
 FilePath = Annotated[Path, BeforeValidator(_as_path)]
+ColumnName = Annotated[str, Field(min_length=1)]
+WaveColumns = Annotated[str, AfterValidator(_with_name)]
 FilePaths = Annotated[Path | tuple[Path, ...], BeforeValidator(_as_paths)]
 
 
@@ -346,6 +365,34 @@ class DepthErrorSettings(_Stage):
     )
 
 
+class GaugeSettings(_Stage):
+    """Harmonic constants of tide gauges, and the columns of the file that hold them."""
+
+    file: FilePath | None = Field(
+        None, description="Tide gauges: CSV with a heading, or a vector file of points, relative to the settings file."
+    )
+    layer: str | None = Field(None, description="Layer of that file, where it holds several.")
+    id_column: ColumnName = Field("id", description="Column of the gauges' identities; without one they are numbered.")
+    lon_column: ColumnName = Field("lon", description="Column of longitudes, degrees; not used where there are points.")
+    lat_column: ColumnName = Field("lat", description="Column of latitudes, degrees; not used where there are points.")
+    amplitude_column: WaveColumns = Field(
+        "{name}_amp_m", description="Columns of amplitudes; {name} stands for the constituent."
+    )
+    phase_column: WaveColumns = Field(
+        "{name}_phase_deg",
+        description="Columns of phases, Greenwich lags in degrees; {name} stands for the constituent.",
+    )
+    amplitude_unit: Literal["m", "cm", "mm", "ft"] = Field("m", description="Unit of the amplitudes.")
+
+    @model_validator(mode="after")
+    def _columns_differ(self) -> Self:
+        if self.amplitude_column == self.phase_column:
+            raise ValueError(
+                f"amplitude_column and phase_column are both {_shown(self.phase_column)}: name two columns"
+            )
+        return self
+
+
 class OutputSettings(_Stage):
     """What is written, and where."""
 
@@ -365,6 +412,7 @@ class Settings(_Stage):
     shelf_break: ShelfBreakSettings = ShelfBreakSettings()
     response: ResponseSettings = ResponseSettings()
     depth_error: DepthErrorSettings = DepthErrorSettings()
+    gauges: GaugeSettings = GaugeSettings()
     output: OutputSettings = OutputSettings()
 
     @model_validator(mode="after")

@@ -192,7 +192,8 @@ def test_files_in_the_repository_are_what_the_code_makes(tmp_path, repository):
         assert kept.tags() == made.tags()
         assert kept.descriptions == made.descriptions
     assert (repository / "demo_grids" / "demo_gauges.csv").read_bytes() == gauges_path.read_bytes()
-    assert (repository / "configs" / "demo.toml").read_bytes() == demo_settings("../demo_grids/demo.tif").encode()
+    text = demo_settings("../demo_grids/demo.tif", "../demo_grids/demo_gauges.csv")
+    assert (repository / "configs" / "demo.toml").read_bytes() == text.encode()
     assert sorted(path.name for path in (repository / "demo_grids").iterdir()) == ["demo.tif", "demo_gauges.csv"]
     assert (repository / "demo_grids" / "demo.tif").stat().st_size < 1_000_000
 

@@ -57,6 +57,12 @@ def read(**tables):
         ("depth_error", "fixed_m", [0, 1000], [-1, 1001]),
         ("depth_error", "per_depth", [0, 1], [-0.1, 1.1]),
         ("depth_error", "correlation_km", [0.1, 2000], [0, 2001]),
+        ("gauges", "id_column", ["id", "Nr."], ["", 5]),
+        ("gauges", "lon_column", ["x"], ["", 5]),
+        ("gauges", "lat_column", ["y"], ["", 5]),
+        ("gauges", "amplitude_column", ["{name}", "h {name} {m}"], ["M2_amp_m", "{name}{name}", "{}", "", 5]),
+        ("gauges", "phase_column", ["{name}", "g({name})"], ["M2_phase_deg", "{name}{name}", "{Name}", "", 5]),
+        ("gauges", "amplitude_unit", ["m", "cm", "mm", "ft"], ["M", "in", "", 1]),
         ("output", "profiles", [True, False], [3]),
         ("output", "response_curves", [True, False], [3]),
         ("output", "crs", ["EPSG:3035"], [4326]),
@@ -78,7 +84,7 @@ def test_all_keys_are_tried_above_or_are_files_and_names():
         for mark in test_every_key_has_its_bounds_and_says_which_key_broke_them.pytestmark
         for args in mark.args[1]
     }
-    rest = {f"{table}.{key}" for table in ("coast", "transects", "shelf_break") for key in ("file", "layer")}
+    rest = {f"{table}.{key}" for table in ("coast", "transects", "shelf_break", "gauges") for key in ("file", "layer")}
     rest |= {"title", "grid.path", "grid.crs", "grid.variable", "response.drag", "response.offshore_amplitude_m"}
     assert tried | rest == {line.split("`")[1] for line in markdown_settings().splitlines()[2:]}
 
@@ -137,6 +143,11 @@ def test_all_faults_are_named_at_once_each_on_its_line():
         ),
         ({"response": {"constituents": [], "periods_h": []}}, "both empty: name at least one wave"),
         ({"shelf_break": {"shallowest_m": 600}}, "must rise in this order"),
+        (
+            {"gauges": {"amplitude_column": "{name}", "phase_column": "{name}"}},
+            'gauges: amplitude_column and phase_column are both "{name}": name two columns',
+        ),
+        ({"gauges": {"amplitude_column": "M2_amp"}}, 'gauges.amplitude_column: "M2_amp": must hold {name} once'),
         ({"coast": 3}, "coast = 3: input should be a valid dictionary"),
     ],
 )
@@ -152,11 +163,14 @@ def test_missing_cells_are_land_up_to_the_height_the_grid_gives_them():
 
 def test_paths_are_taken_from_the_folder_of_the_file(tmp_path):
     file = tmp_path / "run.toml"
-    file.write_text('[grid]\npath = "deep/dem.tif"\n[coast]\nfile = "/abs/coast.gpkg"\n', encoding="utf-8")
+    file.write_text(
+        '[grid]\npath = "deep/dem.tif"\n[coast]\nfile = "/abs/coast.gpkg"\n[gauges]\nfile = "g.csv"\n', encoding="utf-8"
+    )
     read_back = Settings.from_toml(file)
     assert read_back.grid.path == tmp_path.resolve() / "deep" / "dem.tif"
     assert read_back.coast.file == Path("/abs/coast.gpkg")
     assert read_back.output.path == tmp_path.resolve() / "coast.gpkg"
+    assert read_back.gauges.file == tmp_path.resolve() / "g.csv"
     assert read_back.transects.file is None
 
 

@@ -18,9 +18,9 @@ PACKAGE = Path(shelfmap.__file__).parent
 ORDER = [
     "errors", "workers", "constants", "words", "settings", "geodesy", "_kernels", "vertical", "localfiles",
     "rasterfile", "lattice", "sheets", "grid", "inspection", "rasters", "synthetic", "demo", "basins", "chains",
-    "closing", "coast", "transects", "profiles", "shelfbreak", "deepsea", "modes", "response", "index", "assess",
-    "columns", "antimeridian", "replacement", "checkpoint", "vectors", "layers", "geopackage", "tables", "stations",
-    "inputs", "provenance", "sections", "laying", "pipeline", "cli", "__main__",
+    "closing", "coast", "transects", "profiles", "shelfbreak", "deepsea", "modes", "response", "index", "gauges",
+    "assess", "columns", "antimeridian", "replacement", "checkpoint", "vectors", "layers", "geopackage", "tables",
+    "stations", "inputs", "gaugefile", "provenance", "sections", "laying", "pipeline", "cli", "__main__",
 ]  # fmt: skip
 
 #: Libraries that only these modules import.
