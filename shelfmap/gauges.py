@@ -1,30 +1,44 @@
-"""Tide gauges: where they are, and the harmonic constants of the tide there."""
+"""Harmonic constants of tide gauges: where each stands, and amplitude and phase of each constituent there."""
 
-from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
 
+from shelfmap.errors import LayerError
+
 __all__ = ["Gauges"]
 
 FloatArray = NDArray[np.float64]
+ComplexArray = NDArray[np.complex128]
 
 
-@dataclass(frozen=True, slots=True, kw_only=True, eq=False)
+@dataclass(frozen=True, slots=True, kw_only=True)
 class Gauges:
-    """Harmonic constants at n gauges.
+    """Tide gauges, one row each, and the constituents known at any of them.
 
-    Parameters
+    Attributes
     ----------
     name : (n,) array of str
-        What each is called.
+        Identity, each another.
     lon_deg, lat_deg : (n,) array of float
-        Where it is, degrees.
+        Place, degrees; longitudes from -180 up to 180.
     constituents : tuple of str
-        Names of the k constituents.
-    amplitude_m, phase_deg : (n, k) array of float
-        Amplitude, metres, and Greenwich phase lag, degrees; NaN where not known.
+        Names of the k constituents, in the order of the columns below.
+    amplitude_m : (n, k) array of float
+        Amplitude, metres; NaN where not given.
+    phase_deg : (n, k) array of float
+        Greenwich phase lag, degrees from 0 up to 360; NaN where not given.
+
+    Examples
+    --------
+    >>> gauges = Gauges(
+    ...     name=np.array(["A", "B"], dtype=object), lon_deg=np.array([1.0, 2.0]), lat_deg=np.array([50.0, 51.0]),
+    ...     constituents=("M2",), amplitude_m=np.array([[0.5], [1.0]]), phase_deg=np.array([[90.0], [np.nan]]),
+    ... )
+    >>> len(gauges), gauges.constants("M2").round(3)
+    (2, array([ 0.+0.5j, nan+nanj]))
     """
 
     name: NDArray[np.object_]
@@ -34,21 +48,49 @@ class Gauges:
     amplitude_m: FloatArray
     phase_deg: FloatArray
 
+    def __post_init__(self) -> None:
+        for field in fields(self):
+            if isinstance(values := getattr(self, field.name), np.ndarray):
+                values.setflags(write=False)
+
     def __len__(self) -> int:
         return len(self.name)
 
-    def constants(self, constituent: str) -> NDArray[np.complex128]:
-        """A exp(i G) at each gauge (n,), metres; NaN where the amplitude or the phase is not known."""
-        column = self.constituents.index(constituent)
-        return np.asarray(self.amplitude_m[:, column] * np.exp(1j * np.radians(self.phase_deg[:, column])))
+    def constants(self, constituent: str) -> ComplexArray:
+        """Complex amplitude of one constituent at each gauge, metres.
 
-    def rows(self, chosen: "Sequence[int] | NDArray[np.int64] | NDArray[np.bool_]") -> "Gauges":
-        """Those of some rows only."""
+        Parameters
+        ----------
+        constituent : str
+            One of `constituents`.
+
+        Returns
+        -------
+        (n,) array of complex
+            A exp(+i G): with the time factor exp(-i w t) a positive lag is late. NaN where amplitude or phase is
+            not given.
+
+        Raises
+        ------
+        LayerError
+            If the gauges do not have this constituent.
+        """
+        if constituent not in self.constituents:
+            raise LayerError(f"the gauges have no {constituent}; they have {', '.join(self.constituents)}")
+        column = self.constituents.index(constituent)
+        amplitude_m, phase_rad = self.amplitude_m[:, column], np.radians(self.phase_deg[:, column])
+        out = np.full(len(self), complex(np.nan, np.nan))
+        known = ~(np.isnan(amplitude_m) | np.isnan(phase_rad))
+        out[known] = amplitude_m[known] * np.exp(1j * phase_rad[known])
+        return out
+
+    def rows(self, index: Any) -> "Gauges":
+        """Some of them, by a slice, row numbers or a mask, in the order asked for."""
         return Gauges(
-            name=self.name[chosen],
-            lon_deg=self.lon_deg[chosen],
-            lat_deg=self.lat_deg[chosen],
+            name=self.name[index],
+            lon_deg=self.lon_deg[index],
+            lat_deg=self.lat_deg[index],
             constituents=self.constituents,
-            amplitude_m=self.amplitude_m[chosen],
-            phase_deg=self.phase_deg[chosen],
+            amplitude_m=self.amplitude_m[index],
+            phase_deg=self.phase_deg[index],
         )

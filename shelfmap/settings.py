@@ -12,7 +12,16 @@ import tomllib
 from pathlib import Path
 from typing import Annotated, Any, Final, Literal, Self, TypeVar, get_args
 
-from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, ValidationError, field_validator, model_validator
+from pydantic import (
+    AfterValidator,
+    BaseModel,
+    BeforeValidator,
+    ConfigDict,
+    Field,
+    ValidationError,
+    field_validator,
+    model_validator,
+)
 from pydantic.fields import FieldInfo
 
 from shelfmap.constants import CONSTITUENTS
@@ -128,9 +137,18 @@ def _check_box(box: tuple[float, float, float, float]) -> None:
         raise ValueError(f"box = {list(box)}: west and east must differ and lie within -360 and 360")
 
 
+def _with_name(value: str) -> str:
+    """Refuse names of columns that do not hold the place of the constituent once."""
+    if value.count("{name}") != 1:
+        raise ValueError(f'{_shown(value)}: must hold {{name}} once, which stands for the constituent: "{{name}}_amp"')
+    return value
+
+
 _S = TypeVar("_S", bound=BaseModel)
 ConstituentName = Annotated[str, BeforeValidator(_constituent_name)]
 FilePath = Annotated[Path, BeforeValidator(_as_path)]
+ColumnName = Annotated[str, Field(min_length=1)]
+WaveColumns = Annotated[str, AfterValidator(_with_name)]
 FilePaths = Annotated[Path | tuple[Path, ...], BeforeValidator(_as_paths)]
 
 
@@ -360,13 +378,13 @@ class GaugeSettings(_Stage):
         None, description="CSV table or vector file of points: harmonic constants of tide gauges."
     )
     layer: str | None = Field(None, description="Layer of that file, where it holds several.")
-    id_column: str = Field("id", description="Column that names a gauge; rows are numbered where there is none.")
-    lon_column: str = Field("lon", description="Column of longitudes, degrees, in a table without shapes.")
-    lat_column: str = Field("lat", description="Column of latitudes, degrees, in a table without shapes.")
-    amplitude_column: str = Field(
+    id_column: ColumnName = Field("id", description="Column that names a gauge; rows are numbered where there is none.")
+    lon_column: ColumnName = Field("lon", description="Column of longitudes, degrees, in a table without shapes.")
+    lat_column: ColumnName = Field("lat", description="Column of latitudes, degrees, in a table without shapes.")
+    amplitude_column: WaveColumns = Field(
         "{name}_amp_m", description="Column of amplitudes; {name} stands for the constituent."
     )
-    phase_column: str = Field(
+    phase_column: WaveColumns = Field(
         "{name}_phase_deg", description="Column of Greenwich phase lags, degrees; {name} stands for the constituent."
     )
     amplitude_unit: Literal["m", "cm", "mm", "ft"] = Field("m", description="Unit of the amplitudes.")
@@ -378,12 +396,13 @@ class GaugeSettings(_Stage):
         "gauges, points, stations.",
     )
 
-    @field_validator("amplitude_column", "phase_column")
-    @classmethod
-    def _names_the_constituent(cls, value: str) -> str:
-        if value.count("{name}") != 1 or value.replace("{name}", "").count("{"):
-            raise ValueError(f"{_shown(value)} must hold {{name}} once, where the constituent stands")
-        return value
+    @model_validator(mode="after")
+    def _columns_differ(self) -> Self:
+        if self.amplitude_column == self.phase_column:
+            raise ValueError(
+                f"amplitude_column and phase_column are both {_shown(self.phase_column)}: name two columns"
+            )
+        return self
 
 
 Side = Literal["south", "east", "north", "west"]

@@ -86,7 +86,7 @@ def made(grid, gauges_csv, tmp_path_factory):
         gauges={"file": str(gauges_csv)},
         field={"modes": 2, "mode_period_h": 4.0, "spectrum_h": [2.0, 20.0]},
     )
-    with pytest.warns(UserWarning, match="no columns for S2; the edge tide is not known"):
+    with pytest.warns(UserWarning, match="S2 left out of the gauges: no column"):
         return run_field(settings)
 
 
@@ -233,7 +233,7 @@ def test_maps_of_modes_that_are_found_no_more_go(grid, tmp_path):
         ("[field]\nfile = 'nowhere.gpkg'", "nowhere.gpkg"),
         ("[field]\ncel_km = 3", "did you mean 'cell_km'"),
         ("[field]\nedge_tide_m = { N2 = 0.1 }\n[response]\nconstituents = ['M2']", "not among response.constituents"),
-        ("[gauges]\nfile = 'nowhere.csv'", "nowhere.csv cannot be read"),
+        ("[gauges]\nfile = 'nowhere.csv'", "nowhere.csv: no such file"),
         ("[gauges]\nfile = 'run.toml'", "run.toml"),
     ],
 )

@@ -304,7 +304,7 @@ def test_fewer_than_one_worker_is_refused(three_sections):
         screen(three_sections, workers=0)
 
 
-@pytest.mark.parametrize("section", ["coast", "transects", "shelf_break"])
+@pytest.mark.parametrize("section", ["coast", "transects", "shelf_break", "gauges"])
 def test_output_that_would_replace_its_own_input_is_refused(tmp_path, write_grid, section):
     """Somebody who edits a layer within the output and runs again would lose the edits."""
     settings = settings_for(write_grid(small_coast()), tmp_path, **{section: {"file": "out.gpkg"}})

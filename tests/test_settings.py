@@ -57,7 +57,7 @@ def read(**tables):
         ("depth_error", "fixed_m", [0, 1000], [-1, 1001]),
         ("depth_error", "per_depth", [0, 1], [-0.1, 1.1]),
         ("depth_error", "correlation_km", [0.1, 2000], [0, 2001]),
-        ("gauges", "amplitude_column", ["{name}_amp", "H_{name}"], ["amp", "{name}{name}", "{name}{x}", 3]),
+        ("gauges", "amplitude_column", ["{name}_amp", "H_{name}"], ["amp", "{name}{name}", "", 3]),
         ("gauges", "phase_column", ["{name}_phase", "g_{name}"], ["phase", "{name}{name}", 3]),
         ("gauges", "amplitude_unit", ["m", "cm", "mm", "ft"], ["metres", 1]),
         ("gauges", "reach_km", [0, 1000], [-1, 1001]),

@@ -36,11 +36,12 @@ from utils_fuzz import assert_sound, invoke, toml_text
 from utils_pipeline import settings_for
 
 from shelfmap.errors import LayerError, ShelfmapError
+from shelfmap.gaugefile import read_gauges
 from shelfmap.layers import pack, unpack
 from shelfmap.localfiles import CLOSED
 from shelfmap.pipeline import screen
 from shelfmap.rasterfile import read_header
-from shelfmap.settings import GridSettings
+from shelfmap.settings import GaugeSettings, GridSettings
 from shelfmap.vectors import read_vector
 
 MARK = "SERVER"  # stands for http://127.0.0.1:port in the files below
@@ -123,6 +124,10 @@ def refused(read, path):
     return str(caught.value)
 
 
+def read_gauge_file(path):
+    return read_gauges(GaugeSettings(file=path), ["M2"])
+
+
 def read_grid(path):
     """Header and every value."""
     header = read_header(path, GridSettings(path=path))
@@ -170,7 +175,10 @@ def test_no_name_of_a_vector_file_leads_out(silent, tmp_path, name):
     name = name.replace(MARK, silent)
     for path in (Path(name), tmp_path / name.lstrip("/")):
         refused(read_vector, path)
+        refused(read_gauge_file, path)
+        refused(read_gauge_file, Path(f"{path}.csv"))
     refused(read_vector, write_text(tmp_path / "a.vrt", vector_vrt(name)))
+    refused(read_gauge_file, tmp_path / "a.vrt")
 
 
 # ---- files that lead to a network, to other files, or to code
@@ -258,6 +266,8 @@ def test_no_vector_file_leads_out_or_runs_code(silent, tmp_path, name):
     beside(tmp_path)
     file_name, text = VECTOR_FILES[name]
     path = write_text(tmp_path / file_name, text.replace(MARK, silent))
+    refused(read_gauge_file, path)
+    refused(read_gauge_file, write_text(tmp_path / "a.csv", path.read_text(encoding="utf-8")))
     if name in READ:
         assert len(read_vector(path).geometry) == 1
     else:
