@@ -31,6 +31,9 @@ MOST_SHAPES: Final = 40
 _NODES: Final = 500
 #: Degrees of freedom of the distribution of local errors.
 FREEDOM: Final = 4.0
+#: Variance of Gaussian errors over the squared scale that this distribution takes from them: the root x of
+#: E[(nu + 2) x E / (nu + 2 x E)] = 1 for exponential E, solved numerically. Errors are given as such a variance.
+VARIANCE: Final = 1.376
 #: Local error of a gauge: at least this share of the tide at the gauges.
 LEAST_LOCAL: Final = 0.03
 #: A gauge is off if unseen it is predicted worse than this many standard deviations.
@@ -114,26 +117,27 @@ def fit_edge(response: ComplexArray, observed: ComplexArray) -> EdgeFit:
         tide_var, local_var = _sizes(x, y, weight)
         inverse = np.linalg.inv((x.conj().T * weight) @ x + local_var / tide_var * np.eye(x.shape[1]))
         amplitude = inverse @ (x.conj().T @ (weight * y))
-        before = weight
         off = abs(y - x @ amplitude) ** 2 / local_var
-        weight = np.asarray((FREEDOM + 2.0) / (FREEDOM + 2.0 * off))  # two real errors in a complex one
-        if np.allclose(weight, before, rtol=0, atol=1e-3):
+        wanted = np.asarray((FREEDOM + 2.0) / (FREEDOM + 2.0 * off))  # two real errors in a complex one
+        if np.allclose(wanted, weight, rtol=0, atol=1e-6):
             break
+        weight = wanted
     fitted = response @ amplitude
     spread = np.einsum("gi,ij,gj->g", response, inverse, response.conj()).real
     all_weights = np.zeros(len(observed))
     all_weights[is_seen] = weight
     lever = np.minimum(all_weights * spread, 1.0 - 1e-9)
     unseen = np.where(is_seen, observed - (observed - fitted) / (1.0 - lever), fitted)
+    error_var = VARIANCE * local_var
     return EdgeFit(
         amplitude=amplitude,
-        covariance=np.asarray(local_var * inverse, dtype=complex),
+        covariance=np.asarray(error_var * inverse, dtype=complex),
         tide_sd_m=float(np.sqrt(tide_var)),
-        local_sd_m=float(np.sqrt(local_var)),
+        local_sd_m=float(np.sqrt(error_var)),
         weight=all_weights,
         fitted=fitted,
         left_out=unseen,
-        left_out_sd_m=np.sqrt(local_var * (1.0 + spread / (1.0 - lever))),
+        left_out_sd_m=np.sqrt(error_var * (1.0 + spread / (1.0 - lever))),
     )
 
 
@@ -146,7 +150,7 @@ def _sizes(x: ComplexArray, y: ComplexArray, weight: FloatArray) -> tuple[float,
     scale = max(float((size**2).sum()) / len(y), 1e-300)
     ratio = np.geomspace(1e-5, 10.0, 121) * scale  # of the local error's variance to the tide's
     shared = (abs(in_shapes) ** 2 / (size**2 + ratio[:, None])).sum(axis=1) + outside / ratio
-    tide_var = shared / len(y)
+    tide_var = np.maximum(shared / len(y), 1e-300)  # no tide at all
     n_outside = len(y) - len(size)
     likely = -len(y) * np.log(tide_var) - np.log(size**2 + ratio[:, None]).sum(axis=1) - n_outside * np.log(ratio)
     best = int(np.argmax(likely))

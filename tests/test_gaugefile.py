@@ -396,4 +396,3 @@ def test_the_gauges_of_the_demo_are_read_with_default_settings(tmp_path):
         gauges = read(path, FIVE)
     assert (gauges.name[0], gauges.constituents, len(gauges)) == ("D01", ("M2", "S2"), 12)
     assert np.isfinite(gauges.constants("M2")).all()
-    between = np.angle(gauges.constants("S2") / gauges.constants("M2"), deg=True)
