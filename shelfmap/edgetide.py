@@ -17,7 +17,7 @@ from scipy.spatial.distance import cdist
 from shelfmap.geodesy import positions_m
 from shelfmap.mesh import Mesh
 
-__all__ = ["EdgeFit", "edge_shapes", "explained_share", "fit_edge", "why_off"]
+__all__ = ["MOST_SHAPES", "EdgeFit", "edge_shapes", "explained_share", "fit_edge", "why_off"]
 
 ComplexArray = NDArray[np.complex128]
 FloatArray = NDArray[np.float64]

@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy.spatial import KDTree
 
-from shelfmap.edgetide import EdgeFit, edge_shapes, fit_edge
+from shelfmap.edgetide import MOST_SHAPES, EdgeFit, edge_shapes, fit_edge
 from shelfmap.errors import FieldError
 from shelfmap.freemodes import FreeMode, free_modes
 from shelfmap.gauges import Gauges
@@ -153,9 +153,9 @@ def solve_field(
         If the solution would take more memory than `field.memory_gb`, or a matrix has no inverse.
     """
     chosen = settings.field or FieldSettings()
+    _check_size(waters, chosen)
     mesh = make_mesh(waters, rotation=settings.response.rotation, held=chosen.edge == "held")
     shapes = edge_shapes(mesh)
-    _check_size(mesh, chosen, shapes.shape[1] + 1)
     waves = waves_of(settings)
     cell, away_m, in_reach = _places(mesh, gauges, settings.gauges.reach_km * 1e3)
     jobs = _Jobs(mesh, shapes, waves, chosen, gauges, cell[in_reach], in_reach)
@@ -191,14 +191,16 @@ def _places(mesh: Mesh, gauges: Gauges | None, reach_m: float) -> tuple[IntArray
     return cell, away_m, away_m <= reach_m
 
 
-def _check_size(mesh: Mesh, chosen: FieldSettings, n_shapes: int) -> None:
-    needed_gb = memory_bytes(mesh.n_free, n_shapes) / _GB
+def _check_size(waters: Waters, chosen: FieldSettings) -> None:
+    """Refuse a region that would take too much memory, before any of it is taken: a cell has about one unknown."""
+    count = int(np.count_nonzero(~np.isnan(waters.depth_m)))
+    needed_gb = memory_bytes(count, MOST_SHAPES) / _GB
     if needed_gb <= chosen.memory_gb:
         return
-    cell_km = np.sqrt(mesh.area_m2.mean()) / 1e3
+    cell_km = np.sqrt(waters.step_x_m * waters.step_y_m) / 1e3
     fits = cell_km * np.ceil(np.sqrt(1.1 * needed_gb / chosen.memory_gb))  # cells are joined in whole numbers
     raise FieldError(
-        f"field: {mesh.n_free:,} unknowns in cells of {cell_km:.3g} km would take about {needed_gb:.1f} GB, more than "
+        f"field: {count:,} unknowns in cells of {cell_km:.3g} km would take about {needed_gb:.1f} GB, more than "
         f"field.memory_gb = {chosen.memory_gb:g}; set field.cell_km = {fits:.3g}, take a smaller field.box, "
         "or allow more"
     )

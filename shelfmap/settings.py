@@ -469,7 +469,9 @@ class FieldSettings(_Stage):
     spectrum_h: tuple[Annotated[float, Field(ge=0.02, le=1000)], Annotated[float, Field(ge=0.02, le=1000)]] | None = (
         Field(None, description="Shortest and longest period of that curve, h; without it none is made.")
     )
-    memory_gb: float = Field(4.0, gt=0, le=4096, description="Memory the solution may take, GB.")
+    memory_gb: float = Field(
+        4.0, gt=0, le=4096, description="Memory that one wave may take, GB; each worker takes as much."
+    )
     folder: FilePath | None = Field(
         None, description="Folder for the maps; default output.path with _field instead of .gpkg."
     )

@@ -29,8 +29,8 @@ Window = tuple[int, int, int, int]
 SIDES: Final = ("south", "east", "north", "west")
 #: The cell across each side: rows and columns away.
 _ACROSS: Final = ((-1, 0), (0, 1), (1, 0), (0, -1))
-#: A window of more cells than this is not even read.
-_MOST_CELLS: Final = 200_000_000
+#: What a cell of the grid takes while the region is read, bytes.
+_CELL_BYTES: Final = 30
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -80,7 +80,7 @@ def open_waters(
         If the region does not meet the grid, holds no water, or no water of it meets an open edge; or is too large.
     """
     blocks = _blocks(source, settings.cell_km)
-    lattice, depth_m = _read(source, _window_of(source, settings.box, region, blocks), blocks)
+    lattice, depth_m = _read(source, _window_of(source, settings.box, region, blocks), blocks, settings.memory_gb)
     inside = _inside(lattice, settings.box, region)
     is_wet = inside & (depth_m > 0) & (depth_m >= settings.shallowest_m)
     if not is_wet.any():
@@ -105,7 +105,7 @@ def _blocks(source: GridSource, cell_km: float | None) -> tuple[int, int]:
     return max(1, round(cell_km * 1e3 / source.step_y_m)), max(1, round(cell_km * 1e3 / source.step_x_m))
 
 
-def _read(source: GridSource, window: Window, blocks: tuple[int, int]) -> tuple[Lattice, FloatArray]:
+def _read(source: GridSource, window: Window, blocks: tuple[int, int], memory_gb: float) -> tuple[Lattice, FloatArray]:
     """Lattice and depths of a window, means over blocks; a cell is water where at least half of its block is."""
     row0, row1, col0, col1 = window
     rows, cols = blocks
@@ -115,10 +115,11 @@ def _read(source: GridSource, window: Window, blocks: tuple[int, int]) -> tuple[
             f"field.cell_km: a cell of {rows} by {cols} cells of the grid does not fit into the region of "
             f"{row1 - row0} by {col1 - col0}; give smaller cells or a larger region"
         )
-    if (row1 - row0) * (col1 - col0) > _MOST_CELLS:
+    most = int(memory_gb * 1e9 / _CELL_BYTES)
+    if (row1 - row0) * (col1 - col0) > most:
         raise FieldError(
-            f"field: the region has {row1 - row0} by {col1 - col0} cells; take a smaller field.box, at most "
-            f"{_MOST_CELLS:,} cells"
+            f"field: the region has {row1 - row0} by {col1 - col0} cells of the grid, more than the {most:,} that "
+            f"field.memory_gb = {memory_gb:g} has room for; take a smaller field.box or a coarser grid"
         )
     depth_m = source.read(row0, row0 + n_rows * rows, col0, col0 + n_cols * cols).depth_m.astype(float)
     lattice = Lattice(

@@ -276,7 +276,7 @@ def test_refusals_of_polygons(sea):
 
 
 def test_too_many_cells_are_refused_unread(sea, monkeypatch):
-    monkeypatch.setattr("shelfmap.waters._MOST_CELLS", 40)
-    with pytest.raises(FieldError, match=r"the region has 6 by 8 cells; take a smaller field.box, at most 40"):
+    monkeypatch.setattr("shelfmap.waters._CELL_BYTES", 1e8)
+    with pytest.raises(FieldError, match=r"the region has 6 by 8 cells of the grid, more than the 40 that"):
         waters(sea(bay()))
     assert waters(sea(bay()), box=(3.0, 1.0, 7.0, 4.0)).depth_m.shape == (4, 5)
