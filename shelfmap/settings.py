@@ -5,27 +5,32 @@ of settings is made from it. Lengths that end in ``_km`` and periods that end in
 stages, through the ``_m`` properties here.
 """
 
-import difflib
-import json
-import re
 import tomllib
 from pathlib import Path
-from typing import Annotated, Any, Final, Literal, Self, TypeVar, get_args
+from typing import Annotated, Any, Final, Literal, Self, TypeVar
 
 from pydantic import (
-    AfterValidator,
     BaseModel,
-    BeforeValidator,
     ConfigDict,
     Field,
     ValidationError,
     field_validator,
     model_validator,
 )
-from pydantic.fields import FieldInfo
 
-from shelfmap.constants import CONSTITUENTS
 from shelfmap.errors import SettingsError
+from shelfmap.settingvalues import (
+    ColumnName,
+    ConstituentName,
+    DeepSea,
+    FilePath,
+    FilePaths,
+    WaveColumns,
+    check_box,
+    fault_text,
+    setting_rows,
+    shown,
+)
 
 __all__ = [
     "VOID_LAND_M",
@@ -45,111 +50,7 @@ __all__ = [
 #: Missing cells taken as land (`GridSettings.void_is_land`) stand this high above the water, metres: the shoreline of a
 #: grid that holds depths only falls between its last wet cell and the next.
 VOID_LAND_M: Final = 10.0
-#: Longest name of a file, and longest path, that systems take, less room for the folder of the settings.
-_NAME_BYTES: Final = 255
-_PATH_BYTES: Final = 3000
-#: Depths a deep sea may have, metres.
-DEEP_M: Final = (500.0, 11_000.0)
-
-
-#: Text of a fault shows no more of a value than this many characters.
-_SHOWN: Final = 60
-
-
-def _shown(value: object) -> str:
-    """Value as TOML writes it, on one line, cut where it is long."""
-    if value is None or isinstance(value, int | float | list | tuple | str | dict):
-        try:
-            text = json.dumps(value, ensure_ascii=False, default=str)
-        except ValueError:  # whole numbers too long to be written out
-            text = "a number of thousands of digits"
-    else:
-        text = str(value)
-    text = "".join(c if c.isprintable() else f"\\u{ord(c):04x}" for c in text)
-    return text if len(text) <= _SHOWN else f"{text[:_SHOWN]}..."
-
-
-def _key(part: object) -> str:
-    """Name of a setting, or the place in a list, quoted where it is no bare key of TOML."""
-    return str(part) if re.fullmatch(r"[\w-]{1,60}", str(part)) else _shown(str(part))
-
-
-def _constituent_name(value: object) -> object:
-    """Give the usual spelling of a constituent, or the nearest name there is."""
-    if not isinstance(value, str):
-        return value
-    usual = {name.lower(): name for name in CONSTITUENTS}
-    if value.lower() not in usual:
-        near = difflib.get_close_matches(value.lower(), usual, n=1, cutoff=0.0)
-        raise ValueError(
-            f"constituent {_shown(value)} is unknown; did you mean {usual[near[0]]!r}? Known: {', '.join(CONSTITUENTS)}"
-        )
-    return usual[value.lower()]
-
-
-def _deep(value: object) -> object:
-    """Refuse what is no depth in one sentence, not one for each kind of value allowed."""
-    if value != "deepest" and not (isinstance(value, int | float) and DEEP_M[0] <= value <= DEEP_M[1]):
-        raise ValueError(
-            f'{_shown(value)} is no depth of a deep sea: give {DEEP_M[0]:g} to {DEEP_M[1]:g} m, or "deepest"'
-        )
-    return value
-
-
-def _as_path(value: object) -> object:
-    if value == "":
-        raise ValueError("path is empty")
-    if isinstance(value, str) and "\0" in value:
-        raise ValueError("path holds a null character; leave it out")
-    if isinstance(value, str) and any(c in value for c in "\n\r\t"):
-        raise ValueError(f"path {_shown(value)} holds a line break or a tab, which GDAL takes away; rename the file")
-    if isinstance(value, str) and (
-        len(value.encode("utf-8", "surrogatepass")) > _PATH_BYTES
-        or any(len(part.encode("utf-8", "surrogatepass")) > _NAME_BYTES for part in Path(value).parts)
-    ):
-        raise ValueError(
-            f"path {_shown(value)} has a name of more than {_NAME_BYTES} bytes, or more than {_PATH_BYTES} "
-            "in all, which no disk takes; shorten it"
-        )
-    return value
-
-
-def _as_paths(value: object) -> object:
-    """Refuse what is no name of a file and no list of such names in one sentence."""
-    if isinstance(value, str | Path):
-        return _as_path(value)
-    if not isinstance(value, list | tuple) or not all(isinstance(name, str | Path) for name in value):
-        raise ValueError(f"path = {value!r}: must be the name of a file, in quotes, or a list of such names")
-    if not value:
-        raise ValueError("path = []: the list is empty; name at least one file")
-    names = [str(Path(name)) for name in value if _as_path(name)]
-    twice = next((name for name in names if names.count(name) > 1), None)
-    if twice is not None:
-        raise ValueError(f"path names {twice!r} twice; name each file once, the one to be used first in front")
-    return tuple(value)
-
-
-def _check_box(box: tuple[float, float, float, float]) -> None:
-    west, south, east, north = box
-    if not -90 <= south < north <= 90:
-        raise ValueError(f"box = {list(box)}: south must be below north, both within -90 and 90")
-    if not (-360 <= west <= 360 and -360 <= east <= 360) or west == east:
-        raise ValueError(f"box = {list(box)}: west and east must differ and lie within -360 and 360")
-
-
-def _with_name(value: str) -> str:
-    """Refuse names of columns that do not hold the place of the constituent once."""
-    if value.count("{name}") != 1:
-        raise ValueError(f'{_shown(value)}: must hold {{name}} once, which stands for the constituent: "{{name}}_amp"')
-    return value
-
-
 _S = TypeVar("_S", bound=BaseModel)
-ConstituentName = Annotated[str, BeforeValidator(_constituent_name)]
-FilePath = Annotated[Path, BeforeValidator(_as_path)]
-ColumnName = Annotated[str, Field(min_length=1)]
-WaveColumns = Annotated[str, AfterValidator(_with_name)]
-FilePaths = Annotated[Path | tuple[Path, ...], BeforeValidator(_as_paths)]
 
 
 class _Stage(BaseModel):
@@ -226,7 +127,7 @@ class CoastSettings(_Stage):
     @model_validator(mode="after")
     def _box_in_order(self) -> Self:
         if self.box is not None:
-            _check_box(self.box)
+            check_box(self.box)
         return self
 
 
@@ -324,9 +225,7 @@ class ResponseSettings(_Stage):
     offshore_amplitude_m: dict[ConstituentName, Annotated[float, Field(gt=0, le=20)]] = Field(
         default_factory=dict, description="Amplitude at the deep sea by constituent, m, for the drag."
     )
-    deep_m: Annotated[
-        Annotated[float, Field(ge=DEEP_M[0], le=DEEP_M[1])] | Literal["deepest"], BeforeValidator(_deep)
-    ] = Field(
+    deep_m: DeepSea = Field(
         4000.0,
         description="Depth of the deep sea beyond the transect, m; or deepest: the greatest depth on it.",
     )
@@ -399,9 +298,7 @@ class GaugeSettings(_Stage):
     @model_validator(mode="after")
     def _columns_differ(self) -> Self:
         if self.amplitude_column == self.phase_column:
-            raise ValueError(
-                f"amplitude_column and phase_column are both {_shown(self.phase_column)}: name two columns"
-            )
+            raise ValueError(f"amplitude_column and phase_column are both {shown(self.phase_column)}: name two columns")
         return self
 
 
@@ -484,7 +381,7 @@ class FieldSettings(_Stage):
     @model_validator(mode="after")
     def _consistent(self) -> Self:
         if self.box is not None:
-            _check_box(self.box)
+            check_box(self.box)
         if self.open_sides is not None and self.open_file is not None:
             raise ValueError("open_sides and open_file are both given: leave one")
         if self.open_sides is not None and len(set(self.open_sides)) != len(self.open_sides):
@@ -575,7 +472,7 @@ class Settings(_Stage):
         try:
             return _rooted(cls.model_validate(content), Path(folder))
         except ValidationError as error:
-            faults = "\n".join(f"  {_fault(cls, dict(fault))}" for fault in error.errors())
+            faults = "\n".join(f"  {fault_text(cls, dict(fault))}" for fault in error.errors())
             raise SettingsError(f"{where}: {error.error_count()} setting(s) to mend\n{faults}") from error
 
 
@@ -589,26 +486,7 @@ def markdown_settings() -> str:
     |---|---|---|
     | `title` | `""` | A name for the run. |
     """
-    return "\n".join(["| setting | default | meaning |", "|---|---|---|", *_setting_rows(Settings, "")])
-
-
-def _setting_rows(model: type[BaseModel], stem: str) -> list[str]:
-    rows = []
-    for name, field in model.model_fields.items():
-        inner = _section(field)
-        if inner is not None:
-            rows += _setting_rows(inner, f"{stem}{name}.")
-            continue
-        default = field.get_default(call_default_factory=True)
-        shown = "none" if default is None else f"`{json.dumps(default, default=str)}`"
-        rows.append(f"| `{stem}{name}` | {'must be given' if field.is_required() else shown} | {field.description} |")
-    return rows
-
-
-def _section(field: FieldInfo) -> type[BaseModel] | None:
-    """Class of a setting that is a section, one that may be left out too; None for a value."""
-    kinds = [kind for kind in (field.annotation, *get_args(field.annotation)) if isinstance(kind, type)]
-    return next((kind for kind in kinds if issubclass(kind, BaseModel)), None)
+    return "\n".join(["| setting | default | meaning |", "|---|---|---|", *setting_rows(Settings, "")])
 
 
 def _rooted(settings: _S, folder: Path) -> _S:
@@ -623,31 +501,3 @@ def _rooted(settings: _S, folder: Path) -> _S:
         elif name == "path" and isinstance(value, tuple):
             update[name] = tuple(folder / path for path in value)
     return settings.model_copy(update=update)
-
-
-def _fault(model: type[BaseModel], fault: dict[str, Any]) -> str:
-    """Say one fault as a person would: where, what is wrong with its value, what is allowed."""
-    where = ".".join(_key(part) for part in fault["loc"] if part != "[key]")
-    if fault["type"] == "extra_forbidden":
-        known = sorted(_known_names(model, fault["loc"][:-1]))
-        near = difflib.get_close_matches(str(fault["loc"][-1]), known, n=1, cutoff=0.5)
-        hint = f"did you mean {near[0]!r}?" if near else f"known here: {', '.join(known)}"
-        return f"{where}: no such setting; {hint}"
-    if fault["type"] == "missing":
-        return f"{where}: must be given"
-    if fault["type"] == "path_type":
-        return f"{where} = {_shown(fault['input'])}: must be the name of a file, in quotes"
-    message = str(fault["msg"]).removeprefix("Value error, ")
-    value = "" if fault["type"] == "value_error" else f" = {_shown(fault['input'])}"
-    return f"{where}{value}: ".removeprefix(": ") + message[:1].lower() + message[1:]
-
-
-def _known_names(model: type[BaseModel], loc: tuple[int | str, ...]) -> set[str]:
-    """Names of the settings at one place of the tree."""
-    for part in loc:
-        field = model.model_fields.get(str(part))
-        inner = None if field is None else _section(field)
-        if inner is None:
-            return set()
-        model = inner
-    return set(model.model_fields)

@@ -16,13 +16,13 @@ PACKAGE = Path(shelfmap.__file__).parent
 
 #: Modules from the ground up; a module may import those before it. `_kernels` stands for all compiled loops.
 ORDER = [
-    "errors", "workers", "constants", "words", "settings", "waves", "geodesy", "_kernels", "vertical", "localfiles",
-    "rasterfile", "lattice", "sheets", "grid", "inspection", "rasters", "synthetic", "demo", "basins",
-    "chains", "closing", "coast", "transects", "profiles", "shelfbreak", "deepsea", "modes", "response", "index",
-    "gauges", "dissection", "waters", "mesh", "longwave", "freemodes", "edgetide", "field", "assess", "columns",
-    "antimeridian", "replacement", "checkpoint", "vectors", "layers", "geopackage", "tables", "joining", "stations",
-    "inputs", "gaugefile", "region", "fieldlayers", "fieldmaps", "comparison", "figures", "comparing", "provenance",
-    "sections", "laying", "pipeline", "fieldrun", "cli", "__main__",
+    "errors", "workers", "constants", "words", "settingvalues", "settings", "waves", "geodesy", "_kernels",
+    "vertical", "localfiles", "rasterfile", "lattice", "sheets", "grid", "inspection", "rasters", "synthetic", "demo",
+    "basins", "chains", "closing", "coast", "transects", "profiles", "shelfbreak", "deepsea", "modes", "response",
+    "index", "gauges", "dissection", "waters", "mesh", "longwave", "freemodes", "edgetide", "field", "assess",
+    "columns", "antimeridian", "replacement", "checkpoint", "vectors", "layers", "geopackage", "tables", "joining",
+    "stations", "inputs", "gaugefile", "region", "fieldlayers", "fieldmaps", "comparison", "figures", "comparing",
+    "provenance", "sections", "laying", "pipeline", "fieldrun", "cli", "__main__",
 ]  # fmt: skip
 
 #: Libraries that only these modules import.
@@ -35,7 +35,7 @@ ONLY_HERE = {
     "pyogrio": {"geopackage", "vectors"},
     "pyarrow": {"layers", "geopackage"},
     "sqlite3": {"geopackage", "replacement", "vectors"},
-    "pydantic": {"settings"},
+    "pydantic": {"settings", "settingvalues"},
     "tomllib": {"settings"},
     "click": {"cli"},
     "matplotlib": {"figures"},
