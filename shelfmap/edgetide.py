@@ -181,13 +181,14 @@ def why_off(observed: complex, predicted: complex, period_h: float) -> str:
     >>> why_off(0.2j, 1.0 + 0j, 12.42)
     '0.20 of the height predicted, 186 min later: behind a barrier or up a river that the cells do not show'
     >>> why_off(1j, 1.0 + 0j, 12.42)
-    'the height predicted, but 186 min later: clock, time zone or kind of phase'
+    'the height predicted, but 186 min later: an estuary, or clock, time zone or kind of phase'
     """
     ratio = abs(observed) / max(abs(predicted), 1e-12)
     minutes = float(np.angle(observed / predicted)) / (2 * np.pi) * period_h * 60 if predicted else 0.0
     when = f"{abs(minutes):.0f} min {'later' if minutes > 0 else 'earlier'}"
     if 0.8 < ratio < 1.25:
-        return f"the height predicted, but {when}: clock, time zone or kind of phase"
+        what = "an estuary, or clock" if minutes > 0 else "clock"
+        return f"the height predicted, but {when}: {what}, time zone or kind of phase"
     if ratio <= 0.8 and minutes > 0:
         return f"{ratio:.2f} of the height predicted, {when}: behind a barrier or up a river that the cells do not show"
     return f"{ratio:.2f} of the height predicted, {when}: a strait, bay or unit that is not as the cells show it"

@@ -40,6 +40,8 @@ MOST_TURNS: Final = 25
 #: Where the wave is as slow as the Earth turns, and friction weak, the current is a small difference of large numbers:
 #: it is left empty where |s^2 + f^2| is below this share of the square of the wave's frequency.
 NEAR_INERTIAL: Final = 0.03
+#: Gauges that all have less than this, metres, say nothing of the edge tide.
+LEAST_TIDE_M: Final = 1e-6
 #: Points of a curve of gain against period.
 CURVE_POINTS: Final = 60
 #: Unit of `memory_gb`.
@@ -234,11 +236,11 @@ class _Jobs:
     in_reach: NDArray[np.bool_]
 
     def observed(self, wave: Wave) -> ComplexArray | None:
-        """Tide at the gauges in reach; None where none of them has it."""
+        """Tide at the gauges in reach; None where none of them has it, or all say that there is none."""
         if self.gauges is None or wave.name not in self.gauges.constituents:
             return None
         seen = self.gauges.constants(wave.name)[self.in_reach]
-        return seen if np.isfinite(seen).any() else None
+        return seen if (abs(seen) > LEAST_TIDE_M).any() else None  # False for NaN
 
     def known(self) -> list[Wave]:
         """Waves whose tide at the edge is known."""

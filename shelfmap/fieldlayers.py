@@ -9,6 +9,7 @@ from numpy.typing import NDArray
 from shelfmap.edgetide import explained_share, why_off
 from shelfmap.field import CellWave, Field, Spectrum
 from shelfmap.gauges import Gauges
+from shelfmap.geodesy import unwrap_lon_deg
 from shelfmap.layers import Layer
 from shelfmap.waves import Wave
 
@@ -173,7 +174,7 @@ def _wave_row(field: Field, done: CellWave) -> dict[str, Any]:
         "wave": done.wave.name,
         "period_h": done.wave.period_h,
         "largest_gain": float(abs(done.unit[cell])),
-        "largest_lon_deg": float(lon.flat[field.mesh.cell[cell]]),
+        "largest_lon_deg": float(unwrap_lon_deg(lon.flat[field.mesh.cell[cell]], 0.0)),
         "largest_lat_deg": float(lat.flat[field.mesh.cell[cell]]),
         "edge_tide_m": np.nan,
         "local_error_m": np.nan,

@@ -11,7 +11,7 @@ from shelfmap import __version__
 from shelfmap.field import CellWave, Field
 from shelfmap.fieldlayers import map_name, mode_map_name
 from shelfmap.freemodes import FreeMode
-from shelfmap.longwave import currents, ellipse
+from shelfmap.longwave import Ellipse, currents, ellipse
 from shelfmap.rasters import Band, write_cog
 from shelfmap.settings import FieldSettings, Settings
 from shelfmap.waves import waves_of
@@ -23,7 +23,7 @@ ComplexArray = NDArray[np.complex128]
 FloatArray = NDArray[np.float64]
 
 #: Said of currents.
-_INERTIAL: Final = "; empty where the wave is as slow as the Earth turns there."
+_INERTIAL: Final = "; empty where the wave is about as slow as the Earth turns there, or slower."
 #: Map of the depths and the friction that were used.
 DEPTH_MAP: Final = "field_depth.tif"
 
@@ -86,7 +86,7 @@ def _wave_bands(field: Field, done: CellWave) -> Iterator[Band]:
         if field.mesh.is_held
         else "twice the wave that comes in through the open edge, the same all along it"
     )
-    flow = ellipse(done.unit_east, done.unit_north)
+    flow = _shown_flow(field, done, done.unit_east, done.unit_north)
     yield _band(field, "gain", "", f"Amplitude over {over}.", abs(done.unit))
     yield _band(field, "lag_deg", "deg", "How much later it peaks than the edge tide.", _lag_deg(done.unit))
     yield _band(
@@ -95,7 +95,7 @@ def _wave_bands(field: Field, done: CellWave) -> Iterator[Band]:
     if done.tide is None or done.tide_east is None or done.tide_north is None:
         return
     source = "fitted to gauges" if done.fit is not None else "as given"
-    flow = ellipse(done.tide_east, done.tide_north)
+    flow = _shown_flow(field, done, done.tide_east, done.tide_north)
     yield _band(field, "amplitude_m", "m", f"Amplitude, the edge tide {source}.", abs(done.tide))
     if done.fit is not None:
         phase_deg = np.mod(np.degrees(np.angle(done.tide)), 360.0)
@@ -105,6 +105,16 @@ def _wave_bands(field: Field, done: CellWave) -> Iterator[Band]:
         field, "minor_m_s", "m s-1", "Smallest speed; negative where the current turns clockwise.", flow.minor_m_s
     )
     yield _band(field, "bearing_deg", "deg", "Compass bearing of the largest speed, 0 to 180.", flow.bearing_deg)
+
+
+def _shown_flow(field: Field, done: CellWave, east: ComplexArray, north: ComplexArray) -> Ellipse:
+    """Ellipse of a current, empty where the wave is slower than the Earth turns.
+
+    Beyond that latitude waves that the cells do not resolve, bound to the slopes of the bed, are as strong in the current
+    as what is resolved, though not in the elevation.
+    """
+    is_slow = done.wave.omega_rad_s <= abs(field.mesh.coriolis_rad_s)
+    return ellipse(*(np.where(is_slow, np.nan, part) for part in (east, north)))
 
 
 def _mode_bands(field: Field, mode: FreeMode) -> Iterator[Band]:

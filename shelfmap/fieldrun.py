@@ -16,11 +16,13 @@ from shelfmap.errors import FieldError, OutputExistsError
 from shelfmap.field import Field
 from shelfmap.fieldlayers import field_layers
 from shelfmap.fieldmaps import map_names, write_maps
-from shelfmap.geopackage import write_layers
+from shelfmap.geopackage import GeoPackage, output_projection
 from shelfmap.grid import GridSource, open_grid
+from shelfmap.laying import check_unchanged, stamps_of
 from shelfmap.provenance import field_run_layer
+from shelfmap.rasters import companions, place_raster
 from shelfmap.region import solve_region
-from shelfmap.replacement import check_target
+from shelfmap.replacement import check_target, placing, unfinished
 from shelfmap.settings import FieldSettings, Settings
 from shelfmap.workers import mapping
 
@@ -87,26 +89,28 @@ def run_field(
     folder = field_folder(settings)
     _check(folder, settings, overwrite=overwrite)
     source = open_grid(settings.grid)
+    stamps = stamps_of(source)
     with mapping(workers, executor, scheduler, together=1) as mapped:
         field = solve_region(source, settings, mapped=mapped)
-    with _made(folder), tempfile.TemporaryDirectory(prefix=".field.", suffix=".part", dir=folder) as part:
+    with _made(folder), unfinished(folder / LAYER_FILE) as held, tempfile.TemporaryDirectory(dir=held) as part:
         maps = write_maps(field, Path(part), settings.title)
+        with placing(Path(part), folder / LAYER_FILE) as whole:  # first: another program may hold the old one
+            _write_layers(whole, folder / LAYER_FILE, settings, source, field)
+            check_unchanged(source, stamps)
         for path in folder.glob("mode_*.tif"):  # of an earlier run that found more of them
             if path.name in map_names(settings):
-                path.unlink()
-        written = [path.replace(folder / path.name) for path in maps]
-        layers = [*field_layers(field, with_maps=True), field_run_layer(settings, source, field)]
-        written.append(
-            write_layers(
-                folder / LAYER_FILE,
-                layers,
-                crs=settings.output.crs,
-                title=settings.title,
-                description=f"2-D response of {source.path}; {'; '.join(field.remarks)}.",
-                overwrite=overwrite,
-            )
-        )
+                for old in (path, *companions(path)):
+                    old.unlink(missing_ok=True)
+        written = [*(place_raster(path, folder / path.name) for path in maps), folder / LAYER_FILE]
     return FieldRun(folder=folder, paths=tuple(written), source=source, field=field)
+
+
+def _write_layers(part: Path, target: Path, settings: Settings, source: GridSource, field: Field) -> None:
+    """Write the layers to what will be `target`."""
+    file = GeoPackage(part, settings.output.crs, target)
+    for layer in (*field_layers(field, with_maps=True), field_run_layer(settings, source, field)):
+        file.add_layer(layer)
+    file.finish(title=settings.title, description=f"2-D response of {source.path}; {'; '.join(field.remarks)}.")
 
 
 def field_folder(settings: Settings) -> Path:
@@ -118,6 +122,7 @@ def field_folder(settings: Settings) -> Path:
 
 def _check(folder: Path, settings: Settings, *, overwrite: bool) -> None:
     """Refuse a folder that could not be written to, and files that are there; before anything is solved."""
+    output_projection(settings.output.crs)
     if folder.exists() and not folder.is_dir():
         raise FieldError(f"output folder {folder} is a file; give another field.folder")
     if not folder.parent.is_dir():
@@ -129,8 +134,11 @@ def _check(folder: Path, settings: Settings, *, overwrite: bool) -> None:
         path = folder / name
         if path.resolve() in inputs:
             raise FieldError(f"output {path} is an input too and would be lost; give another field.folder")
-        if path.exists() and not overwrite:
-            raise OutputExistsError(f"output {path} exists already; allow it to be overwritten or give another folder")
+        there = [file for file in (path, *companions(path)) if file.exists()]
+        if there and not overwrite:
+            raise OutputExistsError(
+                f"output {there[0]} exists already; allow it to be overwritten or give another folder"
+            )
     if folder.exists():
         check_target(folder / LAYER_FILE, overwrite=overwrite)
 

@@ -20,7 +20,7 @@ from shelfmap.layers import GEOMETRY_COLUMN, Layer, encode, geometry_type
 from shelfmap.replacement import check_target, replacing
 from shelfmap.words import CAUTIONS, ENUMERATIONS
 
-__all__ = ["GeoPackage", "write_layers"]
+__all__ = ["GeoPackage", "output_projection", "write_layers"]
 
 #: Rows gathered before they are written: each call opens the file anew.
 _ROWS_AT_ONCE: Final = 100_000
@@ -49,7 +49,7 @@ class GeoPackage:
         self.path = path
         self.target = target
         self.crs = crs
-        self.projection = _output_projection(crs)
+        self.projection = output_projection(crs)
         self._waiting: dict[str, list[pa.Table]] = {}
         self._rows: dict[str, int] = {}
         self._words: dict[str, list[str]] = {}
@@ -197,7 +197,14 @@ def write_layers(
     return path
 
 
-def _output_projection(crs: str) -> Projection:
+def output_projection(crs: str) -> Projection:
+    """Coordinate system of an output.
+
+    Raises
+    ------
+    LayerError
+        If it is not one that maps are drawn in.
+    """
     authority, _, code = crs.partition(":")
     if authority.upper() != "EPSG" or not code.isdecimal():
         raise LayerError(f"output crs {crs!r} is not of the form EPSG:n; GIS programs need a code, such as EPSG:4326")

@@ -21,7 +21,7 @@ from shelfmap.settings import Settings
 from shelfmap.transects import Transects
 from shelfmap.workers import Mapped
 
-__all__ = ["Laid", "lay", "timed"]
+__all__ = ["Laid", "check_unchanged", "lay", "stamps_of", "timed"]
 
 #: A grid with fewer cells than this in `generalise_km` gives bearings that follow the steps of its shoreline.
 FEWEST_COAST_CELLS: Final = 4.0
@@ -54,8 +54,7 @@ class Laid:
         GridError
             If a file of the grid has changed or vanished.
         """
-        if _stamps(self.source) != self.stamps:
-            raise GridError(f"{self.source.path}: has changed while it was read; run again once nothing writes to it")
+        check_unchanged(self.source, self.stamps)
 
 
 def lay(settings: Settings, mapped: Mapped, kept: Checkpoint | None = None) -> Laid:
@@ -76,7 +75,7 @@ def lay(settings: Settings, mapped: Mapped, kept: Checkpoint | None = None) -> L
         If the grid, the coast or the transects are not as they must be.
     """
     source = open_grid(settings.grid)
-    stamps = _stamps(source)
+    stamps = stamps_of(source)
     _LOG.info("values of %s taken as %s: %s", source.path, source.positive, source.positive_why)
     content = "" if kept is None else digest(files_digest(source.disk_files()), source)
     with timed("coast"):
@@ -104,11 +103,30 @@ def timed(stage: str) -> Iterator[None]:
     _LOG.info("%s: %.1f s", stage, time.perf_counter() - start)
 
 
-def _stamps(source: GridSource) -> tuple[tuple[int, int], ...]:
+def stamps_of(source: GridSource) -> tuple[tuple[int, int], ...]:
+    """Size and time of change of each of the grid's files.
+
+    Raises
+    ------
+    GridError
+        If one has vanished.
+    """
     try:
         return tuple((stat.st_size, stat.st_mtime_ns) for stat in (file.stat() for file in source.disk_files()))
     except OSError as error:
         raise GridError(f"{source.path}: has vanished ({error.strerror}); put it back and run again") from error
+
+
+def check_unchanged(source: GridSource, stamps: tuple[tuple[int, int], ...]) -> None:
+    """Refuse results of a grid that was written to while it was read.
+
+    Raises
+    ------
+    GridError
+        If a file of the grid has changed since it had these stamps, or vanished.
+    """
+    if stamps_of(source) != stamps:
+        raise GridError(f"{source.path}: has changed while it was read; run again once nothing writes to it")
 
 
 def _warn_of_coarse_cells(source: GridSource, settings: Settings) -> None:

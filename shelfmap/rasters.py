@@ -19,7 +19,7 @@ from rasterio.io import MemoryFile
 
 from shelfmap.errors import GridError, OutputExistsError
 
-__all__ = ["Band", "replace_file", "write_cog", "write_geotiff"]
+__all__ = ["Band", "companions", "place_raster", "replace_file", "write_cog", "write_geotiff"]
 
 #: Predictor of the deflate compression by kind of number: differences for whole numbers, byte planes for reals.
 _PREDICTOR: Final = {"int16": 2, "float32": 3}
@@ -287,20 +287,43 @@ def _check_target(path: Path, *, overwrite: bool) -> None:
         raise GridError(f"{path} is a folder; give the name of a file in it")
     if not path.parent.is_dir():
         raise GridError(f"folder {path.parent} does not exist; make it first or write elsewhere")
-    there = [file for file in (path, *_companions(path)) if file.exists()]
+    there = [file for file in (path, *companions(path)) if file.exists()]
     if there and not overwrite:
         raise OutputExistsError(f"{there[0]} exists already; allow it to be overwritten or choose another name")
 
 
-def _companions(path: Path) -> list[Path]:
+def companions(path: Path) -> list[Path]:
+    """Files that GDAL keeps beside a raster, there or not."""
     return [path.with_name(path.name + suffix) for suffix in _COMPANIONS]
 
 
 def _put(path: Path, content: memoryview) -> None:
     """Replace a raster, and remove what was known of the earlier one: GDAL would take it for the new one's."""
     replace_file(path, content)
-    for companion in _companions(path):
+    _forget(path)
+
+
+def _forget(path: Path) -> None:
+    for companion in companions(path):
         companion.unlink(missing_ok=True)
+
+
+def place_raster(part: Path, path: Path) -> Path:
+    """Path of a whole raster, moved there from `part` on the same disk; what was known of an earlier one goes.
+
+    Raises
+    ------
+    GridError
+        If it cannot be moved.
+    """
+    try:
+        part.replace(path)
+    except OSError as error:
+        raise GridError(
+            f"{path} cannot be put in place ({error.strerror}); close it in other programs and run again"
+        ) from error
+    _forget(path)
+    return path
 
 
 def replace_file(path: Path, content: bytes | memoryview) -> None:

@@ -72,7 +72,7 @@ RESPONSE_KINDS: Final[Mapping[str, str]] = MappingProxyType({
 GAUGE_USES: Final[Mapping[str, str]] = MappingProxyType({
     "fitted": "The edge tide is fitted to it, and the other gauges bear it out.",
     "off": "The edge tide is fitted to it, but the other gauges say otherwise: see note.",
-    "no_value": "It has no amplitude and phase of a wave asked for.",
+    "no_value": "It has no amplitude and phase of a wave asked for, or every gauge in reach has zero.",
     "out_of_reach": "No cell of water of the region is near enough.",
 })  # fmt: skip
 

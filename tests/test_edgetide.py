@@ -159,7 +159,7 @@ def test_explained_share_counts_phases_and_leaves_gaps_out():
 @pytest.mark.parametrize(
     ("observed", "said"),
     [
-        (np.exp(1j), "the height predicted, but 119 min later: clock"),
+        (np.exp(1j), "the height predicted, but 119 min later: an estuary, or clock"),
         (np.exp(-1j), "the height predicted, but 119 min earlier: clock"),
         (0.3 * np.exp(0.5j), "0.30 of the height predicted, 59 min later: behind a barrier"),
         (2.0, "2.00 of the height predicted, 0 min earlier: a strait, bay or unit"),

@@ -339,3 +339,14 @@ def test_gauges_are_no_output(grid, gauges_csv, tmp_path):
     copy.write_bytes(gauges_csv.read_bytes())
     with pytest.raises((LayerError, SettingsError), match=r"is gauges\.file too and would be lost"):
         screen(settings_for(grid, tmp_path, gauges={"file": str(copy)}), overwrite=True)
+
+
+def test_currents_of_waves_slower_than_the_earth_turns_are_left_empty(grid, tmp_path):
+    """K1 at 40 N: cells do not resolve them. Its gain is there; M2's currents are too."""
+    done = run_field(settings_for(grid, tmp_path, response={"constituents": ["M2", "K1"]}, field={"modes": 0}))
+    for label, is_there in (("m2", True), ("k1", False)):
+        with rasterio.open(done.folder / f"field_{label}.tif") as file:
+            gain, current = file.read(1), file.read(3)
+        assert np.isfinite(gain).any()
+        assert np.isfinite(current[np.isfinite(gain)]).all() == is_there
+        assert np.isfinite(current).any() == is_there
