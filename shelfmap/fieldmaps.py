@@ -110,8 +110,8 @@ def _wave_bands(field: Field, done: CellWave) -> Iterator[Band]:
 def _shown_flow(field: Field, done: CellWave, east: ComplexArray, north: ComplexArray) -> Ellipse:
     """Ellipse of a current, empty where the wave is slower than the Earth turns.
 
-    Beyond that latitude waves that the cells do not resolve, bound to the slopes of the bed, are as strong in the current
-    as what is resolved, though not in the elevation.
+    Beyond that latitude waves bound to the slopes of the bed, which the cells do not resolve, are as strong in the
+    current as what is resolved, though not in the elevation.
     """
     is_slow = done.wave.omega_rad_s <= abs(field.mesh.coriolis_rad_s)
     return ellipse(*(np.where(is_slow, np.nan, part) for part in (east, north)))
