@@ -155,6 +155,8 @@ def test_every_config_in_the_repository_runs(config, tmp_path):
     settings = settings.model_copy(
         update={"output": settings.output.model_copy(update={"path": tmp_path / settings.output.path.name})}
     )
+    if settings.field is not None:  # larger cells, to be quick
+        settings = settings.model_copy(update={"field": settings.field.model_copy(update={"cell_km": 30.0})})
     with warnings.catch_warnings():
         warnings.simplefilter("error")
         counts = screen(settings).summary()["status"]
