@@ -5,7 +5,7 @@ from pathlib import Path
 import pandas as pd
 
 from shelfmap.comparison import Comparison, compare
-from shelfmap.errors import OutputExistsError
+from shelfmap.errors import LayerError, OutputExistsError
 from shelfmap.figures import comparison_figure
 from shelfmap.rasters import replace_file
 from shelfmap.settings import Settings
@@ -30,11 +30,14 @@ def write_comparison(
     OutputExistsError
         If one of the files is there and may not be replaced.
     ShelfmapError
-        As `compare`, or if a file cannot be written.
+        As `compare`, or if a file cannot be written or is one that is read.
     """
     stem = settings.output.path.stem
-    table, figure = (settings.output.path.with_name(f"{stem}_gauges.{kind}") for kind in ("csv", "png"))
+    table, figure = (settings.output.path.with_name(f"{stem}_compared.{kind}") for kind in ("csv", "png"))
+    inputs = {path.resolve() for path in (*settings.grid.paths, settings.gauges.file) if path is not None}
     for path in (table, figure):
+        if path.resolve() in inputs:
+            raise LayerError(f"output {path} is an input too and would be lost; give another output.path or rename it")
         if path.exists() and not overwrite:
             raise OutputExistsError(f"output {path} exists already; allow it to be overwritten or move it")
     comparison = compare(settings, within_km=within_km)

@@ -170,7 +170,9 @@ def _score(wave: Wave, columns: Table) -> WaveScore:
     )
     n_transect, rho_transect = _rank(observed_m, columns[f"transect_gain_{label}"])
     n_field, rho_field = _rank(observed_m, columns[f"field_gain_{label}"])
-    n_left_out, rho_left_out = _rank(observed_m, left_out_m)
+    _, rho_left_out = _rank(observed_m, left_out_m)
+    n_constants = int((np.isfinite(observed) & np.isfinite(left_out)).sum())  # fewer where only amplitudes are known
+    explained = explained_share(observed, left_out) if n_constants >= FEWEST else np.nan
     return WaveScore(
         wave=wave,
         n_transect=n_transect,
@@ -178,7 +180,7 @@ def _score(wave: Wave, columns: Table) -> WaveScore:
         n_field=n_field,
         rho_field=rho_field,
         rho_left_out=rho_left_out,
-        explained_left_out=explained_share(observed, left_out) if n_left_out >= FEWEST else None,
+        explained_left_out=None if np.isnan(explained) else explained,
     )
 
 

@@ -1,6 +1,7 @@
 """Figures, drawn by matplotlib without a screen."""
 
 import io
+import warnings
 from collections.abc import Sequence
 from typing import Any, Final
 
@@ -39,9 +40,11 @@ def comparison_figure(comparison: Comparison, title: str) -> bytes:
             panel.set(xlabel=f"{name}: {what}", ylabel=f"{name} observed [m]")
         top = np.nanmax(np.concatenate([observed, comparison.table[f"left_out_{label}_m"], [0.0]]))
         row[2].plot([0, top], [0, top], color="#888888", linewidth=0.8)
-    figure.suptitle(title)
+    figure.suptitle(title, parse_math=False, wrap=True)
     sink = io.BytesIO()
-    figure.savefig(sink, dpi=110, metadata={"Software": None})
+    with warnings.catch_warnings():
+        warnings.filterwarnings("ignore", "Glyph .* missing from", UserWarning)  # a title in letters the font lacks
+        figure.savefig(sink, dpi=110, metadata={"Software": None})
     return sink.getvalue()
 
 

@@ -90,7 +90,7 @@ def test_only_transects_near_enough_count(folder):
 def test_files_are_written_whole_and_not_over_others(folder):
     first = write_comparison(settings(folder), overwrite=True)[1]
     kept = [path.read_bytes() for path in first]
-    assert [path.name for path in first] == ["out_gauges.csv", "out_gauges.png"]
+    assert [path.name for path in first] == ["out_compared.csv", "out_compared.png"]
     assert kept[1].startswith(b"\x89PNG")
     with pytest.raises(OutputExistsError):
         write_comparison(settings(folder))
@@ -101,7 +101,7 @@ def test_files_are_written_whole_and_not_over_others(folder):
 
 
 def test_verb(folder):
-    for path in folder.glob("out_gauges.*"):
+    for path in folder.glob("out_compared.*"):
         path.unlink()
     result = CliRunner().invoke(main, ["compare", str(toml_of(folder)), "--json"])
     assert result.exit_code == 0, result.output
@@ -179,3 +179,13 @@ def test_regions_are_read_from_polygons_and_points(folder, tmp_path):
     wanted = settings(folder, field={"points_file": str(tmp_path / "points.csv"), "spectrum_h": [5.0, 20.0]})
     with pytest.raises(LayerError):  # a table without shapes
         solve_region(open_grid(wanted.grid), wanted)
+
+
+def test_gauges_are_never_written_over(folder):
+    """A table of gauges that is called as the comparison would be, even where overwriting is allowed."""
+    taken = folder / "out_compared.csv"
+    taken.write_bytes((folder / "gauges.csv").read_bytes())
+    with pytest.raises(LayerError, match="is an input too and would be lost"):
+        write_comparison(settings(folder, gauges={"file": taken.name}), overwrite=True)
+    assert taken.read_bytes() == (folder / "gauges.csv").read_bytes()
+    taken.unlink()
